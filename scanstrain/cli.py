@@ -1,0 +1,238 @@
+# SPDX-License-Identifier: MIT
+"""The commands: each loads its options, calls one function of the library, and echoes what came.
+
+Imports of the library stand inside the commands, because `--help` and completion shall answer at once.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import Any
+
+import click
+
+from scanstrain.terminal import (
+    FAILED,
+    PARTLY_FAILED,
+    Terminal,
+    guarded,
+    json_option,
+    quiet_option,
+    verbose_option,
+)
+
+# Whether a file is there and can be read, the library says, in the one form that all messages have.
+PATH = click.Path(path_type=Path, readable=False)
+
+
+class NumberOrWord(click.ParamType[float | str]):
+    """A number, or a word such as `auto`; which of them an option takes, and the limits, the option models know."""
+
+    name = "number"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float | str:  # noqa: ARG002
+        """Return a float where the text is one."""
+        try:
+            return float(value)
+        except ValueError:
+            return str(value)
+
+
+def loudness(command: Callable[..., Any]) -> Callable[..., Any]:
+    """Add the options that every command has."""
+    return verbose_option(quiet_option(command))  # type: ignore[no-any-return]
+
+
+def as_option(name: str) -> str:
+    """Spell an option as the command line does."""
+    return "--" + name.replace("_", "-")
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(package_name="scanstrain")
+@json_option
+@loudness
+def cli() -> None:
+    """Where, how much and in which direction a structure stretched, sheared, bent or turned between two laser scans.
+
+    Exit codes: 0 done; 1 the run failed; 2 the call or the configuration is wrong; 3 done, but a comparison of the
+    batch failed; 130 interrupted.
+    """
+
+
+@cli.command()
+@click.argument("config", type=PATH)
+@click.option("--workers", type=click.IntRange(min=1), default=1, show_default=True, help="Comparisons at a time.")
+@click.option("--only", multiple=True, metavar="LABEL", help="Only comparisons with this epoch; may be repeated.")
+@json_option
+@loudness
+@click.pass_obj
+def run(terminal: Terminal, config: Path, workers: int, only: tuple[str, ...]) -> int:
+    """Run every comparison of the batch file CONFIG."""
+    from scanstrain.batch import outcomes_data, run_batch
+    from scanstrain.config import load_config
+    from scanstrain.screens import batch_screen
+
+    batch = load_config(config)
+    with terminal.progress() as progress:
+        outcomes = run_batch(batch, workers=workers, only=only, progress=progress, finished=terminal.finished)
+    terminal.show(batch_screen(outcomes, batch.output.folder), outcomes_data(outcomes))
+    for outcome in outcomes:
+        if not outcome.done:
+            terminal.complain(f"{outcome.name}: {outcome.error}", outcome.details)
+    return 0 if all(outcome.done for outcome in outcomes) else PARTLY_FAILED
+
+
+@cli.command()
+@click.argument("reference", type=PATH)
+@click.argument("current", type=PATH)
+@click.option("--out", "folder", type=PATH, required=True, help="Folder for the result.")
+@click.option("--gauge-length", type=NumberOrWord(), help="Diameter of a gauge [m], or auto.")
+@click.option("--gauge-spacing", type=NumberOrWord(), help="Distance between gauges [m], or auto.")
+@click.option("--structure", metavar="tunnel|wall|free", help="Names the axes u and v.")
+@click.option("--thickness", type=NumberOrWord(), help="Of the lining or wall [m], for bending strain.")
+@click.option("--measure", metavar="NAME", help="Strain measure: auto, small, green_lagrange, almansi, hencky, biot.")
+@click.option("--colour-by", metavar="ATTRIBUTE", help="Attribute that colours the points.")
+@click.option("--no-data", type=NumberOrWord(), help="Number for missing values, in place of NaN.")
+@click.option("--assume-same-crs", is_flag=True, help="Compare scans that do not both name their coordinate system.")
+@json_option
+@loudness
+@click.pass_obj
+def compare(
+    terminal: Terminal, /, reference: Path, current: Path, folder: Path, assume_same_crs: bool, **options: Any
+) -> None:
+    """Compare the scan CURRENT with the earlier scan REFERENCE.
+
+    All other options stand in a configuration file: see `scanstrain config new`.
+    """
+    from scanstrain.batch import compare_to_folder
+    from scanstrain.config import config_from_options
+    from scanstrain.screens import comparison_screen
+
+    given = {name: value for name, value in options.items() if value is not None}
+    config = config_from_options(given, spelling=as_option)
+    with terminal.progress() as progress:
+        summary = compare_to_folder(
+            reference, current, config, folder, assume_same_crs=assume_same_crs, progress=progress
+        )
+    title = f"{reference.name} to {current.name}"
+    terminal.show(comparison_screen(title, folder, summary, verbose=terminal.verbose), summary)
+
+
+@cli.command()
+@click.argument("scans", type=PATH, nargs=-1, required=True, metavar="SCAN...")
+@json_option
+@loudness
+@click.pass_obj
+def inspect(terminal: Terminal, scans: tuple[Path, ...]) -> int:
+    """Say what is in each SCAN.
+
+    Whether it can serve and, with several, how much of it the first one shows.
+    """
+    from dataclasses import asdict
+
+    from scanstrain.inspection import inspect_files
+    from scanstrain.screens import inspection_screen
+
+    found = inspect_files(scans)
+    terminal.show("\n\n".join(map(inspection_screen, found)), [asdict(each) for each in found])
+    for each in found:
+        if each.refusal:
+            terminal.complain(each.refusal)
+    return FAILED if any(each.refusal for each in found) else 0
+
+
+@cli.command()
+@click.argument("cloud", type=PATH)
+@click.option("--by", "attribute", required=True, metavar="ATTRIBUTE", help="Attribute that gives the colour.")
+@click.option("--limits", type=float, nargs=2, metavar="LOW HIGH", help="Ends of the scale, in the unit of the file.")
+@click.option("--only-significant", is_flag=True, help="Colour only what survived false-discovery control.")
+@click.option("--out", type=PATH, help="Folder for the two files; by default the one of CLOUD.")
+@json_option
+@loudness
+@click.pass_obj
+def colour(
+    terminal: Terminal,
+    cloud: Path,
+    attribute: str,
+    limits: tuple[float, float] | None,
+    only_significant: bool,
+    out: Path | None,
+) -> None:
+    """Colour the result CLOUD by another attribute.
+
+    Writes a copy, and its colour key as a picture.
+    """
+    from scanstrain.outputs import recolour
+
+    written = recolour(cloud, attribute, limits=limits, only_significant=only_significant, out=out)
+    terminal.show_files(written)
+
+
+@cli.command()
+@click.argument("folder", type=PATH)
+@json_option
+@loudness
+@click.pass_obj
+def sample(terminal: Terminal, folder: Path) -> None:
+    """Write demonstration scans into FOLDER.
+
+    With what really happened in them, in TRUTH.md, and batch files that run on them as they are.
+    """
+    from scanstrain.config.demonstration import write_demonstration
+
+    terminal.show_files(write_demonstration(folder))
+
+
+@cli.group()
+def config() -> None:
+    """Write, check or describe batch files."""
+
+
+@config.command("new")
+@click.argument("file", type=PATH, required=False)
+@click.argument("scans", type=PATH, nargs=-1, metavar="[SCAN]...")
+@loudness
+@click.pass_obj
+def new(terminal: Terminal, file: Path | None, scans: tuple[Path, ...]) -> None:
+    """Write a commented batch file.
+
+    To FILE, or to standard output if there is none; each SCAN becomes an epoch.
+    """
+    from scanstrain.config.starter import starter_text, write_starter
+
+    if file is None:
+        click.echo(starter_text(), nl=False)
+    else:
+        terminal.show_files([write_starter(file, scans)])
+
+
+@config.command()
+@click.argument("file", type=PATH)
+@loudness
+@click.pass_obj
+def check(terminal: Terminal, file: Path) -> None:
+    """Check the batch file FILE without running it.
+
+    Every key is looked at, and whether the scans are there.
+    """
+    from scanstrain.config import check_batch
+
+    terminal.show("\n".join(check_batch(file)), None)
+
+
+@config.command()
+@loudness
+def schema() -> None:
+    """Print the JSON Schema of batch files, for editors."""
+    import json
+
+    from scanstrain.config import BatchConfig
+
+    click.echo(json.dumps(BatchConfig.model_json_schema(), indent=2, ensure_ascii=False))
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the program and return its exit code."""
+    return guarded(cli, arguments)

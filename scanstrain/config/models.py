@@ -1,0 +1,165 @@
+# SPDX-License-Identifier: MIT
+"""The options of each stage: one strict, frozen model a stage, each option with unit, limits, default and reason."""
+
+from __future__ import annotations
+
+from typing import ClassVar, Literal
+
+from pydantic import Field, ValidationInfo, field_validator
+
+from scanstrain.config.base import Auto, Options, Point, Positive
+from scanstrain.config.faults import refuse
+from scanstrain.config.output import OutputOptions
+
+
+class RegistrationOptions(Options):
+    """How the current epoch is brought into the reference frame."""
+
+    start: Literal["auto", "identity", "coarse"] = Field(
+        default="auto",
+        description="Where the alignment begins: identity takes the coordinates as they are, coarse "
+        "searches by surface features. Default auto: identity if the clouds already overlap "
+        "within the capture range, because a search can only lose what a survey frame already "
+        "gives.",
+    )
+    capture_range: Positive = Field(
+        default=0.3,
+        description="Largest misalignment [m] that the fine alignment must cope with. Default 0.3 m: "
+        "several times the error of a levelled set-up tied to site control, and well below the"
+        " size of a room.",
+    )
+    stable: Literal["auto", "all"] = Field(
+        default="auto",
+        description="Ground taken as not moved: auto finds it by leaving out patches that moved, all uses "
+        "everything. Default auto, because ground that moved and is used as stable hides "
+        "movement.",
+    )
+    seed: int = Field(
+        default=0,
+        ge=0,
+        le=2**32 - 1,
+        description="Seed of every random choice [1]. Default 0, fixed so that the same scans give the same answer.",
+    )
+    max_iterations: int = Field(
+        default=60,
+        ge=1,
+        le=1000,
+        description="Steps of the fine alignment before it is refused as not converged [1]. Default 60: "
+        "alignments that converge do so in fewer than 30.",
+    )
+
+
+class NeighbourhoodOptions(Options):
+    """How surface gauges are laid out and fitted."""
+
+    gauge_length: Positive | Auto = Field(
+        default="auto",
+        description="Diameter of the patch that one gauge averages over [m]. A longer gauge sees smaller "
+        "strains and blurs them more. Default auto: 60 point spacings, at most a quarter of the "
+        "object, so that the noise of single points no longer counts.",
+    )
+    gauge_spacing: Positive | Auto = Field(
+        default="auto",
+        description="Distance between neighbouring gauges [m], at most the gauge length. Default auto: a "
+        "quarter of the gauge length, so that no place lies between gauges that do not "
+        "overlap.",
+    )
+    use_intensity: bool = Field(
+        default=True,
+        description="Use the returned intensity as texture. Default true: without it a smooth surface "
+        "shows nothing in its own plane. Set false where the scanner or its settings changed "
+        "between the epochs.",
+    )
+    resolution: Positive | Auto = Field(
+        default="auto",
+        description="Edge of the cells that carry the surface model [m], at most the gauge length. Default "
+        "auto: the point spacing of the coarser scan, at least a hundredth of the gauge length, "
+        "because wider cells lose fine texture and narrower ones only cost time.",
+    )
+    min_points: int = Field(
+        default=30,
+        ge=12,
+        description="Points that a gauge must have, counted as cells that both epochs show [1]. Default 30: "
+        "five for each of the six unknowns of the normal part, so that its noise can be judged; "
+        "below 12 there is no redundancy left.",
+    )
+    required_displacement_sd: Positive | Auto = Field(
+        default="auto",
+        description="Largest standard error at which a displacement along the surface counts as observable [m]."
+        " Default auto: 0.005 m, because a vaguer one says nothing about a structure.",
+    )
+    required_strain_sd: Positive | Auto = Field(
+        default="auto",
+        description="Largest standard error at which an in-plane strain counts as observable [1]. Default auto:"
+        " 0.001, because a vaguer one cannot tell cracking from nothing.",
+    )
+
+    @field_validator("gauge_spacing", "resolution")
+    @classmethod
+    def _within_the_gauge(cls, value: float | str, info: ValidationInfo) -> float | str:
+        length = info.data.get("gauge_length")
+        if isinstance(value, float | int) and isinstance(length, float | int) and value > length:
+            refuse(f"at most the gauge_length, {length:g} m", f"{value:g}", "make it smaller or leave it out")
+        return value
+
+
+class StrainOptions(Options):
+    """Which strain is formed, in which axes, and how strictly a change must show."""
+
+    confidence: ClassVar[float] = 0.95
+    """Of every interval and detection limit [1]; fixed, so that results can be compared."""
+
+    measure: Literal["auto", "small", "green_lagrange", "almansi", "hencky", "biot"] = Field(
+        default="auto",
+        description="Strain measure. Default auto: small strain, and a finite measure beyond 1 % of strain"
+        " or 0.01 rad of rotation, where the small one is no longer true.",
+    )
+    structure: Literal["tunnel", "wall", "free"] = Field(
+        default="free",
+        description="Kind of object, which names the axes u and v: hoop and axial in a tunnel, horizontal "
+        "and upward on a wall. Default free, because nothing is assumed that the user did not "
+        "say.",
+    )
+    thickness: Positive | None = Field(
+        default=None,
+        examples=[0.35],
+        description="Thickness of the lining or wall [m], for bending strain on its faces. No default: "
+        "without it bending strain is not formed.",
+    )
+    free_side: Point | None = Field(
+        default=None,
+        examples=[[0.0, 0.0, 1.5]],
+        description="A point [x, y, z] on the free side in file coordinates [m], towards which normals "
+        "look. No default: normals look into the tunnel, or to the side that was scanned.",
+    )
+    false_discovery_rate: float = Field(
+        default=0.05,
+        gt=0,
+        le=0.5,
+        description="Expected share of false ones among the changes marked as discovered [1]. Default "
+        "0.05, the usual level for maps of many tests (Benjamini and Hochberg 1995).",
+    )
+
+
+class CompareConfig(Options):
+    """Everything that one comparison needs to know."""
+
+    registration: RegistrationOptions = Field(
+        default=RegistrationOptions(), description="Alignment of the two epochs."
+    )
+    neighbourhood: NeighbourhoodOptions = Field(default=NeighbourhoodOptions(), description="Gauges and their fit.")
+    strain: StrainOptions = Field(default=StrainOptions(), description="Strain, rotation, significance.")
+    output: OutputOptions = Field(default=OutputOptions(), description="Colours and missing values.")
+
+    @field_validator("output")
+    @classmethod
+    def _bending_needs_thickness(cls, value: OutputOptions, info: ValidationInfo) -> OutputOptions:
+        strain = info.data.get("strain")
+        if value.colour_by.startswith("bend_") and strain is not None and strain.thickness is None:
+            refuse(
+                f"strain.thickness, to colour by {value.colour_by}",
+                "none",
+                "give the thickness in metres",
+                key=("colour_by",),
+            )
+        return value

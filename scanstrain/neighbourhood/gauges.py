@@ -1,0 +1,147 @@
+# SPDX-License-Identifier: MIT
+"""Where the gauges stand and how their frames are turned."""
+
+from __future__ import annotations
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.cells import Cells, group, voxel_keys
+from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+_CROWDED = 0.85
+"""Two gauges are never nearer than this share of the wanted spacing."""
+_CANDIDATES = 3.0
+"""Candidates per spacing along one direction: enough choice for an even cover."""
+
+
+@numba.njit(cache=True, nogil=True)
+def _thin(first: IntArray, second: IntArray, n: int) -> NDArray[np.bool_]:
+    """Greedy choice in order: a kept candidate drops the later ones that stand too near."""
+    kept = np.ones(n, np.bool_)
+    for pair in range(len(first)):
+        if kept[first[pair]]:
+            kept[second[pair]] = False
+    return kept
+
+
+def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
+    """Spread gauges evenly over the surface.
+
+    Parameters
+    ----------
+    cells : Cells
+        Reference epoch.
+    spacing : float
+        Wanted distance between neighbouring gauges [m].
+
+    Returns
+    -------
+    places, normals : ndarray of shape (g, 3)
+        Cell positions that serve as gauge places [m] and the plane normals there.
+    """
+    from scipy.spatial import cKDTree
+
+    order, _, start = group(voxel_keys(cells.position, spacing / _CANDIDATES))
+    size = np.diff(start)
+    mean = np.add.reduceat(cells.position[order], start[:-1]) / size[:, None]
+    distance = ((cells.position[order] - np.repeat(mean, size, axis=0)) ** 2).sum(axis=1)
+    rank = np.lexsort((distance, np.repeat(np.arange(len(size)), size)))
+    chosen = order[rank[start[:-1]]]
+    places = cells.position[chosen]
+    pairs = cKDTree(places).query_pairs(_CROWDED * spacing, output_type="ndarray")
+    pairs = pairs[np.lexsort((pairs[:, 1], pairs[:, 0]))]
+    kept = _thin(
+        np.ascontiguousarray(pairs[:, 0], np.int64), np.ascontiguousarray(pairs[:, 1], np.int64), len(places)
+    )
+    return places[kept], cells.normal[cells.block[chosen[kept]]]
+
+
+def free_side_signs(
+    places: FloatArray, normals: FloatArray, free_side: FloatArray | None, axis: FloatArray | None
+) -> tuple[NDArray[np.float64], tuple[str, ...]]:
+    """Signs that turn normals to the free side.
+
+    With a `free_side` point every normal looks towards it; with a tunnel `axis` (a direction) towards the line of
+    that direction through the middle of the places; with neither, towards the middle of their bounding box, or, for
+    a near-plane where the middle says nothing, all to one side, with a warning.
+
+    Returns
+    -------
+    signs : ndarray of shape (g,)
+        +1 or -1.
+    warnings : tuple of str
+    """
+    middle = (places.min(axis=0) + places.max(axis=0)) / 2
+    look = (middle if free_side is None else free_side) - places
+    if axis is not None:
+        look = look - (look @ axis)[:, None] * axis
+    signs = np.where((normals * look).sum(axis=1) < 0, -1.0, 1.0)
+    if free_side is not None or axis is not None:
+        return signs, ()
+    turned = normals * signs[:, None]
+    mean = turned.mean(axis=0)
+    _, vectors = np.linalg.eigh(normals.T @ normals)
+    common = vectors[:, 2]
+    if np.mean(np.abs(normals @ common)) > 0.9 and np.linalg.norm(mean) < 0.9:
+        common = common * (1.0 if common[np.argmax(np.abs(common))] > 0 else -1.0)
+        side = ", ".join(f"{c:+.2f}" for c in common)
+        return np.where(normals @ common < 0, -1.0, 1.0), (
+            f"The free side of the surface is not given and the points lie near one plane: positive normal "
+            f"displacement was taken along ({side}). Give free_side to fix the sign.",
+        )
+    return signs, ()
+
+
+def turn_frames(frame: FloatArray, signs: NDArray[np.float64], axis: FloatArray | None) -> FloatArray:
+    """Turn tangent frames to the structure: n to the free side, a2 along `axis`, or else a1 level and a2 upward.
+
+    Parameters
+    ----------
+    frame : ndarray of shape (g, 3, 3)
+        Columns two tangents and a normal of either sign.
+    signs : ndarray of shape (g,)
+        +1 or -1 for each normal.
+    axis : ndarray of shape (3,) or None
+        Direction of a tunnel; a surface square to it keeps a level a1.
+
+    Returns
+    -------
+    ndarray of shape (g, 3, 3)
+        Right-handed frames (a1, a2, n).
+    """
+    n = frame[:, :, 2] * signs[:, None]
+    up = np.array([0.0, 0.0, 1.0]) if axis is None else axis
+    second = up - (n @ up)[:, None] * n
+    flat = np.linalg.norm(second, axis=1) < 0.1
+    spare = np.array([0.0, 1.0, 0.0]) if axis is None else np.array([0.0, 0.0, 1.0])
+    second[flat] = (spare - (n @ spare)[:, None] * n)[flat]
+    second /= np.linalg.norm(second, axis=1, keepdims=True)
+    first = np.cross(second, n)
+    return np.stack([first, second, n], axis=2)
+
+
+def frames_at(
+    places: FloatArray, normals: FloatArray, support: Cells, free_side: FloatArray | None, axis: FloatArray | None
+) -> tuple[SmoothSurface, tuple[str, ...]]:
+    """Fit the smooth surface at the gauges and turn its frames to the structure.
+
+    Returns
+    -------
+    SmoothSurface
+        With `frame` columns (a1, a2, n) and `curvature` in that frame.
+    warnings : tuple of str
+    """
+    fitted = smooth_surface(places, normals, support)
+    signs, warnings = free_side_signs(fitted.origin, fitted.frame[:, :, 2], free_side, axis)
+    frame = turn_frames(fitted.frame, signs, axis)
+    turn = np.einsum("gai,gaj->gij", fitted.frame[:, :, :2], frame[:, :, :2])
+    k11, k12, k22 = fitted.curvature.T
+    old = np.stack([k11, k12, k12, k22], axis=1).reshape(-1, 2, 2)
+    new = signs[:, None, None] * np.einsum("gia,gij,gjb->gab", turn, old, turn)
+    curvature = np.stack([new[:, 0, 0], new[:, 0, 1], new[:, 1, 1]], axis=1)
+    return SmoothSurface(fitted.origin, frame, curvature, fitted.support), warnings

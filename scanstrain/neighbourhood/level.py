@@ -1,0 +1,125 @@
+# SPDX-License-Identifier: MIT
+"""One level of the pyramid: both epochs as cells of one width, and the fit of all gauges on them."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.cells import Cells, make_cells
+from scanstrain.neighbourhood.covariance import CovarianceModel, measure_covariance
+from scanstrain.neighbourhood.fit import TUKEY_INFLATE, TUKEY_SHRINK, fit_gauges
+from scanstrain.neighbourhood.predict import Predictor, build_predictor
+from scanstrain.neighbourhood.rows import Rows, block_density, evaluate_rows
+from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface
+from scanstrain.neighbourhood.warp import blend, nearest_gauges
+
+FloatArray = NDArray[np.float64]
+
+CLUTTER = 6.0
+"""Cells farther than this many standard deviations from the smooth surface are not surface."""
+NUISANCE_DISPLACEMENT = 0.03
+"""What a structure may have slid in its own plane where nothing shows it [m], one standard deviation."""
+NUISANCE_GRADIENT = 0.02
+"""The same for in-plane gradients [1]: the limit of small strain (common practice)."""
+WEAK_PRIOR = 10.0
+"""Standard deviation of the prior that only keeps the equations solvable [m]: no surface moves so far between epochs."""
+
+
+@dataclass(frozen=True, slots=True)
+class Surface:
+    """One epoch at one level: cells, smooth surface at the blocks, measured covariances."""
+
+    cells: Cells
+    smooth: SmoothSurface
+    height: CovarianceModel
+    grey: CovarianceModel | None
+    gate: float
+
+
+@dataclass(slots=True)
+class Estimate:
+    """The present state of all gauges; unknowns scaled to metres at the gauge's rim, as in `fit.fit_gauges`."""
+
+    held: FloatArray
+    gains: FloatArray
+    values: FloatArray = field(init=False)
+    covariance: FloatArray = field(init=False)
+    data_sd: FloatArray = field(init=False)
+    info: FloatArray = field(init=False)
+
+    def __post_init__(self) -> None:
+        g = len(self.held)
+        self.values, self.covariance, self.info = np.full((g, 12), np.nan), np.zeros((g, 12, 12)), np.zeros((g, 6))
+        self.data_sd = np.full((g, 12), np.inf)
+
+
+def make_surface(
+    points: FloatArray, intensity: FloatArray | None, resolution: float, support_radius: float
+) -> Surface:
+    """Model one epoch at one resolution [m], smooth over `support_radius` [m]."""
+    cells = make_cells(points, resolution, intensity=intensity)
+    wide = make_cells(cells.position, support_radius / 4)
+    smooth = smooth_surface(cells.centre, cells.normal, wide)
+    gate = CLUTTER * float(np.median(cells.roughness)) + 0.1 * resolution
+    height, grey = measure_covariance(cells, smooth, gate=gate)
+    return Surface(cells, smooth, height, grey, gate)
+
+
+class Level:
+    """Both epochs at one resolution, ready to be compared at any present estimate."""
+
+    def __init__(
+        self, reference: Surface, current: Surface, gauges: SmoothSurface, radius: float, spacing: float
+    ) -> None:
+        self.reference, self.gauges, self.radius, self.spacing = reference, gauges, radius, spacing
+        textured = reference.grey is not None and current.grey is not None
+        textured = textured and reference.grey.sill > 0 and current.grey.sill > 0  # type: ignore[union-attr]
+        self.textured = textured
+        self.predictor: Predictor = build_predictor(
+            current.cells, current.smooth, current.height, current.grey if textured else None, gate=current.gate
+        )
+        cells = reference.cells
+        self.normal = np.ascontiguousarray(reference.smooth.frame[cells.block][:, :, 2])
+        self.density = block_density(cells)[cells.block], block_density(current.cells)
+        self.nearest = nearest_gauges(cells.position, gauges.origin)
+        gradient = NUISANCE_GRADIENT * radius
+        self.nuisance = np.full(12, WEAK_PRIOR)
+        self.nuisance[[0, 1]], self.nuisance[[3, 4, 5, 6]] = NUISANCE_DISPLACEMENT, gradient
+        # Members are gathered through a coarse hash of their own, as wide as a gauge radius.
+        self.hash = make_hash(cells.position, radius)
+
+    def rows(self, held: FloatArray, gate: float) -> Rows:
+        """Compare the moved reference cells with the current epoch."""
+        cells = self.reference.cells
+        moved = np.zeros((len(cells), 3))
+        g = self.gauges
+        blend(cells.position, self.nearest, g.origin, g.frame, held, self.radius, self.spacing, moved)
+        noise = self.reference.height, self.reference.grey if self.textured else None
+        return evaluate_rows(cells, self.normal, moved, self.predictor, noise, gate=gate, density=self.density)
+
+    def fit(self, state: Estimate, *, gate: float, rounds: int, min_points: int) -> None:
+        """Improve `state` by one comparison and one fit of every gauge."""
+        rows = self.rows(state.held, gate)
+        cells, g = self.reference.cells, self.gauges
+        order, key, start = self.hash
+        grey = cells.intensity if self.textured and cells.intensity is not None else np.empty(0)
+        per_gauge = np.pi * (self.radius / cells.resolution) ** 2
+        start_values = state.held.copy()
+        fit_gauges(
+            g.origin, g.frame, g.curvature, start_values, self.radius, self.reference.gate + 0.1 * self.radius,
+            WEAK_PRIOR, self.nuisance, cells.resolution, rounds, min_points, int(3 * per_gauge) + 256, TUKEY_SHRINK, TUKEY_INFLATE,
+            key, start, self.radius, cells.position[order], self.normal[order], cells.count[order],
+            rows.valid[order], rows.moved[order], rows.misfit[order], rows.slope[order], rows.grey[order],
+            rows.grey_slope[order], rows.variance[order], grey[order] if len(grey) else grey, state.gains,
+            state.values, state.held, state.covariance, state.data_sd, state.info,
+        )  # fmt: skip
+
+
+def make_hash(position: FloatArray, size: float) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:
+    """Sort cells by voxels of width `size` [m]: order, keys and starts as of `cells.group`."""
+    from scanstrain.cells import group, voxel_keys
+
+    return group(voxel_keys(position, size))

@@ -1,0 +1,360 @@
+# SPDX-License-Identifier: MIT
+"""Best linear prediction of the current epoch's height and intensity, block by block.
+
+Every block solves two small kriging systems (height over the smooth surface; intensity), with an unknown constant,
+from the cells of the block and a margin around it. The solution depends only on the current epoch, so predicting
+at a moved point costs one pass over the block's cells, however often the fit iterates. The gradient comes from the
+same weights: being a prediction (Berkson type) and not a measurement of the slope, it does not dilute the regression
+on it (Rasmussen & Williams 2006, ch. 2 and 9.4; Carroll et al. 2006 for the error type).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.cells import _BITS, BLOCK_WIDTH, Cells, find_key, pack
+from scanstrain.neighbourhood.covariance import CovarianceModel
+from scanstrain.neighbourhood.smooth import SmoothSurface
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+MAX_NEIGHBOURS = 64
+MARGIN = 1.5
+"""Cells kept around a block so that its border is predicted from both sides, in cells."""
+_CONSTANT = 100.0
+"""Prior variance of the unknown constant, relative to sill plus noise: large enough to leave it free."""
+_SAME_SHEET = 0.7
+"""Cosine between normals above which a neighbouring block counts as the same sheet."""
+
+
+@dataclass(frozen=True, slots=True)
+class Predictor:
+    """Solved prediction systems of one epoch.
+
+    Parameters
+    ----------
+    start : ndarray of shape (b + 1,)
+        Neighbours of block i are `start[i]:start[i + 1]`.
+    st : ndarray of shape (k, 2)
+        Their tangent coordinates in the block's frame [m].
+    height, intensity : ndarray of shape (k,)
+        Their prediction weights (solution of the kriging system); intensity may be empty.
+    constant : ndarray of shape (b, 2)
+        Fitted constants of height [m] and intensity.
+    variance, unresolved : ndarray of shape (b, 2)
+        Prediction variance, and the part of it that is structure between the points rather than noise.
+    noise : tuple of float
+        Noise variance of a single point in height [m^2] and intensity.
+    """
+
+    cells: Cells
+    surface: SmoothSurface
+    start: IntArray
+    st: FloatArray
+    height: FloatArray
+    intensity: FloatArray
+    constant: FloatArray
+    variance: FloatArray
+    unresolved: FloatArray
+    noise: tuple[float, float]
+    height_table: FloatArray
+    intensity_table: FloatArray
+    table_step: float
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def lookup(table: FloatArray, column: int, q: float, step: float) -> float:
+    """Linear interpolation in a table over squared distance."""
+    place = q / step
+    i = int(place)
+    if i >= len(table) - 1:
+        return 0.0
+    part = place - i
+    return table[i, column] * (1.0 - part) + table[i + 1, column] * part
+
+
+@numba.njit(cache=True, nogil=True)
+def _neighbours(
+    b: int, reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray,
+    frame: FloatArray, curvature: FloatArray, position: FloatArray, cells: IntArray, s: FloatArray, t: FloatArray,
+    h: FloatArray,
+) -> int:  # fmt: skip
+    """Cells within `reach` of a block in its tangent plane, on its sheet; keeps the nearest if there are too many."""
+    limit = len(cells)
+    o0, o1, o2 = origin[b, 0], origin[b, 1], origin[b, 2]
+    m = 0
+    far = reach * reach
+    for i in range(-1, 2):
+        for j in range(-1, 2):
+            for k in range(-1, 2):
+                other = find_key(key, key[b] + (i << (2 * _BITS)) + (j << _BITS) + k)
+                if other < 0:
+                    continue
+                dot = 0.0
+                for a in range(3):
+                    dot += frame[b, a, 2] * frame[other, a, 2]
+                if abs(dot) < _SAME_SHEET:
+                    continue
+                for c in range(start[other], start[other + 1]):
+                    d0, d1, d2 = position[c, 0] - o0, position[c, 1] - o1, position[c, 2] - o2
+                    x = d0 * frame[b, 0, 0] + d1 * frame[b, 1, 0] + d2 * frame[b, 2, 0]
+                    y = d0 * frame[b, 0, 1] + d1 * frame[b, 1, 1] + d2 * frame[b, 2, 1]
+                    if x * x + y * y >= far:
+                        continue
+                    z = d0 * frame[b, 0, 2] + d1 * frame[b, 1, 2] + d2 * frame[b, 2, 2]
+                    z -= 0.5 * curvature[b, 0] * x * x + curvature[b, 1] * x * y + 0.5 * curvature[b, 2] * y * y
+                    if abs(z) > gate:
+                        continue
+                    if m < limit:
+                        cells[m], s[m], t[m], h[m] = c, x, y, z
+                        m += 1
+                        if m == limit:
+                            worst = np.argmax(s * s + t * t)
+                            far = s[worst] ** 2 + t[worst] ** 2
+                    else:
+                        worst = np.argmax(s * s + t * t)
+                        cells[worst], s[worst], t[worst], h[worst] = c, x, y, z
+                        worst = np.argmax(s * s + t * t)
+                        far = s[worst] ** 2 + t[worst] ** 2
+    return m
+
+
+# Sums over contiguous rows may be taken in vector lanes; see the note in `fit`.
+_LANES = {"reassoc", "contract", "nsz"}
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_LANES)
+def _forward(L: FloatArray, b: FloatArray, n: int) -> None:
+    for i in range(n):
+        v = b[i]
+        for k in range(i):
+            v -= L[i, k] * b[k]
+        b[i] = v / L[i, i]
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_LANES)
+def _backward(L: FloatArray, b: FloatArray, n: int) -> None:
+    for i in range(n - 1, -1, -1):
+        v = b[i] / L[i, i]
+        b[i] = v
+        for k in range(i):
+            b[k] -= L[i, k] * v
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_LANES)
+def krige(
+    s: FloatArray, t: FloatArray, values: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float,
+    noise: float, probe: float, weights: FloatArray, L: FloatArray,
+) -> tuple[float, float, float]:  # fmt: skip
+    """Solve one ordinary kriging system.
+
+    Fills `weights` with K^-1 (values); returns the constant, and the prediction variance and its structural part,
+    each averaged over four probes at (+-probe, +-probe).
+    """
+    sill = table[0, 0]
+    constant = _CONSTANT * (sill + noise)
+    for i in range(m):
+        for j in range(i):
+            dx, dy = s[i] - s[j], t[i] - t[j]
+            L[i, j] = lookup(table, 0, dx * dx + dy * dy, step) + constant
+        L[i, i] = sill + constant + noise * share[i]
+    for j in range(m):
+        d = L[j, j]
+        for k in range(j):
+            d -= L[j, k] * L[j, k]
+        d = np.sqrt(max(d, 1e-12 * constant))
+        L[j, j] = d
+        for i in range(j + 1, m):
+            v = L[i, j]
+            for k in range(j):
+                v -= L[i, k] * L[j, k]
+            L[i, j] = v / d
+    weights[:m] = values[:m]
+    _forward(L, weights, m)
+    _backward(L, weights, m)
+    offset = constant * weights[:m].sum()
+    k_probe = np.empty(m)
+    variance = unresolved = 0.0
+    for a in (-probe, probe):
+        for b in (-probe, probe):
+            for i in range(m):
+                dx, dy = s[i] - a, t[i] - b
+                k_probe[i] = lookup(table, 0, dx * dx + dy * dy, step) + constant
+            _forward(L, k_probe, m)
+            v = sill + constant
+            for i in range(m):
+                v -= k_probe[i] * k_probe[i]
+            _backward(L, k_probe, m)
+            through = 0.0
+            for i in range(m):
+                through += k_probe[i] * k_probe[i] * noise * share[i]
+            variance += 0.25 * max(v, through)
+            unresolved += 0.25 * max(v - through, 0.0)
+    return offset, variance, unresolved
+
+
+@numba.njit(cache=True, nogil=True, parallel=True)
+def _count_neighbours(
+    reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray, frame: FloatArray,
+    curvature: FloatArray, position: FloatArray, support: IntArray, out: IntArray,
+) -> None:  # fmt: skip
+    for b in numba.prange(len(key)):
+        cells = np.empty(MAX_NEIGHBOURS, np.int64)
+        s, t, h = np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS)
+        out[b] = 0
+        if support[b] >= 6:
+            out[b] = _neighbours(b, reach, gate, key, start, size, origin, frame, curvature, position, cells, s, t, h)
+
+
+@numba.njit(cache=True, nogil=True, parallel=True)
+def _solve_blocks(
+    reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray, frame: FloatArray,
+    curvature: FloatArray, position: FloatArray, intensity: FloatArray, count: FloatArray, first: IntArray,
+    height_table: FloatArray, intensity_table: FloatArray, step: float, noise_h: float, noise_i: float,
+    st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, variance: FloatArray,
+    unresolved: FloatArray,
+) -> None:  # fmt: skip
+    for b in numba.prange(len(key)):
+        m = first[b + 1] - first[b]
+        if m == 0:
+            variance[b, :] = np.inf
+            continue
+        cells = np.empty(MAX_NEIGHBOURS, np.int64)
+        s, t, h = np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS)
+        L = np.empty((MAX_NEIGHBOURS, MAX_NEIGHBOURS))
+        _neighbours(b, reach, gate, key, start, size, origin, frame, curvature, position, cells, s, t, h)
+        share, grey, w = np.empty(m), np.empty(m), np.empty(m)
+        for i in range(m):
+            share[i] = 1.0 / count[cells[i]]
+            st[first[b] + i, 0], st[first[b] + i, 1] = s[i], t[i]
+        probe = 0.25 * size
+        constant[b, 0], variance[b, 0], unresolved[b, 0] = krige(
+            s, t, h, share, m, height_table, step, noise_h, probe, w, L
+        )
+        weights_h[first[b] : first[b] + m] = w
+        if len(intensity):
+            for i in range(m):
+                grey[i] = intensity[cells[i]]
+            constant[b, 1], variance[b, 1], unresolved[b, 1] = krige(
+                s, t, grey, share, m, intensity_table, step, noise_i, probe, w, L
+            )
+            weights_i[first[b] : first[b] + m] = w
+
+
+def build_predictor(
+    cells: Cells, surface: SmoothSurface, height: CovarianceModel, intensity: CovarianceModel | None, *, gate: float
+) -> Predictor:
+    """Solve the prediction systems of every block.
+
+    Parameters
+    ----------
+    cells, surface
+        The current epoch and its smooth surface at the blocks.
+    height, intensity : CovarianceModel
+        Measured covariances; without `intensity` only height is predicted.
+    gate : float
+        Cells farther than this from the smooth surface are clutter [m].
+    """
+    blocks = len(cells.key)
+    reach = cells.resolution * (BLOCK_WIDTH * 0.5 * np.sqrt(2) * 1.15 + MARGIN)
+    span = 2.2 * reach
+    height_table, step = height.table(span)
+    intensity_table, _ = (intensity or height).table(span)
+    noise_h = max(height.noise, 1e-18)
+    noise_i = max(intensity.noise, 1e-18) if intensity else 0.0
+    grey = cells.intensity if intensity is not None and cells.intensity is not None else np.empty(0)
+    shared = (
+        reach, gate, cells.key, cells.start, cells.block_size, surface.origin, surface.frame, surface.curvature,
+        cells.position,
+    )  # fmt: skip
+    found = np.zeros(blocks, np.int64)
+    _count_neighbours(*shared, surface.support, found)
+    first = np.r_[0, np.cumsum(found)].astype(np.int64)
+    total = int(first[-1])
+    st, weights_h = np.empty((total, 2)), np.empty(total)
+    weights_i = np.empty(total if len(grey) else 0)
+    constant, variance, unresolved = np.zeros((blocks, 2)), np.zeros((blocks, 2)), np.zeros((blocks, 2))
+    _solve_blocks(
+        *shared, grey, cells.count, first, height_table, intensity_table, step, noise_h, noise_i, st, weights_h,
+        weights_i, constant, variance, unresolved,
+    )  # fmt: skip
+    return Predictor(
+        cells, surface, first, st, weights_h, weights_i, constant, variance, unresolved, (noise_h, noise_i),
+        height_table, intensity_table, step,
+    )  # fmt: skip
+
+
+@numba.njit(cache=True, nogil=True)
+def choose_block(
+    x: float, y: float, z: float, key: IntArray, first: IntArray, size: float, origin: FloatArray
+) -> int:
+    """Block that serves a place: the one it lies in, or else the nearest of the 26 around it; -1 if none."""
+    base = pack(int(np.floor(x / size)), int(np.floor(y / size)), int(np.floor(z / size)))
+    own = find_key(key, base)
+    if own >= 0 and first[own + 1] - first[own] >= 6:
+        return own
+    best, nearest = -1, 1e300
+    for i in range(-1, 2):
+        for j in range(-1, 2):
+            for k in range(-1, 2):
+                b = find_key(key, base + (i << (2 * _BITS)) + (j << _BITS) + k)
+                if b < 0 or first[b + 1] - first[b] < 6:
+                    continue
+                d = (origin[b, 0] - x) ** 2 + (origin[b, 1] - y) ** 2 + (origin[b, 2] - z) ** 2
+                if d < nearest:
+                    best, nearest = b, d
+    return best
+
+
+@numba.njit(cache=True, nogil=True)
+def predict_at(
+    b: int, x: float, y: float, z: float, origin: FloatArray, frame: FloatArray, curvature: FloatArray, first: IntArray,
+    st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, height_table: FloatArray,
+    intensity_table: FloatArray, step: float, out: FloatArray,
+) -> bool:  # fmt: skip
+    """Predict at a place; False outside the block's support.
+
+    Fills `out` with: height above the predicted surface [m], its gradient in local axes (3), intensity, its gradient (3).
+    """
+    d0, d1, d2 = x - origin[b, 0], y - origin[b, 1], z - origin[b, 2]
+    s = d0 * frame[b, 0, 0] + d1 * frame[b, 1, 0] + d2 * frame[b, 2, 0]
+    t = d0 * frame[b, 0, 1] + d1 * frame[b, 1, 1] + d2 * frame[b, 2, 1]
+    h = d0 * frame[b, 0, 2] + d1 * frame[b, 1, 2] + d2 * frame[b, 2, 2]
+    k11, k12, k22 = curvature[b, 0], curvature[b, 1], curvature[b, 2]
+    m = constant[b, 0] + 0.5 * k11 * s * s + k12 * s * t + 0.5 * k22 * t * t
+    ms, mt = k11 * s + k12 * t, k12 * s + k22 * t
+    grey, gs, gt = constant[b, 1], 0.0, 0.0
+    textured = len(weights_i) > 0
+    nearest = 1e300
+    for r in range(first[b], first[b + 1]):
+        a, c = s - st[r, 0], t - st[r, 1]
+        q = a * a + c * c
+        nearest = min(nearest, q)
+        place = q / step
+        i = int(place)
+        if i >= len(height_table) - 1:
+            continue
+        part = place - i
+        k = height_table[i, 0] * (1.0 - part) + height_table[i + 1, 0] * part
+        dk = height_table[i, 1] * (1.0 - part) + height_table[i + 1, 1] * part
+        m += weights_h[r] * k
+        ms += weights_h[r] * dk * a
+        mt += weights_h[r] * dk * c
+        if textured:
+            k = intensity_table[i, 0] * (1.0 - part) + intensity_table[i + 1, 0] * part
+            dk = intensity_table[i, 1] * (1.0 - part) + intensity_table[i + 1, 1] * part
+            grey += weights_i[r] * k
+            gs += weights_i[r] * dk * a
+            gt += weights_i[r] * dk * c
+    out[0] = h - m
+    for a in range(3):
+        out[1 + a] = frame[b, a, 2] - ms * frame[b, a, 0] - mt * frame[b, a, 1]
+        out[5 + a] = gs * frame[b, a, 0] + gt * frame[b, a, 1]
+    out[4] = grey
+    # A place farther from every cell than this is a hole or lies beyond the border: no prediction there.
+    return nearest <= height_table.shape[0] * step * 0.08

@@ -1,0 +1,30 @@
+# SPDX-License-Identifier: MIT
+"""What a user can choose about the outputs."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from scanstrain.outputs.colour import Limits
+
+
+@dataclass(frozen=True, slots=True)
+class OutputOptions:
+    """Choices that the writers share.
+
+    Parameters
+    ----------
+    colour_by : str
+        Attribute of the coloured cloud and its key.
+    colour_limits : float or (float, float), optional
+        Ends of the colour scale in stored units, see `outputs.colour.choose_scale`.
+    no_data : float, optional
+        Finite value written for no-data, for readers that cannot take NaN.
+    only_significant : bool
+        Grey out places without a change beyond the false-discovery control.
+    """
+
+    colour_by: str = "disp_n"
+    colour_limits: Limits | None = None
+    no_data: float | None = None
+    only_significant: bool = False

@@ -1,0 +1,157 @@
+# SPDX-License-Identifier: MIT
+"""Everything about a comparison that is not an array per point, as one mapping."""
+
+from __future__ import annotations
+
+import platform
+import sys
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from scanstrain.epoch import Epoch
+from scanstrain.neighbourhood.result import Status
+from scanstrain.outputs.cautions import cautions
+from scanstrain.outputs.findings import verdict
+from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.registered import rigid_motion
+from scanstrain.outputs.statistics import attribute_statistics
+from scanstrain.outputs.strict import plain, write_json
+from scanstrain.outputs.words import OBSERVED_WORDS, status_word
+from scanstrain.result import Result
+
+__all__ = ["summary", "verdict", "write_summary"]
+
+PACKAGES = ("scanstrain", "numpy", "scipy", "numba", "laspy", "open3d")
+
+
+def write_summary(result: Result, folder: Path, options: OutputOptions) -> Path:
+    """Write `summary.json`."""
+    return write_json(summary(result, no_data=options.no_data), folder / "summary.json")
+
+
+def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
+    """Summarise a comparison.
+
+    Parameters
+    ----------
+    result : Result
+        The comparison.
+    no_data : float, optional
+        Finite value that stands for no-data in the clouds, NaN by default.
+
+    Returns
+    -------
+    dict
+        Only dicts, lists, strings, finite numbers, booleans and None, in SI units: ready for `json.dumps`.
+    """
+    strain = result.strain
+    content = {
+        "registration": _registration(result),
+        # the motion of each body after registration needs zones
+        "rigid_motion": {},
+        "gauges": _gauges(result),
+        "results": attribute_statistics(result),
+        "strain_measure": {"used": strain.measure, "why": strain.measure_reason},
+        "inputs": {"reference": _input(result.reference), "current": _input(result.current)},
+        "software": _software(),
+        "config": result.config.model_dump(mode="json"),
+        "timing": _timing(result),
+        "warnings": _warnings(result),
+        "cautions": cautions(result),
+        "no_data": {
+            "value": "NaN" if no_data is None else no_data,
+            "meaning": "the data do not support a value here; observed and status say why",
+        },
+        "status_codes": {str(int(code)): status_word(code) for code in Status},
+        "observed_bits": {str(bit): word for bit, word in enumerate(OBSERVED_WORDS)},
+    }
+    return dict(plain(content))
+
+
+def _registration(result: Result) -> dict[str, Any]:
+    registration = result.registration
+    return {
+        **rigid_motion(registration),
+        "rms": registration.rms,
+        "stable_fraction": registration.stable_fraction,
+        "overlap": registration.overlap,
+        "weak_directions": [
+            {"description": weak.description, "vector": weak.vector, "sd": weak.sd}
+            for weak in registration.weak_directions
+        ],
+        "converged": registration.converged,
+        "iterations": registration.iterations,
+        "start": registration.start,
+        "scale_ppm": registration.scale_ppm,
+        "scale_ppm_sd": registration.scale_ppm_sd,
+    }
+
+
+def _gauges(result: Result) -> dict[str, Any]:
+    strain = result.strain
+    codes, counts = np.unique(strain.status, return_counts=True)
+    return {
+        "count": len(strain),
+        "fine": int((strain.status == Status.FINE).sum()),
+        "discovered": int((np.asarray(strain.values["discovery"]) == 1).sum()),
+        "by_status": {status_word(int(code)): int(count) for code, count in zip(codes, counts, strict=True)},
+        "gauge_length": strain.gauge_length,
+        "gauge_spacing": strain.gauge_spacing,
+    }
+
+
+def _input(epoch: Epoch) -> dict[str, Any]:
+    source = epoch.provenance
+    return {
+        "file": Path(source.path).name,
+        "path": source.path,
+        "label": epoch.label,
+        "sha256": source.sha256,
+        "points": source.file_points or len(epoch),
+        "dropped_points": source.dropped_points,
+        "crs": source.crs,
+        "unit": source.unit,
+        "date": source.date,
+        "notices": source.notices,
+    }
+
+
+def _software() -> dict[str, str | None]:
+    """Versions from the metadata of the distributions: importing open3d would take seconds."""
+    found: dict[str, str | None] = {"python": platform.python_version(), "platform": platform.platform()}
+    for package in PACKAGES:
+        try:
+            found[package] = version(package)
+        except PackageNotFoundError:
+            found[package] = None
+    return found
+
+
+def _timing(result: Result) -> dict[str, Any]:
+    total = float(sum(result.timing.values()))
+    points = len(result.reference) + len(result.current)
+    return {
+        "stages": dict(result.timing),
+        "total": total,
+        "points_per_second": points / total if total > 0 else None,
+        "peak_memory": _peak_memory(),
+    }
+
+
+def _peak_memory() -> int | None:
+    """Peak resident memory of this process [byte], None where the system does not tell."""
+    try:
+        import resource
+    except ImportError:
+        return None
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+    return int(peak if sys.platform == "darwin" else peak * 1024)
+
+
+def _warnings(result: Result) -> list[str]:
+    """Warnings of the run and of its stages, each once."""
+    stages = (result.warnings, result.registration.warnings, result.field.warnings, result.strain.warnings)
+    return list(dict.fromkeys(sentence for stage in stages for sentence in stage))

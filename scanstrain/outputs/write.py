@@ -1,0 +1,80 @@
+# SPDX-License-Identifier: MIT
+"""Write all outputs of a result into one folder, together or not at all."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from pathlib import Path
+
+from scanstrain.outputs.cloud import write_coloured_cloud, write_strain_cloud
+from scanstrain.outputs.colour import Limits, choose_scale
+from scanstrain.outputs.folder import check_folder, finished_only, is_ours
+from scanstrain.outputs.key import write_colour_key
+from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.registered import write_registered
+from scanstrain.outputs.summary import write_summary
+from scanstrain.outputs.table import write_gauge_table
+from scanstrain.outputs.words import attribute_of
+from scanstrain.registry import Registry
+from scanstrain.result import Result
+
+Writer = Callable[[Result, Path, OutputOptions], Path]
+
+OUTPUTS: Registry[Writer] = Registry("output")
+OUTPUTS.add("strain cloud", write_strain_cloud)
+OUTPUTS.add("coloured cloud", write_coloured_cloud)
+OUTPUTS.add("colour key", write_colour_key)
+OUTPUTS.add("gauge table", write_gauge_table)
+OUTPUTS.add("registered", write_registered)
+OUTPUTS.add("summary", write_summary)
+
+
+def write_result(
+    result: Result,
+    folder: str | os.PathLike[str],
+    *,
+    colour_by: str = "disp_n",
+    colour_limits: Limits | None = None,
+    no_data: float | None = None,
+    only_significant: bool = False,
+) -> list[Path]:
+    """Write a result into a folder.
+
+    Parameters
+    ----------
+    result : Result
+        A finished comparison.
+    folder : path
+        New or existing. Of an existing folder, files that an earlier result left there are replaced once everything
+        is written; other files stay.
+    colour_by : str
+        Attribute of the coloured cloud.
+    colour_limits : float or (float, float), optional
+        Ends of the colour scale in stored units, see `outputs.colour.choose_scale`.
+    no_data : float, optional
+        Finite value for no-data in the clouds, NaN by default.
+    only_significant : bool
+        Grey out places without a change beyond the false-discovery control.
+
+    Returns
+    -------
+    list of Path
+        The files, in the order of the registry.
+
+    Raises
+    ------
+    OptionError
+        An unknown attribute, with the nearest name, or colour limits that do not fit it.
+    OutputError
+        The folder is a file, holds an input in the place of an output, cannot be written to, or the disk is full.
+        What stood there before stands there still.
+    """
+    options = OutputOptions(colour_by, colour_limits, no_data, only_significant)
+    # limits that do not fit are refused before anything is written
+    choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits)
+    sources = [epoch.provenance.path for epoch in (result.reference, result.current)]
+    target = check_folder(folder, inputs=[source for source in sources if source])
+    with finished_only(target, retire=is_ours) as work:
+        written = [OUTPUTS[name](result, work, options).name for name in OUTPUTS]
+    return [target / name for name in written]

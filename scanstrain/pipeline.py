@@ -1,0 +1,186 @@
+# SPDX-License-Identifier: MIT
+"""The method in one screen: two epochs in, registration, local affine fit, strain, and back to the points."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.config import CompareConfig, config_from_options
+from scanstrain.epoch import Epoch
+from scanstrain.errors import OptionError, explain
+from scanstrain.result import Result
+
+FloatArray = NDArray[np.float64]
+Progress = Callable[[str, float], None]
+
+AUTO_SPACINGS = 60.0
+"""Gauge length of `gauge_length = "auto"`, in point spacings: some 2 800 points a gauge, which brings the noise of a
+normal displacement down to about a twenty-fifth of that of a point."""
+AUTO_SHARE = 0.25
+"""The same never exceeds this share of the object's extent."""
+
+
+def compare(reference: str | Path, current: str | Path, **options: Any) -> Result:
+    """Compare two scan files; nothing is written.
+
+    Parameters
+    ----------
+    reference, current : path
+        The earlier and the later scan.
+    **options
+        Any option of any stage by its name (`scanstrain config new` lists them), for example `gauge_length=0.8`.
+
+    Returns
+    -------
+    Result
+
+    Raises
+    ------
+    OptionError, InputFileError, OverlapError, RegistrationError, FitError
+        With what was required, what came and what to do.
+    """
+    assume = bool(options.pop("assume_same_crs", False))
+    return compare_files(Path(reference), Path(current), config_from_options(options), assume_same_crs=assume)
+
+
+def compare_files(
+    reference: Path,
+    current: Path,
+    config: CompareConfig,
+    *,
+    assume_same_crs: bool = False,
+    progress: Progress | None = None,
+) -> Result:
+    """Read two scan files and compare them; arguments as of `compare` and `compare_epochs`."""
+    from scanstrain.io import check_same_frame, read_scan
+
+    clock = Clock(progress)
+    with clock.stage("read", 0.0):
+        first = read_scan(reference)
+        second = read_scan(current, origin=first.origin)
+        notices = check_same_frame(first, second, assume_same_crs=assume_same_crs)
+    return _compare(first, second, config, clock, notices)
+
+
+def compare_epochs(
+    reference: Epoch, current: Epoch, config: CompareConfig, *, progress: Progress | None = None
+) -> Result:
+    """Compare two epochs in memory.
+
+    Parameters
+    ----------
+    reference, current : Epoch
+        The earlier and the later epoch; different origins are brought together.
+    config : CompareConfig
+        Options of all stages.
+    progress : callable, optional
+        Called with the name of a stage and the share of the whole that is done.
+
+    Returns
+    -------
+    Result
+    """
+    return _compare(reference, current.shifted(reference.origin), config, Clock(progress), ())
+
+
+def _compare(
+    reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...]
+) -> Result:
+    from scanstrain.neighbourhood import fit_affine
+    from scanstrain.registration import register
+    from scanstrain.strain import blend_to_points, compute_strain
+
+    options = config.neighbourhood
+    gauge_length = _number(options.gauge_length) or auto_gauge_length(reference, current)
+    axis = tunnel_axis(reference, gauge_length) if config.strain.structure == "tunnel" else None
+    with clock.stage("registration", 0.1):
+        registration = register(reference, current, **config.registration.model_dump())
+    with clock.stage("neighbourhood", 0.3):
+        affine = fit_affine(
+            reference,
+            current.moved(registration.T_ref_cur),
+            gauge_length=gauge_length,
+            gauge_spacing=_number(options.gauge_spacing),
+            resolution=_number(options.resolution),
+            use_intensity=options.use_intensity,
+            min_points=options.min_points,
+            required_displacement_sd=_number(options.required_displacement_sd),
+            required_strain_sd=_number(options.required_strain_sd),
+            free_side=None
+            if config.strain.free_side is None
+            else np.array(config.strain.free_side) - reference.origin,
+            axis=axis,
+            progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
+        )
+    with clock.stage("strain", 0.8):
+        strain = compute_strain(
+            affine,
+            registration=registration,
+            measure=config.strain.measure,
+            structure=config.strain.structure,
+            thickness=config.strain.thickness,
+            axis=axis,
+            false_discovery_rate=config.strain.false_discovery_rate,
+        )
+    with clock.stage("points", 0.85):
+        points = blend_to_points(strain, reference.points)
+    said = (*notices, *registration.warnings, *affine.warnings, *strain.warnings)
+    return Result(
+        reference, current, registration, affine, strain, points, config, clock.seconds, tuple(dict.fromkeys(said))
+    )
+
+
+def auto_gauge_length(reference: Epoch, current: Epoch) -> float:
+    """Choose a gauge length [m] from the point spacing and the extent, to two digits."""
+    from scanstrain.cells import median_spacing
+
+    spacing = max(median_spacing(reference.points), median_spacing(current.points))
+    length = min(AUTO_SPACINGS * spacing, AUTO_SHARE * float(np.ptp(reference.points, axis=0).max()))
+    if not length > 0:
+        raise OptionError(
+            explain("gauge_length", "scans with distinct points", "coincident ones", "export them again")
+        )
+    return float(f"{length:.2g}")
+
+
+def tunnel_axis(reference: Epoch, gauge_length: float) -> FloatArray | None:
+    """Direction of a tunnel, from the normals of the reference surface; None where they do not show one."""
+    from scanstrain.cells import make_cells
+    from scanstrain.strain.axes import axis_of_normals
+
+    cells = make_cells(reference.points, gauge_length / 16)
+    return axis_of_normals(cells.normal[cells.planarity < 0.1])
+
+
+def _number(value: float | str) -> float | None:
+    """Turn the word auto into None."""
+    return None if isinstance(value, str) else float(value)
+
+
+@dataclass
+class Clock:
+    """Seconds per stage, and progress to whoever wants to hear it."""
+
+    progress: Progress | None = None
+    seconds: dict[str, float] = field(default_factory=dict)
+
+    def say(self, phrase: str, share: float) -> None:
+        """Report progress."""
+        if self.progress:
+            self.progress(phrase, share)
+
+    @contextmanager
+    def stage(self, name: str, share: float) -> Iterator[None]:
+        """Time a stage."""
+        self.say(name, share)
+        start = time.perf_counter()
+        yield
+        self.seconds[name] = time.perf_counter() - start

@@ -1,0 +1,316 @@
+# SPDX-License-Identifier: MIT
+"""Registration of two epochs: the stage from start to result."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from itertools import compress
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.cells import median_spacing
+from scanstrain.epoch import Epoch
+from scanstrain.errors import OverlapError, RegistrationError, explain
+from scanstrain.registration.coarse import choose_start, refuse_apart, to_grid
+from scanstrain.registration.fit import MIN_MATCHES, align, level_metric, metric_of, motion, step_of, total
+from scanstrain.registration.options import Options, check
+from scanstrain.registration.report import assemble
+from scanstrain.registration.result import Registration
+from scanstrain.registration.rigid import inverse
+from scanstrain.registration.scale import determined
+from scanstrain.registration.stable import (
+    Ground,
+    Patches,
+    agreeing,
+    choose_ground,
+    make_patches,
+    patch_of_blocks,
+)
+from scanstrain.registration.surfaces import Surface, make_surface, pyramid
+from scanstrain.registration.trace import follow
+from scanstrain.registration.weak import complement, split
+from scanstrain.registration.work import Work
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+
+BLOCK_SPACINGS = 12.0
+"""Final block width in point spacings: some 140 points a block, whose plane is known far better than its centre."""
+CLUTTER_SPACINGS = 4.0
+"""The same among furniture or vegetation, where wide blocks find no plane; narrower ones hold too few points."""
+MIN_FLAT = 0.5
+"""Share of the points in flat blocks below which a scan counts as cluttered."""
+WANTED_BLOCKS = 60
+"""Small objects get narrower blocks, so that about so many are left."""
+LEAST_BUDGET = 1e-3
+"""Weak means a standard error above the noise of one point, but never below this [m]."""
+MAX_CUTS = 6
+"""Most times that the current epoch is cut again in the reference's own grid."""
+SETTLED = 0.1
+"""Cutting again is over when it moves the result by less than this part of its standard error."""
+MIN_PATCHES, MIN_SHARE = 6, 0.1
+"""Fewer stable patches, or less of the surface, are no ground to stand on."""
+
+
+def register(
+    reference: Epoch,
+    current: Epoch,
+    *,
+    start: str | FloatArray = "auto",
+    stable: str | BoolArray = "auto",
+    capture_range: float = 0.3,
+    seed: int = 0,
+    max_iterations: int = 60,
+    progress: Callable[[float], None] | None = None,
+) -> Registration:
+    """Estimate the rigid motion that brings the current epoch into the reference frame, on stable ground.
+
+    Robust symmetric point-to-plane fit of block centres and planes, coarse to fine (`match.observe`, `fit.align`);
+    stable ground by patches that share one motion (`stable.choose_ground`); covariance by leaving out patches
+    (`covariance.estimate`). Six parameters: a scale would absorb uniform strain and is only reported.
+
+    Motions that the surfaces do not fix (`weak.split`) are held at their start value: what the fit moved along them
+    is taken back before the last iterations, which leave them out. In the covariance each carries a standard
+    deviation of a third of `capture_range` at the place that it moves most: the capture range is taken as the
+    three-sigma limit of the start. `WeakDirection.sd` is the same number.
+
+    Parameters
+    ----------
+    reference, current : Epoch
+        In one local frame: the same `origin`, coordinates within 10 km of it.
+    start : {"auto", "identity", "coarse"} or ndarray of shape (4, 4)
+        Where to begin. "auto": the poses as given where the surfaces then fit, otherwise surface features. A matrix
+        takes local current coordinates to local reference coordinates.
+    stable : {"auto", "all"} or ndarray of shape (n_reference,), bool
+        Reference points on stable ground, all of them, or "auto": the patches that share one motion.
+    capture_range : float
+        How far apart [m] the surfaces may lie at the start; width of the first blocks.
+    seed : int
+        Of the random choices in the coarse start and in the search for stable ground.
+    max_iterations : int
+        Most iterations at any one level.
+    progress : callable, optional
+        Called with the finished share, 0 to 1.
+
+    Returns
+    -------
+    Registration
+
+    Raises
+    ------
+    OptionError
+        Options out of range, origins that differ, coordinates that are not local.
+    OverlapError
+        The epochs do not show the same surface.
+    RegistrationError
+        Nothing stable was found, or the fit did not converge.
+    MissingDependencyError
+        A coarse start is needed and open3d cannot be loaded.
+    """
+    options = Options(start, stable, capture_range, seed, max_iterations, progress)
+    check(reference, current, options)
+    work, whole, started = _begin(reference, current, options)
+    options.report(0.5)
+    _find_ground(work, options)
+    _decide_weak(work)
+    options.report(0.6)
+    _finish(work, current.points, options)
+    options.report(0.95)
+    result = assemble(work, whole, reference, options, started)
+    options.report(1.0)
+    return result
+
+
+def level_widths(points: int, spacing: float, spacings: float, capture_range: float) -> list[float]:
+    """Choose block widths [m] from the capture range down to a number of point spacings, halving.
+
+    >>> level_widths(1_000_000, 0.01, 12, 0.3)
+    [0.24, 0.12]
+    """
+    small = np.sqrt(points * spacing**2 / WANTED_BLOCKS)
+    finest = max(min(spacings * spacing, small, capture_range), CLUTTER_SPACINGS * spacing)
+    widths = [float(finest)]
+    while widths[0] * 1.5 < capture_range:
+        widths.insert(0, min(widths[0] * 2, capture_range))
+    return widths
+
+
+def _cut(reference: FloatArray, current: FloatArray, options: Options) -> tuple[list[Surface], list[Surface]]:
+    """Cut both epochs into blocks, from wide to fine."""
+    spacing = max(median_spacing(reference), median_spacing(current))
+    if not spacing > 0:
+        got = "a spacing of zero"
+        raise OverlapError(explain("registration", "points in different places", got, "export the scans again"))
+    points = min(len(reference), len(current))
+    widths = level_widths(points, spacing, BLOCK_SPACINGS, options.capture_range)
+    mine = pyramid(reference, widths, own_grid=False)
+    if mine[-1].flat_share() < MIN_FLAT:
+        widths = level_widths(points, spacing, CLUTTER_SPACINGS, options.capture_range)
+        mine = pyramid(reference, widths, own_grid=False)
+    theirs = pyramid(current, widths, own_grid=True)
+    # A small object has too few wide blocks to be fitted by.
+    enough = [min(a.flat(), b.flat()) >= 2 * MIN_MATCHES for a, b in zip(mine[:-1], theirs[:-1], strict=True)]
+    enough.append(True)
+    return list(compress(mine, enough)), list(compress(theirs, enough))
+
+
+def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Surface, str]:
+    """Cut both epochs, choose a start and come down to the finest level with all of the ground."""
+    whole, theirs = _cut(reference.points, current.points, options)
+    mine = whole
+    if isinstance(options.stable, np.ndarray):
+        mine = pyramid(reference.points[options.stable], [s.width for s in whole], own_grid=False)
+    _check_blocks(mine[-1])
+    options.report(0.2)
+    if isinstance(options.start, np.ndarray):
+        T, started = to_grid(options.start, theirs[-1]), "given"
+    else:
+        if options.start == "auto":
+            refuse_apart(reference.points, current.points)
+        T, started = choose_start(whole, theirs, to_grid(np.eye(4), theirs[-1]), options.start, options.seed)
+    T_start = T @ theirs[-1].T_grid_epoch
+    iterations = 0
+    for a, b in zip(mine, theirs, strict=True):
+        fit = align(a, b, T, metric=level_metric(a), **_rough(a, options))
+        T, iterations = fit.T_ref_grid, iterations + fit.iterations
+    index, count = patch_of_blocks(mine[-1])
+    work = Work(mine[-1], theirs[-1], fit, T, T_start, level_metric(mine[-1]), index, count)
+    work.take(fit)
+    work.iterations = iterations
+    return work, whole[-1], started
+
+
+def _rough(surface: Surface, options: Options) -> dict[str, float | int]:
+    """Limits for a fit that is not the last one."""
+    width = surface.width
+    return {"budget": width / 4, "tolerance": 1e-3 * width, "limit": options.max_iterations}
+
+
+def _check_blocks(surface: Surface) -> None:
+    if surface.flat() < MIN_MATCHES:
+        raise RegistrationError(
+            explain(
+                "registration",
+                f"at least {MIN_MATCHES} flat blocks {surface.width:.3g} m wide on stable ground",
+                f"{surface.flat()}",
+                "give a larger stable zone or a denser scan",
+            )
+        )
+
+
+def _find_ground(work: Work, options: Options) -> None:
+    """Choose stable patches and fit them alone."""
+    if isinstance(options.stable, str) and options.stable == "auto":
+        rows = work.fit.rows
+        seen = make_patches(rows, work.patch, work.patches)
+        ground = choose_ground(seen, work.fit.strong, work.metric, rows.place, options.seed)
+        _check_ground(ground, seen)
+        work.T = step_of(ground.motion, work.metric) @ work.T
+        work.ground, work.keep = ground, ground.stable[work.patch]
+    work.take(
+        align(
+            work.reference,
+            work.current,
+            work.T_ref_grid,
+            metric=work.metric,
+            keep=work.keep,
+            **_rough(work.reference, options),
+        )
+    )
+    work.metric = metric_of(work.fit.rows.place[work.fit.weight > 0])
+
+
+def _check_ground(ground: Ground, seen: Patches) -> None:
+    if ground.stable.sum() < MIN_PATCHES or ground.share < MIN_SHARE:
+        found = f"{int(ground.stable.sum())} of {int((seen.blocks > 0).sum())} patches, {ground.share:.1%}"
+        raise RegistrationError(
+            explain(
+                "stable ground",
+                f"at least {MIN_PATCHES} patches and {MIN_SHARE:.0%} of the matched surface that share one motion",
+                found,
+                "name stable ground yourself",
+            )
+        )
+
+
+def _decide_weak(work: Work) -> None:
+    """Split the motions while the two grids are still independent, and take back what moved along weak ones."""
+    at = work.metric
+    # Same pose, rows about the final pivot.
+    fit = align(
+        work.reference,
+        work.current,
+        work.T_ref_grid,
+        metric=at,
+        budget=np.inf,
+        tolerance=np.inf,
+        limit=1,
+        keep=work.keep,
+    )
+    full, shared, _ = total(fit.rows, fit.weight)
+    used = fit.weight > 0
+    noise = float(np.median(work.reference.cells.roughness[fit.rows.block[used]]))
+    work.strong, work.weak = split(
+        full[:6, :6],
+        shared[:6, :6],
+        variance=fit.variance(),
+        places=fit.rows.place[used],
+        metric=at,
+        budget=max(noise, LEAST_BUDGET),
+    )
+    if not work.strong.shape[1]:
+        raise RegistrationError(
+            explain("registration", "a surface that fixes some motion", "none fixed", "scan more of the object")
+        )
+    work.scale_known = determined(fit, work.strong)
+    if work.weak.shape[1]:
+        work.weak = follow(work)
+        work.strong = complement(work.weak)
+    back = work.weak @ (work.weak.T @ motion(work.T @ inverse(work.T_start), at))
+    work.T = step_of(-back, at) @ work.T
+
+
+def _finish(work: Work, points: FloatArray, options: Options) -> None:
+    """Cut the current epoch in the reference's own grid, where both show the same pieces, and fit to the end."""
+    for cut in range(MAX_CUTS):
+        work.current = make_surface(points, work.reference.width, T_grid_epoch=work.T)
+        work.take(
+            align(
+                work.reference,
+                work.current,
+                np.eye(4),
+                metric=work.metric,
+                budget=np.inf,
+                tolerance=0.0,
+                limit=options.max_iterations,
+                strong=(work.strong, work.weak),
+                keep=work.keep,
+            )
+        )
+        changed = cut < 2 and _readmit(work)
+        step = motion(work.fit.T_ref_grid, work.metric)
+        moved = float(np.linalg.norm(step[:3]) + np.linalg.norm(step[3:]))
+        if not changed and moved < SETTLED * work.fit.standard_error():
+            break
+    if not work.fit.converged:
+        raise RegistrationError(
+            explain(
+                "registration",
+                f"convergence within {options.max_iterations} iterations at one level",
+                f"a last step of {work.fit.step * 1e3:.3g} mm against a standard error of "
+                f"{work.fit.standard_error() * 1e3:.3g} mm",
+                "raise max_iterations or name stable ground",
+            )
+        )
+
+
+def _readmit(work: Work) -> bool:
+    """Let stable patches leave and others return, by their residuals now; say whether any did."""
+    if work.ground is None:
+        return False
+    seen = make_patches(work.fit.rows, work.patch, work.patches)
+    keep = agreeing(seen, work.ground.scale)[work.patch]
+    changed = bool((keep[work.fit.rows.block] != (work.fit.weight > 0)).any())
+    work.keep = keep
+    return changed

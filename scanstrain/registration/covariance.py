@@ -1,0 +1,121 @@
+# SPDX-License-Identifier: MIT
+"""Covariance of the fitted motion from patches, so that errors which neighbours share are counted."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.registration.fit import TUKEY, Fit, sums
+from scanstrain.registration.match import Metric
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+RESOLUTION = 1e-9
+"""Standard error [m] that no result goes below: rounding of coordinates."""
+
+
+def estimate(
+    fit: Fit, patch: IntArray, count: int, basis: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Solve for unknowns about the fitted motion and estimate their covariance.
+
+    Leave-one-patch-out (jackknife, the CR3 form of a cluster-robust sandwich): dropping patch P changes the estimate by
+    (N - N_P)^-1 g_P exactly, and the sum of squares of these changes, times (G - 1)/G, is the covariance, whatever the
+    correlation inside a patch. Rows are weighted robustly, so both are divided by the square of the mean slope of the
+    score over the mean weight (Huber 1981; formula from memory). The covariance of independent blocks, from the same
+    residuals, is a lower limit in every direction.
+
+    Parameters
+    ----------
+    fit : Fit
+    patch : ndarray of shape (b,), int64
+        Patch of every reference block.
+    count : int
+        Number of patches.
+    basis : ndarray of shape (7, k)
+        Unknowns to solve for, in metric unknowns with scale last.
+
+    Returns
+    -------
+    step : ndarray of shape (k,)
+        Estimate about the present motion [m].
+    covariance : ndarray of shape (k, k)
+        [m^2].
+    information : ndarray of shape (k, k)
+        Weighted sum of the rows [1/m^2].
+    """
+    rows, used = fit.rows, fit.weight > 0
+    group = patch[rows.block]
+    N_P, _, g_P = sums(rows.row, rows.half, rows.residual, fit.weight, group, count)
+    N_P = np.einsum("ai,gab,bj->gij", basis, N_P, basis)
+    g_P = g_P @ basis
+    N = N_P.sum(axis=0)
+    step = np.linalg.solve(N, g_P.sum(axis=0))
+    g_P = g_P - N_P @ step
+    present = np.unique(group[used])
+    left = N - N_P[present]
+    # A patch without which the rest fixes nothing cannot be left out: its own share counts as it stands.
+    alone = np.linalg.eigvalsh(left)[:, 0] < 1e-3 * np.linalg.eigvalsh(N)[0]
+    left[alone] = N
+    change = np.linalg.solve(left, g_P[present][..., None])[..., 0]
+    G, k = len(present), len(N)
+    clustered = change.T @ change * (G - 1) / G
+
+    a = rows.row[used] @ basis
+    e = fit.weight[used] * (rows.residual[used] - a @ step)
+    inverse = np.linalg.inv(N)
+    m = len(e)
+    independent = inverse @ ((a * (e**2)[:, None]).T @ a) @ inverse * m / max(m - k, 1)
+    both = at_least(clustered, independent) / _score_ratio(fit) ** 2
+    return step, both + RESOLUTION**2 * np.eye(k), N
+
+
+def _score_ratio(fit: Fit) -> float:
+    """Mean slope of the biweight's score over its mean weight: 0.83 on normal errors, 1 where nothing is cut."""
+    rows, used = fit.rows, fit.weight > 0
+    u = rows.residual[used] / (rows.sd[used] * TUKEY * fit.scale)
+    slope = (1 - u**2) * (1 - 5 * u**2) / rows.sd[used] ** 2
+    return float(max(slope.sum() / fit.weight[used].sum(), 0.5))
+
+
+def at_least(covariance: FloatArray, floor: FloatArray) -> FloatArray:
+    """Raise a covariance to a floor in every direction, and leave it where it is larger.
+
+    Examples
+    --------
+    >>> at_least(np.diag([4.0, 1.0]), np.diag([2.0, 3.0])).round(12)
+    array([[4., 0.],
+           [0., 3.]])
+    """
+    values, vectors = np.linalg.eigh(floor)
+    root = vectors * np.sqrt(np.maximum(values, 1e-14 * max(values[-1], 1e-30)))
+    white = np.linalg.inv(root)
+    size, turn = np.linalg.eigh(white @ covariance @ white.T)
+    back = root @ turn
+    return np.asarray((back * np.maximum(size, 1.0)) @ back.T)
+
+
+def physical(covariance: FloatArray, metric: Metric) -> FloatArray:
+    """Turn a 6x6 covariance of metric unknowns into one of (rotation [rad], translation [m]) at the pivot."""
+    scale = np.r_[np.full(3, 1 / metric.arm), np.ones(3)]
+    out = covariance * scale[:, None] * scale[None, :]
+    return np.asarray((out + out.T) / 2)
+
+
+def full_covariance(
+    solved: FloatArray, strong: FloatArray, weak: FloatArray, weak_sd: FloatArray
+) -> FloatArray:
+    """Put the 6x6 covariance together: estimated where solved for, the start's uncertainty where held.
+
+    Parameters
+    ----------
+    solved : ndarray of shape (r, r)
+        Covariance in the strong directions [m^2].
+    strong, weak : ndarray of shape (6, r), (6, k)
+        Orthonormal bases of the two parts.
+    weak_sd : ndarray of shape (k,)
+        Standard deviation of the start along each weak direction [m].
+    """
+    return np.asarray(strong @ solved @ strong.T + (weak * weak_sd**2) @ weak.T)

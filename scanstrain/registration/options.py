@@ -1,0 +1,117 @@
+# SPDX-License-Identifier: MIT
+"""Options of the registration stage, checked once at the door."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.epoch import MIN_POINTS, Epoch
+from scanstrain.errors import OptionError, explain
+from scanstrain.registration.rigid import is_rigid
+from scanstrain.registry import unknown_name
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+
+STARTS = ("auto", "identity", "coarse")
+GROUNDS = ("auto", "all")
+MAX_COORDINATE = 1e4
+"""Local coordinates beyond this [m] lose digits in the normal equations: the origin is no local one."""
+
+
+@dataclass(frozen=True, slots=True)
+class Options:
+    """What `register` was called with."""
+
+    start: str | FloatArray
+    stable: str | BoolArray
+    capture_range: float
+    seed: int
+    max_iterations: int
+    progress: Callable[[float], None] | None
+
+    def report(self, done: float) -> None:
+        """Pass on the finished share."""
+        if self.progress is not None:
+            self.progress(done)
+
+
+def check(reference: Epoch, current: Epoch, options: Options) -> None:
+    """Refuse what the stage cannot work on.
+
+    Raises
+    ------
+    OptionError
+    """
+    _check_frames(reference, current)
+    _check_choice("start", options.start, STARTS)
+    _check_choice("stable", options.stable, GROUNDS)
+    if isinstance(options.start, np.ndarray) and not is_rigid(options.start):
+        raise OptionError(
+            explain(
+                "start",
+                "a 4x4 matrix of a rotation and a translation",
+                "a matrix that scales, mirrors, shears or is not finite",
+                "give a rigid motion, local current to local reference coordinates",
+            )
+        )
+    if isinstance(options.stable, np.ndarray):
+        _check_mask(options.stable, len(reference))
+    if not (np.isfinite(options.capture_range) and options.capture_range > 0):
+        raise OptionError(
+            explain("capture_range", "a length in metres above 0", f"{options.capture_range}", "give 0.3")
+        )
+    if options.max_iterations < 1:
+        raise OptionError(
+            explain("max_iterations", "at least 1", f"{options.max_iterations}", "give for example 60")
+        )
+
+
+def _check_frames(reference: Epoch, current: Epoch) -> None:
+    if not np.array_equal(reference.origin, current.origin):
+        raise OptionError(
+            explain(
+                "registration",
+                "two epochs in one local frame",
+                f"origins {reference.origin.tolist()} and {current.origin.tolist()}",
+                "shift one with Epoch.shifted",
+            )
+        )
+    for epoch in (reference, current):
+        largest = float(np.abs(epoch.points).max()) if len(epoch) else 0.0
+        if not largest <= MAX_COORDINATE:
+            raise OptionError(
+                explain(
+                    f"registration: {epoch.label or 'epoch'}",
+                    f"local coordinates within {MAX_COORDINATE:.0f} m of the shared origin",
+                    f"{largest:.6g} m",
+                    "shift both epochs to an origin on the object",
+                )
+            )
+
+
+def _check_choice(name: str, value: str | FloatArray | BoolArray, known: tuple[str, ...]) -> None:
+    if isinstance(value, np.ndarray):
+        return
+    if value not in known:
+        raise OptionError(unknown_name(name, str(value), list(known)))
+
+
+def _check_mask(mask: BoolArray, points: int) -> None:
+    if mask.shape != (points,) or mask.dtype != np.bool_:
+        raise OptionError(
+            explain(
+                "stable",
+                f"one bool a reference point, shape ({points},)",
+                f"{mask.dtype} of shape {mask.shape}",
+                "make a mask of the reference points",
+            )
+        )
+    if mask.sum() < MIN_POINTS:
+        raise OptionError(
+            explain("stable", f"at least {MIN_POINTS} points", f"{int(mask.sum())}", "name a larger stable area")
+        )

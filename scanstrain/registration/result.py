@@ -1,0 +1,109 @@
+# SPDX-License-Identifier: MIT
+"""What the registration stage hands on."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class WeakDirection:
+    """A rigid motion that the surfaces do not fix.
+
+    Parameters
+    ----------
+    description : str
+        The motion in words, for example "slide along the tunnel axis".
+    vector : ndarray of shape (6,)
+        Unit direction in (rotation [rad] x lever arm [m], translation [m]) about the pivot, rotation first.
+    sd : float
+        Standard error of that motion at the farthest used point [m].
+    """
+
+    description: str
+    vector: FloatArray
+    sd: float
+
+
+@dataclass(frozen=True, slots=True)
+class Registration:
+    """The rigid motion from the current epoch into the reference frame, and how well it is known.
+
+    Parameters
+    ----------
+    T_ref_cur : ndarray of shape (4, 4)
+        Takes local current coordinates to local reference coordinates [m]: `x_ref = R x_cur + t`.
+    origin : ndarray of shape (3,)
+        Shared origin of the local frame in file coordinates [m].
+    pivot : ndarray of shape (3,)
+        Local point about which rotation and translation are least correlated [m].
+    covariance : ndarray of shape (6, 6)
+        Of (rotation vector [rad], translation at the pivot [m]), from patches, correlated errors included.
+    rms : float
+        Weighted root mean square of the normal residuals on stable ground [m].
+    stable : ndarray of shape (n_reference,), bool
+        Reference points on ground that was used as stable.
+    overlap : float
+        Share of the reference surface that the current epoch also shows.
+    scale_ppm, scale_ppm_sd : float
+        Scale of current over reference minus one, a diagnostic in parts per million; never applied.
+    weak_directions : tuple of WeakDirection
+        Motions that are not fixed by the data; they were held at the start value.
+    start : str
+        "identity" or "coarse": where the fine fit began.
+    """
+
+    T_ref_cur: FloatArray
+    origin: FloatArray
+    pivot: FloatArray
+    covariance: FloatArray
+    rms: float
+    stable: NDArray[np.bool_]
+    overlap: float
+    scale_ppm: float
+    scale_ppm_sd: float
+    weak_directions: tuple[WeakDirection, ...]
+    converged: bool
+    iterations: int
+    start: str
+    warnings: tuple[str, ...] = ()
+
+    @property
+    def stable_fraction(self) -> float:
+        """Share of the reference points that lie on stable ground."""
+        return float(self.stable.mean()) if len(self.stable) else 0.0
+
+    def file_matrix(self) -> FloatArray:
+        """Return the 4x4 matrix current -> reference in file coordinates (float64, row-major)."""
+        T = self.T_ref_cur.copy()
+        T[:3, 3] += self.origin - T[:3, :3] @ self.origin
+        return T
+
+    def displacement_covariance(self, points: FloatArray) -> FloatArray:
+        """Propagate the covariance of the rigid motion to places.
+
+        A rotation vector w and a translation t at the pivot move a point by w x (x - pivot) + t, so
+        J = [-[x - pivot]x, I] and the covariance there is J S J'.
+
+        Parameters
+        ----------
+        points : ndarray of shape (n, 3)
+            Local coordinates [m].
+
+        Returns
+        -------
+        ndarray of shape (n, 3, 3)
+            Covariance of the displacement caused by registration error [m^2].
+        """
+        arm = np.asarray(points, float) - self.pivot
+        J = np.zeros((len(arm), 3, 6))
+        J[:, 0, 1], J[:, 0, 2] = arm[:, 2], -arm[:, 1]
+        J[:, 1, 0], J[:, 1, 2] = -arm[:, 2], arm[:, 0]
+        J[:, 2, 0], J[:, 2, 1] = arm[:, 1], -arm[:, 0]
+        J[:, [0, 1, 2], [3, 4, 5]] = 1.0
+        return np.asarray(J @ self.covariance @ J.transpose(0, 2, 1))

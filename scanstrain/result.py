@@ -1,0 +1,59 @@
+# SPDX-License-Identifier: MIT
+"""What one comparison of two epochs gives: everything that the outputs are written from."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.epoch import Epoch
+from scanstrain.neighbourhood.result import AffineField
+from scanstrain.registration.result import Registration
+from scanstrain.strain.result import StrainField
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Result:
+    """One finished comparison; holds arrays and provenance, nothing that is open or written.
+
+    Parameters
+    ----------
+    reference, current : Epoch
+        The two scans as read, in one shared local frame, the current one not yet moved.
+    registration : Registration
+        The rigid motion from the current epoch into the reference frame.
+    field : AffineField
+        Local affine maps, one per gauge.
+    strain : StrainField
+        Strain, rotation and their errors, one row per gauge, in the same order as `field`.
+    points : mapping of str to ndarray of shape (n,)
+        Every attribute of `scanstrain.attributes.ATTRIBUTES` at the n points of `reference`, in their order and in
+        the attribute's type; NaN where the data do not support a value.
+    config : pydantic model
+        The resolved configuration; anything with `model_dump(mode="json")`.
+    timing : mapping of str to float
+        Seconds per stage.
+    warnings : tuple of str
+        Sentences for the user, in the order in which they arose.
+    """
+
+    reference: Epoch
+    current: Epoch
+    registration: Registration
+    field: AffineField
+    strain: StrainField
+    points: Mapping[str, NDArray[np.generic]]
+    config: Any
+    timing: Mapping[str, float]
+    warnings: tuple[str, ...] = ()
+
+    @property
+    def gauge_positions(self) -> FloatArray:
+        """Gauge places in file coordinates, shape (g, 3) [m]."""
+        return np.asarray(self.strain.position + self.reference.origin)

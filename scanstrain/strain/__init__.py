@@ -1,0 +1,8 @@
+# SPDX-License-Identifier: MIT
+"""Strain stage: from local affine maps to strain, rotation and bending with standard errors."""
+
+from scanstrain.strain.compute import compute_strain
+from scanstrain.strain.points import blend_to_points
+from scanstrain.strain.result import StrainField
+
+__all__ = ["StrainField", "blend_to_points", "compute_strain"]

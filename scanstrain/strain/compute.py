@@ -1,0 +1,242 @@
+# SPDX-License-Identifier: MIT
+"""The strain stage: local affine maps in, strain, rotation, bending and their errors out."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from scanstrain.attributes import ATTRIBUTES
+from scanstrain.errors import OptionError, explain
+from scanstrain.linalg import components_2d, sandwich, tensor_2d
+from scanstrain.neighbourhood.result import AffineField, Observed
+from scanstrain.registration.result import Registration
+from scanstrain.registry import unknown_name
+from scanstrain.strain.axes import STRUCTURES, structure_axes
+from scanstrain.strain.bending import bending_strain
+from scanstrain.strain.gauges import Gauges, fitted_gauges
+from scanstrain.strain.kinematics import Kinematics, choose_measure, kinematics
+from scanstrain.strain.measures import MEASURES
+from scanstrain.strain.result import StrainField
+from scanstrain.strain.rotation import rotation_in_space
+from scanstrain.strain.significance import NORMAL_95, VECTOR_95, benjamini_hochberg, wald
+from scanstrain.strain.surface import principal, tensor_in_space
+from scanstrain.strain.uncertainty import magnitude_sd, principal_sd, worst_direction_sd
+
+FloatArray = NDArray[np.float64]
+Values = dict[str, FloatArray]
+
+_UN = 2
+_POINTS_CAP = 65535
+
+
+def compute_strain(
+    field: AffineField,
+    *,
+    registration: Registration | None = None,
+    measure: str = "auto",
+    structure: str = "free",
+    thickness: float | None = None,
+    axis: ArrayLike | None = None,
+    false_discovery_rate: float = 0.05,
+) -> StrainField:
+    """Turn local affine maps into strain, rotation and change of curvature with standard errors.
+
+    Parameters
+    ----------
+    field : AffineField
+        From the neighbourhood stage.
+    registration : Registration, optional
+        Its covariance is added to displacement, tilt and spin; never to strain and curvature, which do not
+        depend on the datum. Without it the registration counts as exact.
+    measure : {"auto", "small", "green_lagrange", "almansi", "hencky", "biot"}
+        Strain measure; all are formed after the local rotation is removed. "auto" takes small strain unless a
+        significant strain passes 1 % or a significant rotation 0.01 rad, then Hencky strain.
+    structure : {"tunnel", "wall", "free"}
+        Meaning of the axes u and v: hoop and axial, or horizontal and upward.
+    thickness : float, optional
+        Thickness of the wall or lining [m]; gives `bend_1` and `bend_2`.
+    axis : array_like of shape (3,), optional
+        Direction of a tunnel's axis; found from the normals where not given.
+    false_discovery_rate : float
+        Accepted share of false ones among the discoveries.
+
+    Returns
+    -------
+    StrainField
+
+    Raises
+    ------
+    OptionError
+        An option is unknown, out of range or contradicts another.
+    """
+    _check(measure, structure, thickness, axis, false_discovery_rate)
+    gauges = fitted_gauges(field, registration)
+    axes, notes = structure_axes(
+        gauges.frame, structure=structure, axis=None if axis is None else np.asarray(axis, dtype=np.float64)
+    )
+    reason = "Set by the caller."
+    if measure == "auto":
+        measure, reason = choose_measure(gauges, rate=false_discovery_rate)
+    moved = kinematics(gauges, measure)
+    values = {
+        **_displacement(gauges),
+        **_strain(gauges, moved, axes),
+        **_rotation(gauges, moved),
+        **_bending(gauges, moved, thickness),
+        "significance": wald(gauges.parameters, gauges.datum_covariance, gauges.observable),
+    }
+    limits = _detection_limits(gauges, moved)
+    return StrainField(
+        position=field.position,
+        normal=np.asarray(field.frame[:, :, 2]),
+        axes=np.asarray(gauges.scatter(axes, np.nan), dtype=np.float64),
+        values=_table(field, gauges, values, gauges.observed_bits(axes), false_discovery_rate),
+        status=np.asarray(field.status, dtype=np.uint8),
+        measure=measure,
+        measure_reason=reason,
+        detection_limit={
+            name: np.asarray(gauges.scatter(limit, np.nan), dtype=np.float64) for name, limit in limits.items()
+        },
+        gauge_length=field.gauge_length,
+        gauge_spacing=field.gauge_spacing,
+        warnings=notes + _what_is_missing(gauges),
+    )
+
+
+def _check(
+    measure: str, structure: str, thickness: float | None, axis: ArrayLike | None, false_discovery_rate: float
+) -> None:
+    if measure != "auto" and measure not in MEASURES:
+        raise OptionError(unknown_name("measure", measure, ["auto", *MEASURES]))
+    if structure not in STRUCTURES:
+        raise OptionError(unknown_name("structure", structure, list(STRUCTURES)))
+    if thickness is not None and not (np.isfinite(thickness) and thickness > 0):
+        raise OptionError(
+            explain(
+                "thickness", "a length in metres above 0", f"{thickness}", "give for example 0.25, or leave it out"
+            )
+        )
+    if not 0 < false_discovery_rate < 1:
+        raise OptionError(
+            explain(
+                "false_discovery_rate", "a share between 0 and 1", f"{false_discovery_rate}", "give for example 0.05"
+            )
+        )
+    if axis is None:
+        return
+    if structure != "tunnel":
+        raise OptionError(
+            explain(
+                "axis", 'structure "tunnel"', f'structure "{structure}"', "leave the axis out or change the structure"
+            )
+        )
+    direction = np.asarray(axis, dtype=np.float64)
+    if direction.shape != (3,) or not np.isfinite(direction).all() or not direction.any():
+        raise OptionError(
+            explain("axis", "three numbers that are not all zero", f"{axis}", "give for example [0, 1, 0]")
+        )
+
+
+def _only(where: NDArray[np.bool_], **values: FloatArray) -> Values:
+    """Blank what is not observable."""
+    return {name: np.where(where, value, np.nan) for name, value in values.items()}
+
+
+def _displacement(gauges: Gauges) -> Values:
+    vector = np.einsum("gij,gj->gi", gauges.frame, gauges.displacement)
+    variance = gauges.datum_covariance[:, _UN, _UN]
+    return _only(gauges.has_displacement, disp_x=vector[:, 0], disp_y=vector[:, 1], disp_z=vector[:, 2]) | _only(
+        gauges.has(Observed.NORMAL), disp_n=gauges.displacement[:, _UN], disp_n_sd=np.sqrt(variance)
+    )
+
+
+def _strain(gauges: Gauges, moved: Kinematics, axes: FloatArray) -> Values:
+    E = tensor_2d(moved.strain)
+    tangents = gauges.frame[:, :, :2]
+    space = tensor_in_space(E, tangents)
+    own = components_2d(sandwich(np.einsum("gia,gib->gab", axes, tangents), E))
+    larger, smaller = principal(E)
+    larger_sd, smaller_sd = principal_sd(moved.strain, moved.strain_covariance)
+    return _only(
+        gauges.has(Observed.STRAIN),
+        strain_xx=space[:, 0, 0],
+        strain_yy=space[:, 1, 1],
+        strain_zz=space[:, 2, 2],
+        strain_xy=space[:, 0, 1],
+        strain_xz=space[:, 0, 2],
+        strain_yz=space[:, 1, 2],
+        strain_1=larger,
+        strain_2=smaller,
+        strain_1_sd=larger_sd,
+        strain_2_sd=smaller_sd,
+        shear_max=larger - smaller,
+        dilation=moved.mapped.area - 1.0,
+        strain_u=own[:, 0],
+        strain_v=own[:, 1],
+        shear_uv=own[:, 2],
+    )
+
+
+def _rotation(gauges: Gauges, moved: Kinematics) -> Values:
+    w = rotation_in_space(moved.mapped, gauges.frame)
+    tilted, spun = gauges.has(Observed.TILT), gauges.has(Observed.SPIN)
+    return {
+        **_only(tilted & spun, rot_x=w[:, 0], rot_y=w[:, 1], rot_z=w[:, 2]),
+        **_only(
+            tilted,
+            tilt=np.hypot(moved.tilt[:, 0], moved.tilt[:, 1]),
+            tilt_sd=magnitude_sd(moved.tilt, moved.tilt_covariance),
+        ),
+        **_only(spun, spin=moved.spin, spin_sd=np.sqrt(moved.spin_variance)),
+    }
+
+
+def _bending(gauges: Gauges, moved: Kinematics, thickness: float | None) -> Values:
+    larger, smaller = principal(tensor_2d(moved.curvature))
+    errors = principal_sd(moved.curvature, moved.curvature_covariance)
+    seen = gauges.has(Observed.CURVATURE)
+    values = _only(seen, curv_1=larger, curv_2=smaller, curv_sd=np.maximum(*errors))
+    bent = seen & (thickness is not None)
+    half = thickness or 0.0
+    return values | _only(bent, bend_1=bending_strain(larger, half), bend_2=bending_strain(smaller, half))
+
+
+def _detection_limits(gauges: Gauges, moved: Kinematics) -> Values:
+    """Smallest values that are significant at 95 %, one test at a time.
+
+    Strain and curvature: along the least well determined direction. Tilt is the length of two components, so its
+    limit is that of a length, 2.45 standard errors of the worse one instead of 1.96.
+    """
+    roots = principal(moved.tilt_covariance)[0]
+    return {
+        **_only(gauges.has(Observed.NORMAL), disp_n=NORMAL_95 * np.sqrt(gauges.datum_covariance[:, _UN, _UN])),
+        **_only(gauges.has(Observed.TILT), tilt=VECTOR_95 * np.sqrt(roots)),
+        **_only(gauges.has(Observed.SPIN), spin=NORMAL_95 * np.sqrt(moved.spin_variance)),
+        **_only(gauges.has(Observed.STRAIN), strain=NORMAL_95 * worst_direction_sd(moved.strain_covariance)),
+        **_only(gauges.has(Observed.CURVATURE), curvature=NORMAL_95 * worst_direction_sd(moved.curvature_covariance)),
+    }
+
+
+def _table(
+    field: AffineField, gauges: Gauges, values: Values, bits: NDArray[np.uint8], rate: float
+) -> Mapping[str, NDArray[np.generic]]:
+    """Every attribute over all gauges: NaN, or the reason code, where there is no fit."""
+    codes: dict[str, NDArray[np.generic]] = {
+        "discovery": gauges.scatter(benjamini_hochberg(values["significance"], rate).astype(np.uint8), 0),
+        "observed": gauges.scatter(bits, 0),
+        "status": np.asarray(field.status, dtype=np.uint8),
+        "gauge_points": np.clip(field.points, 0, _POINTS_CAP).astype(np.uint16),
+    }
+    return {a.name: codes[a.name] if a.name in codes else gauges.scatter(values[a.name], np.nan) for a in ATTRIBUTES}
+
+
+def _what_is_missing(gauges: Gauges) -> tuple[str, ...]:
+    if len(gauges) and not gauges.has(Observed.STRAIN).any():
+        return (
+            "In-plane strain and spin are not observable at any gauge: the surface shows no relief or texture that "
+            "fixes tangential motion. Normal displacement, tilt and change of curvature are not affected.",
+        )
+    return ()

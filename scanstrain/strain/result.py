@@ -1,0 +1,50 @@
+# SPDX-License-Identifier: MIT
+"""What the strain stage hands on."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class StrainField:
+    """Strain, rotation and their errors, one row per gauge.
+
+    Parameters
+    ----------
+    position, normal : ndarray of shape (g, 3)
+        Gauge places in local coordinates [m] and unit normals towards the free side.
+    axes : ndarray of shape (g, 3, 2)
+        Unit tangents u and v of the structure at each gauge: hoop and axial, or horizontal and upward.
+    values : mapping of str to ndarray of shape (g,)
+        Every attribute of `scanstrain.attributes.ATTRIBUTES`, NaN where not observable (codes: 0 or the reason).
+    status : ndarray of shape (g,), uint8
+        Reason codes of `neighbourhood.result.Status`.
+    measure : str
+        The strain measure that was used: small, green_lagrange, almansi, hencky or biot.
+    measure_reason : str
+        Why that one.
+    detection_limit : mapping of str to ndarray of shape (g,)
+        Smallest value that is significant at 95 % for disp_n, tilt, spin, strain and curvature at each gauge.
+    """
+
+    position: FloatArray
+    normal: FloatArray
+    axes: FloatArray
+    values: Mapping[str, NDArray[np.generic]]
+    status: NDArray[np.uint8]
+    measure: str
+    measure_reason: str
+    detection_limit: Mapping[str, FloatArray]
+    gauge_length: float
+    gauge_spacing: float
+    warnings: tuple[str, ...] = ()
+
+    def __len__(self) -> int:
+        return len(self.position)
