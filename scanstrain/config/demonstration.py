@@ -19,13 +19,13 @@ _SCENES = {
         "A service adit: three epochs of its lining, each compared with the first. Run it with: scanstrain"
         " run adit.toml. What really happened there stands in TRUTH.md beside the scans.",
         {"march": (3, 4), "june": (6, 10), "september": (9, 12)},
-        {"comparisons": "first", "structure": "tunnel", "gauge_length": 0.6},
+        {"comparisons": "first", "structure": "tunnel", "gauge_length": 0.8},
     ),
     "wall": (
         "A yard wall, before and after. Run it with: scanstrain run wall.toml. What really happened there "
         "stands in TRUTH.md beside the scans.",
         {"march": (3, 5), "september": (9, 13)},
-        {"comparisons": "first", "structure": "wall", "gauge_length": 0.6},
+        {"comparisons": "first", "structure": "wall", "gauge_length": 0.8},
     ),
 }
 _YEAR = 2031

@@ -113,12 +113,14 @@ def fit_affine(
     say = progress or (lambda phrase, share: None)
     spacing = gauge_spacing or gauge_length / 4
     width = _resolution(reference, current, gauge_length, resolution)
-    grey_reference, grey_current = _intensities(reference, current, gauge_length) if use_intensity else (None, None)
+    grey_reference, grey_current = (
+        _intensities(reference, current, gauge_length, width) if use_intensity else (None, None)
+    )
     radius = gauge_length / 2
     support = max(gauge_length / 4, 6 * width)
 
     say("surface model", 0.0)
-    finest = make_surface(reference.points, grey_reference, width, support)
+    finest = make_surface(reference.points, grey_reference, width, support, max(spacing, 4 * width))
     places, normals = place_gauges(finest.cells, spacing)
     gauges, warnings = frames_at(places, normals, make_cells(finest.cells.position, radius / 4), free_side, axis)
     state = Estimate(np.zeros((len(places), 12)), np.ones(len(places)))
@@ -129,8 +131,14 @@ def fit_affine(
         say(f"fit at {1e3 * step:.0f} mm", (number + 1) / (len(widths) + 2))
         last = number == len(widths) - 1
         wide = max(support, 6 * step)
-        ours = finest if last else make_surface(reference.points, grey_reference, step, wide)
-        level = Level(ours, make_surface(current.points, grey_current, step, wide), gauges, radius, spacing)
+        ours = finest if last else make_surface(reference.points, grey_reference, step, wide, max(spacing, 4 * step))
+        level = Level(
+            ours,
+            make_surface(current.points, grey_current, step, wide, max(spacing, 4 * step)),
+            gauges,
+            radius,
+            spacing,
+        )
         gate = max(ours.gate, 4 * step) if not last else ours.gate + step
         for turn in range(3 if last else 1):
             before = state.held[:, :3].copy()
@@ -192,12 +200,12 @@ def _pyramid(width: float, gauge_length: float) -> list[float]:
 
 
 def _intensities(
-    reference: Epoch, current: Epoch, gauge_length: float
+    reference: Epoch, current: Epoch, gauge_length: float, width: float
 ) -> tuple[FloatArray | None, FloatArray | None]:
     """Texture of both epochs, brought to a common spread so that the local gain starts near 1."""
     out = []
     for epoch in (reference, current):
-        texture = comparable_intensity(epoch, gauge_length)
+        texture = comparable_intensity(epoch, gauge_length, 2 * width)
         if texture is None:
             return None, None
         low, middle, high = np.percentile(texture, [16, 50, 84])

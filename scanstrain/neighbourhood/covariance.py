@@ -1,11 +1,10 @@
 # SPDX-License-Identifier: MIT
-"""How height and intensity vary over the surface: covariance models measured on the scan itself.
+"""How height and intensity vary over the surface: covariances measured on the scan itself, place by place.
 
-From a sample of places, all pairs of cells give the empirical semivariogram of intensity, and of height over the
-smooth surface. A nugget (noise of one point) plus one structured term is fitted; of three common families the one
-with the least weighted misfit is taken (Matheron's estimator; families as in Stein 1999, common practice). All
-three are differentiable in the mean square: the slope of a rougher process is not defined, and predicting one would
-count the noise of its slope as knowledge about tangential motion.
+Pairs of neighbouring cells give the empirical semivariogram of intensity, and of height over the smooth surface
+(Matheron's estimator). A nugget (noise of one point) plus one structured term is fitted. Family and length of the
+structured term are common to the scan; noise and sill are local, since range and incidence change the noise, and a
+textured wall may stand on a bare floor: with the wall's covariance the floor's noise would pass for texture.
 """
 
 from __future__ import annotations
@@ -18,18 +17,28 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import Cells
-from scanstrain.neighbourhood.smooth import SmoothSurface, _gather
+from scanstrain.neighbourhood.smooth import SmoothSurface, gather
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 LAGS = 6.0
 """Longest lag of the variogram, in cells: the distances over which a local prediction weighs its neighbours."""
-_BINS = 16
-_SAMPLES = 3000
+BINS = 10
+_SHORT, _LONG = 3, 4
+"""Bins at the two ends of the variogram whose difference shows structure."""
 _TABLE = 512
-SIGNIFICANT_SHARE = 4.0
-"""A structured term smaller than this many times its own standard error counts as absent."""
+SIGNIFICANT = 4.0
+"""A structured term counts where the rise of the variogram exceeds this many of its standard errors."""
+_FEWEST = 6
+"""Blocks that a region needs before its own variogram is believed."""
+FLOOR = 1e-6
+"""Least noise variance over sill: keeps the prediction well conditioned where a scan has no noise at all."""
+LEAST_NOISE = 0.3
+"""Least local noise variance over the scan's median: what falls below is an error of a local variogram."""
 
+# All families are differentiable in the mean square (Stein 1999, ch. 2). The slope of a rougher process is not
+# defined, and predicting one would count the noise of its slope as knowledge about tangential motion.
 FAMILIES: dict[str, Callable[[FloatArray], FloatArray]] = {
     "matern32": lambda q: (1 + np.sqrt(3) * q) * np.exp(-np.sqrt(3) * q),
     "matern52": lambda q: (1 + np.sqrt(5) * q + 5 * q**2 / 3) * np.exp(-np.sqrt(5) * q),
@@ -38,60 +47,64 @@ FAMILIES: dict[str, Callable[[FloatArray], FloatArray]] = {
 
 
 @dataclass(frozen=True, slots=True)
-class CovarianceModel:
-    """Nugget plus one structured term.
+class Covariance:
+    """Local nugget and sill with a common correlation function.
 
     Parameters
     ----------
-    noise : float
-        Variance of a single point that is not shared with its neighbours.
-    sill : float
-        Variance of the structured term; 0 where none was found.
-    length : float
-        Its length scale [m].
     family : str
         One of `FAMILIES`.
+    length : float
+        Its length scale [m].
+    noise : ndarray of shape (b,)
+        At every block: variance of a single point that is not shared with its neighbours.
+    sill : ndarray of shape (b,)
+        At every block: variance of the structured term; 0 where none shows.
     """
 
-    noise: float
-    sill: float
-    length: float
     family: str
+    length: float
+    noise: FloatArray
+    sill: FloatArray
 
     def table(self, reach: float) -> tuple[FloatArray, float]:
-        """Covariance at equally spaced squared distances up to `reach` squared.
+        """Correlation at equally spaced squared distances up to `reach` squared.
 
         Returns
         -------
         values : ndarray of shape (n, 2)
-            Covariance k and (dk/dr)/r, so that the gradient is that times the offset vector.
+            Correlation k and (dk/dr)/r, so that the gradient is that times the offset vector.
         step : float
             Spacing in squared distance [m^2].
         """
         step = reach**2 / (_TABLE - 1)
-        r = np.sqrt((np.arange(_TABLE) * step))
+        r = np.sqrt(np.arange(_TABLE) * step)
+        correlation = FAMILIES[self.family]
         small = 1e-3 * np.sqrt(step)
-        k = self.sill * FAMILIES[self.family](r / self.length)
         r = np.maximum(r, small)
-        dk = self.sill * (
-            FAMILIES[self.family]((r + small) / self.length) - FAMILIES[self.family]((r - small) / self.length)
-        )
-        return np.stack([k, dk / (2 * small) / r], axis=1), step
+        slope = (correlation((r + small) / self.length) - correlation((r - small) / self.length)) / (2 * small)
+        values = np.stack([correlation(r / self.length), slope / r], axis=1)
+        values[0, 0] = 1.0
+        return values, step
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, parallel=True)
 def _pair_sums(
-    sample: NDArray[np.int64], origin: FloatArray, frame: FloatArray, curvature: FloatArray, reach: float,
-    gate: float, key: NDArray[np.int64], start: NDArray[np.int64], size: float, position: FloatArray,
-    intensity: FloatArray, count: FloatArray, bins: int,
-) -> FloatArray:  # fmt: skip
-    """Sums over pairs, per patch and lag bin: pairs, noise share, half squared differences of height, intensity, lag."""
-    out = np.zeros((len(sample), bins, 5))
-    cells = np.empty(1024, np.int64)
-    s, t, h = np.empty(1024), np.empty(1024), np.empty(1024)
-    for p in range(len(sample)):
-        b = sample[p]
-        found = _gather(origin[b, 0], origin[b, 1], origin[b, 2], size, key, start, size, position, cells)
+    origin: FloatArray, frame: FloatArray, curvature: FloatArray, support: IntArray, reach: float, gate: float,
+    key: IntArray, start: IntArray, size: float, position: FloatArray, intensity: FloatArray, count: FloatArray,
+    out: FloatArray,
+) -> None:  # fmt: skip
+    """Per block and lag bin: pairs, noise share, half squared differences of height and of intensity, lag (sums).
+
+    A pair has its first cell in the block, the second anywhere within a block width.
+    """
+    bins = out.shape[1]
+    for b in numba.prange(len(key)):
+        if support[b] < 6:
+            continue
+        cells = np.empty(1024, np.int64)
+        s, t, h, own = np.empty(1024), np.empty(1024), np.empty(1024), np.empty(1024, np.bool_)
+        found = gather(origin[b, 0], origin[b, 1], origin[b, 2], size, key, start, size, position, cells)
         m = 0
         for r in range(found):
             c = cells[r]
@@ -102,69 +115,125 @@ def _pair_sums(
             z -= 0.5 * curvature[b, 0] * x * x + curvature[b, 1] * x * y + 0.5 * curvature[b, 2] * y * y
             if abs(z) < gate:
                 cells[m], s[m], t[m], h[m] = c, x, y, z
+                own[m] = start[b] <= c < start[b + 1]
                 m += 1
         for i in range(m):
-            for j in range(i):
+            if not own[i]:
+                continue
+            for j in range(m):
+                if i == j or (own[j] and j > i):
+                    continue
                 r = np.sqrt((s[i] - s[j]) ** 2 + (t[i] - t[j]) ** 2)
                 k = int(r / reach * bins)
                 if k >= bins:
                     continue
                 ci, cj = cells[i], cells[j]
-                out[p, k, 0] += 1.0
-                out[p, k, 1] += 0.5 * (1.0 / count[ci] + 1.0 / count[cj])
-                out[p, k, 2] += 0.5 * (h[i] - h[j]) ** 2
+                out[b, k, 0] += 1.0
+                out[b, k, 1] += 0.5 * (1.0 / count[ci] + 1.0 / count[cj])
+                out[b, k, 2] += 0.5 * (h[i] - h[j]) ** 2
                 if len(intensity):
-                    out[p, k, 3] += 0.5 * (intensity[ci] - intensity[cj]) ** 2
-                out[p, k, 4] += r
-    return out
+                    out[b, k, 3] += 0.5 * (intensity[ci] - intensity[cj]) ** 2
+                out[b, k, 4] += r
 
 
-def _fit_family(
-    family: str, lag: FloatArray, share: FloatArray, gamma: FloatArray, weight: FloatArray
-) -> tuple[float, CovarianceModel]:
-    """Best nugget, sill and length of one family by a scan over length and non-negative least squares."""
-    from scipy.optimize import nnls
+def _regions(centre: FloatArray, normal: FloatArray, width: float) -> tuple[IntArray, IntArray]:
+    """Number the region of every block, and list the neighbours of every region.
 
-    root = np.sqrt(weight)
-    best = (np.inf, CovarianceModel(0.0, 0.0, 1.0, family))
-    for length in np.geomspace(0.5 * lag[0] + 1e-12, 8.0 * lag[-1], 40):
-        design = np.stack([share, 1.0 - FAMILIES[family](lag / length)], axis=1)
-        (noise, sill), misfit = nnls(design * root[:, None], gamma * root)
-        if misfit < best[0]:
-            best = (misfit, CovarianceModel(float(noise), float(sill), float(length), family))
-    return best
+    A region is a voxel of `width` and one of three main directions of the normal, so that a floor is not judged
+    together with the wall that stands on it. Neighbours, shape (r, 27), hold -1 where there is none.
+    """
+    facing = np.abs(normal).argmax(axis=1)
+    place = np.floor(centre / width).astype(np.int64)
+    place -= place.min(axis=0) - 1
+    extent = place.max(axis=0) + 2
+    code = ((facing * extent[0] + place[:, 0]) * extent[1] + place[:, 1]) * extent[2] + place[:, 2]
+    unique, region = np.unique(code, return_inverse=True)
+    steps = [(i * extent[1] + j) * extent[2] + k for i in (-1, 0, 1) for j in (-1, 0, 1) for k in (-1, 0, 1)]
+    wanted = unique[:, None] + np.array(steps)
+    found = np.minimum(np.searchsorted(unique, wanted), len(unique) - 1)
+    return region, np.where(unique[found] == wanted, found, -1)
 
 
-def fit_covariance(
-    lag: FloatArray, share: FloatArray, gamma: FloatArray, patches: FloatArray, weight: FloatArray
-) -> CovarianceModel:
-    """Fit noise and structured term to a semivariogram.
+def _pool(values: FloatArray, region: IntArray, neighbours: IntArray) -> FloatArray:
+    """Sum block values over regions and their neighbours."""
+    flat = values.reshape(len(values), -1)
+    sums = np.stack([np.bincount(region, column, len(neighbours)) for column in flat.T], axis=1)
+    padded = np.vstack([sums, np.zeros(sums.shape[1])])
+    return padded[neighbours].sum(axis=1).reshape(len(neighbours), *values.shape[1:])
+
+
+def _rise(sums: FloatArray, column: int) -> FloatArray:
+    """Rise of each block's variogram from short to long lags, per unit noise share; NaN where pairs are missing."""
+    short, long = sums[:, :_SHORT].sum(axis=1), sums[:, -_LONG:].sum(axis=1)
+    enough = (short[:, 0] >= 3) & (long[:, 0] >= 3)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        rise = long[:, column] / long[:, 1] - short[:, column] / short[:, 1]
+    return np.where(enough, rise, np.nan)
+
+
+def _significant(rise: FloatArray, region: IntArray, neighbours: IntArray) -> NDArray[np.bool_]:
+    """Regions where the mean rise over the blocks exceeds `SIGNIFICANT` of its standard errors."""
+    known = np.isfinite(rise)
+    value = np.where(known, rise, 0.0)
+    n, total, squares = _pool(np.stack([known, value, value**2], axis=1).astype(float), region, neighbours).T
+    mean = total / np.maximum(n, 1)
+    error = np.sqrt(np.maximum(squares / np.maximum(n, 1) - mean**2, 0.0) / np.maximum(n, 1))
+    return (n >= _FEWEST) & (mean > SIGNIFICANT * error)
+
+
+def fit_correlation(lag: FloatArray, share: FloatArray, gamma: FloatArray, weight: FloatArray) -> tuple[str, float]:
+    """Fit family and length of the structured term to a pooled semivariogram.
+
+    Non-negative least squares for nugget and sill at every length of a scan; the family with the least weighted
+    misfit wins.
 
     Parameters
     ----------
     lag, share, gamma, weight : ndarray of shape (k,)
-        Mean lag [m], mean noise share (1 for single points), semivariance, and weight per bin.
-    patches : ndarray of shape (p, k)
-        The semivariance of each sampled patch, for the standard error of `gamma`.
+        Mean lag [m], mean noise share (1 for single points), semivariance and weight of each bin.
+
+    Returns
+    -------
+    family : str
+    length : float
+        Length scale [m].
     """
-    flat = float(np.sum(weight * share * gamma) / np.sum(weight * share**2))
-    if flat <= 0:
-        return CovarianceModel(0.0, 0.0, float(lag[-1]), "matern32")
-    _, model = min((_fit_family(family, lag, share, gamma, weight) for family in FAMILIES), key=lambda item: item[0])
-    # The structured term shows as a rise of the variogram from short to long lags; test that rise itself.
-    third = max(len(lag) // 3, 1)
-    ratio = patches / share
-    whole = np.isfinite(ratio).all(axis=1)
-    rise = ratio[whole, -third:].mean(axis=1) - ratio[whole, :third].mean(axis=1)
-    if len(rise) < 4 or np.mean(rise) < SIGNIFICANT_SHARE * np.std(rise) / np.sqrt(len(rise)):
-        return CovarianceModel(flat, 0.0, float(lag[-1]), "matern32")
-    # A noise floor keeps the prediction well conditioned where a scan has no noise at all.
-    return CovarianceModel(max(model.noise, 1e-8 * model.sill), model.sill, model.length, model.family)
+    from scipy.optimize import nnls
+
+    root = np.sqrt(weight)
+    best = (np.inf, "matern32", float(lag[-1]))
+    for family, correlation in FAMILIES.items():
+        for length in np.geomspace(0.5 * lag[0], 8.0 * lag[-1], 60):
+            design = np.stack([share, 1.0 - correlation(lag / length)], axis=1)
+            _, misfit = nnls(design * root[:, None], gamma * root)
+            best = min(best, (misfit, family, float(length)))
+    return best[1], best[2]
+
+
+def _local(
+    pooled: FloatArray, column: int, family: str, length: float, structured: NDArray[np.bool_]
+) -> tuple[FloatArray, FloatArray]:
+    """Noise and sill of every region by weighted least squares; sill 0 where no structure shows."""
+    pairs = np.maximum(pooled[:, :, 0], 1e-30)
+    share, gamma, lag = pooled[:, :, 1] / pairs, pooled[:, :, column] / pairs, pooled[:, :, 4] / pairs
+    rise = 1.0 - FAMILIES[family](lag / length)
+    flat = (pooled[:, :, 0] * share * gamma).sum(axis=1) / np.maximum((pooled[:, :, 0] * share**2).sum(axis=1), 1e-30)
+    weight = pooled[:, :, 0] / np.maximum(gamma, 1e-12 * flat[:, None] + 1e-300) ** 2 / np.maximum(lag, 1e-12)
+    ss, sr, rr = (weight * share**2).sum(1), (weight * share * rise).sum(1), (weight * rise**2).sum(1)
+    sg, rg = (weight * share * gamma).sum(1), (weight * rise * gamma).sum(1)
+    determinant = np.where(ss * rr - sr**2 > 1e-12 * ss * rr, ss * rr - sr**2, np.inf)
+    noise = np.where(structured, (sg * rr - rg * sr) / determinant, flat)
+    believed = noise[(noise > 0) & (pooled[:, :, 0].sum(axis=1) > 0)]
+    least = LEAST_NOISE * float(np.median(believed)) if len(believed) else 0.0
+    noise = np.maximum(noise, least)
+    sill = np.where(structured, np.maximum((rg - noise * sr) / np.maximum(rr, 1e-300), 0.0), 0.0)
+    noise = np.where(sill > 0, np.maximum(noise, FLOOR * sill), np.maximum(flat, least))
+    return noise, sill
 
 
 def measure_covariance(
-    cells: Cells, surface: SmoothSurface, *, gate: float
-) -> tuple[CovarianceModel, CovarianceModel | None]:
+    cells: Cells, surface: SmoothSurface, *, gate: float, region_width: float
+) -> tuple[Covariance, Covariance | None]:
     """Measure the covariance of height over the smooth surface and of intensity.
 
     Parameters
@@ -175,31 +244,36 @@ def measure_covariance(
         Smooth surface at the blocks of `cells`.
     gate : float
         Heights beyond this are clutter and left out [m].
+    region_width : float
+        Noise and sill are pooled over about three times this width [m].
 
     Returns
     -------
-    height, intensity : CovarianceModel
+    height, intensity : Covariance
         Variances in m^2 and in squared intensity units; intensity is None where the cells have none.
     """
-    trusted = np.flatnonzero(surface.support >= 6)
-    sample = trusted[:: max(1, len(trusted) // _SAMPLES)]
-    has_intensity = cells.intensity is not None
-    sums = _pair_sums(
-        sample, surface.origin, surface.frame, surface.curvature, LAGS * cells.resolution, gate, cells.key, cells.start,
-        cells.block_size, cells.position,
-        cells.intensity if cells.intensity is not None else np.empty(0), cells.count, _BINS,
+    grey = cells.intensity if cells.intensity is not None else np.empty(0)
+    sums = np.zeros((len(cells.key), BINS, 5))
+    _pair_sums(
+        surface.origin, surface.frame, surface.curvature, surface.support, LAGS * cells.resolution, gate, cells.key,
+        cells.start, cells.block_size, cells.position, grey, cells.count, sums,
     )  # fmt: skip
-    total = sums.sum(axis=0)
+    region, neighbours = _regions(cells.centre, surface.frame[:, :, 2], region_width)
+    pooled = _pool(sums, region, neighbours)
+    models = [_model(sums, pooled, region, neighbours, column) for column in ((2, 3) if len(grey) else (2,))]
+    return models[0], models[1] if len(grey) else None
+
+
+def _model(sums: FloatArray, pooled: FloatArray, region: IntArray, neighbours: IntArray, column: int) -> Covariance:
+    """Common correlation from the places that show structure, then local noise and sill."""
+    structured = _significant(_rise(sums, column), region, neighbours)
+    total = sums[structured[region]].sum(axis=0) if structured.any() else sums.sum(axis=0)
     used = total[:, 0] > 50
-    if used.sum() < 4:
-        noise = float(np.median(cells.roughness) ** 2)
-        return CovarianceModel(noise, 0.0, cells.block_size, "matern32"), None
-    pairs = np.where(sums[:, used, 0] > 0, sums[:, used, 0], np.nan)
-    count = total[used, 0]
-    lag, share = total[used, 4] / count, total[used, 1] / count
-    models = []
-    for column in (2, 3) if has_intensity else (2,):
-        gamma = total[used, column] / count
-        weight = count / np.maximum(gamma, 1e-30) ** 2 / lag
-        models.append(fit_covariance(lag, share, gamma, sums[:, used, column] / pairs, weight))
-    return models[0], models[1] if has_intensity else None
+    family, length = "matern32", 1.0
+    if structured.any() and used.sum() >= 4:
+        pairs = total[used, 0]
+        lag, gamma = total[used, 4] / pairs, total[used, column] / pairs
+        weight = pairs / np.maximum(gamma, 1e-300) ** 2 / lag
+        family, length = fit_correlation(lag, total[used, 1] / pairs, gamma, weight)
+    noise, sill = _local(pooled, column, family, length, structured)
+    return Covariance(family, length, noise[region], sill[region])

@@ -14,9 +14,9 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import BLOCK_WIDTH, make_cells, tangents
+from scanstrain.cells import BLOCK_WIDTH, group, make_cells, tangents, voxel_keys
 from scanstrain.epoch import Epoch
-from scanstrain.neighbourhood.smooth import _gather, solve_in_place
+from scanstrain.neighbourhood.smooth import gather, solve_in_place
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -25,6 +25,8 @@ _POSITIVE_SHARE = 0.999
 """Intensities that are positive at this share of points count as linear: their texture scales with their level."""
 _FLOOR = 0.05
 """Smallest local level, as a share of the median, that is divided by: darker places carry no usable texture."""
+MIN_SHARED = 200
+"""Voxels that two set-ups must share before their difference is judged."""
 _RIDGE = 0.02
 """Ridge on slopes and curvatures, in neighbourhood radii: keeps narrow strips of points well posed."""
 _BLEND = 4
@@ -50,7 +52,7 @@ def _trends(
     """Quadratic of intensity about every block, over one block width."""
     for b in numba.prange(len(centre)):
         cells = np.empty(512, np.int64)
-        m = _gather(centre[b, 0], centre[b, 1], centre[b, 2], radius, key, start, radius, position, cells)
+        m = gather(centre[b, 0], centre[b, 1], centre[b, 2], radius, key, start, radius, position, cells)
         A, v, row = np.zeros((6, 6)), np.zeros(6), np.empty(6)
         for r in range(m):
             c = cells[r]
@@ -83,24 +85,54 @@ def _levels(
         out[p] = level / total
 
 
-def _local_level(points: FloatArray, intensity: FloatArray, width: float) -> FloatArray:
-    """Slow level of intensity at every point, from neighbourhoods of radius `width` [m]."""
+def _local_level(points: FloatArray, values: FloatArray, places: FloatArray, width: float) -> FloatArray:
+    """Slow level at `places` of `values` that are known at `points`, over neighbourhoods of radius `width` [m].
+
+    NaN where the places lie farther from the points than a neighbourhood reaches.
+    """
     from scipy.spatial import cKDTree
 
-    cells = make_cells(points, width / BLOCK_WIDTH, intensity=intensity)
+    cells = make_cells(points, width / BLOCK_WIDTH, intensity=values)
     grey = cells.intensity if cells.intensity is not None else np.empty(0)
-    trend, level = np.zeros((len(cells.key), 6)), np.empty(len(points))
+    trend, level = np.zeros((len(cells.key), 6)), np.empty(len(places))
     _trends(cells.centre, cells.normal, width, cells.key, cells.start, cells.position, grey, cells.count, trend)
     k = min(_BLEND, len(cells.key))
-    distance, near = cKDTree(cells.centre).query(points, k=k, workers=-1)
-    _levels(
-        np.ascontiguousarray(points), near.reshape(-1, k).astype(np.int64), distance.reshape(-1, k), cells.centre,
-        cells.normal, width, trend, level,
-    )  # fmt: skip
-    return level
+    distance, near = cKDTree(cells.centre).query(places, k=k, workers=-1)
+    distance, near = distance.reshape(-1, k), near.reshape(-1, k).astype(np.int64)
+    _levels(np.ascontiguousarray(places), near, distance, cells.centre, cells.normal, width, trend, level)
+    return np.where(distance[:, 0] <= np.sqrt(3) * width, level, np.nan)
 
 
-def comparable_intensity(epoch: Epoch, width: float) -> FloatArray | None:
+def _remove_offsets(
+    points: FloatArray, texture: FloatArray, setup: NDArray[np.uint16], width: float, fine: float
+) -> None:
+    """Take the slow differences between set-ups out of `texture`, judged in small voxels that several of them share.
+
+    Inside such a voxel the texture is the same, so what differs is level: this is far sharper than comparing
+    levels over neighbourhoods that each set-up samples in its own way.
+    """
+    order, _, start = group(voxel_keys(points, fine))
+    voxel = np.empty(len(points), np.int64)
+    voxel[order] = np.repeat(np.arange(len(start) - 1), np.diff(start))
+    numbers, which = np.unique(setup, return_inverse=True)
+    shape = (len(start) - 1, len(numbers))
+    flat = voxel * len(numbers) + which
+    count = np.bincount(flat, minlength=shape[0] * shape[1]).reshape(shape)
+    mean = np.bincount(flat, texture, minlength=shape[0] * shape[1]).reshape(shape) / np.maximum(count, 1)
+    centre = np.stack([np.bincount(voxel, points[:, a]) for a in range(3)], axis=1) / np.diff(start)[:, None]
+    seen = count > 0
+    common = (mean * seen).sum(axis=1) / seen.sum(axis=1)
+    shared = seen.sum(axis=1) > 1
+    for number in range(len(numbers)):
+        pairs = shared & seen[:, number]
+        if pairs.sum() < MIN_SHARED:
+            continue
+        own = np.flatnonzero(which == number)
+        offset = _local_level(centre[pairs], (mean[:, number] - common)[pairs], points[own], width)
+        texture[own] -= np.nan_to_num(offset)
+
+
+def comparable_intensity(epoch: Epoch, width: float, fine: float) -> FloatArray | None:
     """Return the intensity of every point, from several set-ups as texture about each one's local level.
 
     Parameters
@@ -109,6 +141,8 @@ def comparable_intensity(epoch: Epoch, width: float) -> FloatArray | None:
         With `setup` numbers where the set-ups are known; otherwise all points count as one set-up.
     width : float
         Radius over which the level is judged [m]: wide against the texture.
+    fine : float
+        Voxel width in which set-ups are compared with each other [m]: narrow against the texture.
 
     Returns
     -------
@@ -122,16 +156,17 @@ def comparable_intensity(epoch: Epoch, width: float) -> FloatArray | None:
     if not np.isfinite(raw).all() or not np.ptp(raw) > 0:
         return None
     setups = [] if epoch.setup is None else list(np.unique(epoch.setup))
-    if len(setups) < 2:
+    if epoch.setup is None or len(setups) < 2:
         return raw
     linear = float(np.mean(raw > 0)) >= _POSITIVE_SHARE
     out = np.empty(len(raw))
     for setup in setups:
         own = np.flatnonzero(epoch.setup == setup)
-        level = _local_level(epoch.points[own], raw[own], width)
+        level = _local_level(epoch.points[own], raw[own], epoch.points[own], width)
         if linear:
             level = np.maximum(level, _FLOOR * float(np.median(raw[own])))
             out[own] = raw[own] / level - 1.0
         else:
             out[own] = raw[own] - level
+    _remove_offsets(epoch.points, out, epoch.setup, width, fine)
     return out

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import Cells, make_cells
-from scanstrain.neighbourhood.covariance import CovarianceModel, measure_covariance
+from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
 from scanstrain.neighbourhood.fit import TUKEY_INFLATE, TUKEY_SHRINK, fit_gauges
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
 from scanstrain.neighbourhood.rows import Rows, block_density, evaluate_rows
@@ -34,9 +34,14 @@ class Surface:
 
     cells: Cells
     smooth: SmoothSurface
-    height: CovarianceModel
-    grey: CovarianceModel | None
+    height: Covariance
+    grey: Covariance | None
     gate: float
+
+    @property
+    def textured(self) -> bool:
+        """Whether intensity shows structure anywhere."""
+        return self.grey is not None and bool((self.grey.sill > 0).any())
 
 
 @dataclass(slots=True)
@@ -57,14 +62,14 @@ class Estimate:
 
 
 def make_surface(
-    points: FloatArray, intensity: FloatArray | None, resolution: float, support_radius: float
+    points: FloatArray, intensity: FloatArray | None, resolution: float, support_radius: float, region: float
 ) -> Surface:
-    """Model one epoch at one resolution [m], smooth over `support_radius` [m]."""
+    """Model one epoch at one resolution [m], smooth over `support_radius` [m], noise judged over `region` [m]."""
     cells = make_cells(points, resolution, intensity=intensity)
     wide = make_cells(cells.position, support_radius / 4)
     smooth = smooth_surface(cells.centre, cells.normal, wide)
     gate = CLUTTER * float(np.median(cells.roughness)) + 0.1 * resolution
-    height, grey = measure_covariance(cells, smooth, gate=gate)
+    height, grey = measure_covariance(cells, smooth, gate=gate, region_width=region)
     return Surface(cells, smooth, height, grey, gate)
 
 
@@ -75,8 +80,7 @@ class Level:
         self, reference: Surface, current: Surface, gauges: SmoothSurface, radius: float, spacing: float
     ) -> None:
         self.reference, self.gauges, self.radius, self.spacing = reference, gauges, radius, spacing
-        textured = reference.grey is not None and current.grey is not None
-        textured = textured and reference.grey.sill > 0 and current.grey.sill > 0  # type: ignore[union-attr]
+        textured = reference.textured and current.textured
         self.textured = textured
         self.predictor: Predictor = build_predictor(
             current.cells, current.smooth, current.height, current.grey if textured else None, gate=current.gate

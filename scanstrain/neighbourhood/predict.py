@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import _BITS, BLOCK_WIDTH, Cells, find_key, pack
-from scanstrain.neighbourhood.covariance import CovarianceModel
+from scanstrain.neighbourhood.covariance import Covariance
 from scanstrain.neighbourhood.smooth import SmoothSurface
 
 FloatArray = NDArray[np.float64]
@@ -48,8 +48,10 @@ class Predictor:
         Fitted constants of height [m] and intensity.
     variance, unresolved : ndarray of shape (b, 2)
         Prediction variance, and the part of it that is structure between the points rather than noise.
-    noise : tuple of float
+    noise : ndarray of shape (b, 2)
         Noise variance of a single point in height [m^2] and intensity.
+    sill : ndarray of shape (b, 2)
+        Variance of the structure that is predicted; where it is 0 the prediction is the local mean.
     """
 
     cells: Cells
@@ -61,7 +63,8 @@ class Predictor:
     constant: FloatArray
     variance: FloatArray
     unresolved: FloatArray
-    noise: tuple[float, float]
+    noise: FloatArray
+    sill: FloatArray
     height_table: FloatArray
     intensity_table: FloatArray
     table_step: float
@@ -149,19 +152,18 @@ def _backward(L: FloatArray, b: FloatArray, n: int) -> None:
 @numba.njit(cache=True, nogil=True, fastmath=_LANES)
 def krige(
     s: FloatArray, t: FloatArray, values: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float,
-    noise: float, probe: float, weights: FloatArray, L: FloatArray,
+    noise: float, sill: float, probe: float, weights: FloatArray, L: FloatArray,
 ) -> tuple[float, float, float]:  # fmt: skip
     """Solve one ordinary kriging system.
 
-    Fills `weights` with K^-1 (values); returns the constant, and the prediction variance and its structural part,
+    Fills `weights` with the sill times K^-1 (values), to be multiplied with correlations; returns the constant, and the prediction variance and its structural part,
     each averaged over four probes at (+-probe, +-probe).
     """
-    sill = table[0, 0]
     constant = _CONSTANT * (sill + noise)
     for i in range(m):
         for j in range(i):
             dx, dy = s[i] - s[j], t[i] - t[j]
-            L[i, j] = lookup(table, 0, dx * dx + dy * dy, step) + constant
+            L[i, j] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
         L[i, i] = sill + constant + noise * share[i]
     for j in range(m):
         d = L[j, j]
@@ -178,13 +180,15 @@ def krige(
     _forward(L, weights, m)
     _backward(L, weights, m)
     offset = constant * weights[:m].sum()
+    for i in range(m):
+        weights[i] *= sill
     k_probe = np.empty(m)
     variance = unresolved = 0.0
     for a in (-probe, probe):
         for b in (-probe, probe):
             for i in range(m):
                 dx, dy = s[i] - a, t[i] - b
-                k_probe[i] = lookup(table, 0, dx * dx + dy * dy, step) + constant
+                k_probe[i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
             _forward(L, k_probe, m)
             v = sill + constant
             for i in range(m):
@@ -215,8 +219,8 @@ def _count_neighbours(
 def _solve_blocks(
     reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray, frame: FloatArray,
     curvature: FloatArray, position: FloatArray, intensity: FloatArray, count: FloatArray, first: IntArray,
-    height_table: FloatArray, intensity_table: FloatArray, step: float, noise_h: float, noise_i: float,
-    st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, variance: FloatArray,
+    height_table: FloatArray, intensity_table: FloatArray, step: float, noise: FloatArray,
+    sill: FloatArray, st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, variance: FloatArray,
     unresolved: FloatArray,
 ) -> None:  # fmt: skip
     for b in numba.prange(len(key)):
@@ -234,20 +238,20 @@ def _solve_blocks(
             st[first[b] + i, 0], st[first[b] + i, 1] = s[i], t[i]
         probe = 0.25 * size
         constant[b, 0], variance[b, 0], unresolved[b, 0] = krige(
-            s, t, h, share, m, height_table, step, noise_h, probe, w, L
+            s, t, h, share, m, height_table, step, noise[b, 0], sill[b, 0], probe, w, L
         )
         weights_h[first[b] : first[b] + m] = w
         if len(intensity):
             for i in range(m):
                 grey[i] = intensity[cells[i]]
             constant[b, 1], variance[b, 1], unresolved[b, 1] = krige(
-                s, t, grey, share, m, intensity_table, step, noise_i, probe, w, L
+                s, t, grey, share, m, intensity_table, step, noise[b, 1], sill[b, 1], probe, w, L
             )
             weights_i[first[b] : first[b] + m] = w
 
 
 def build_predictor(
-    cells: Cells, surface: SmoothSurface, height: CovarianceModel, intensity: CovarianceModel | None, *, gate: float
+    cells: Cells, surface: SmoothSurface, height: Covariance, intensity: Covariance | None, *, gate: float
 ) -> Predictor:
     """Solve the prediction systems of every block.
 
@@ -255,19 +259,19 @@ def build_predictor(
     ----------
     cells, surface
         The current epoch and its smooth surface at the blocks.
-    height, intensity : CovarianceModel
+    height, intensity : Covariance
         Measured covariances; without `intensity` only height is predicted.
     gate : float
         Cells farther than this from the smooth surface are clutter [m].
     """
     blocks = len(cells.key)
     reach = cells.resolution * (BLOCK_WIDTH * 0.5 * np.sqrt(2) * 1.15 + MARGIN)
-    span = 2.2 * reach
-    height_table, step = height.table(span)
-    intensity_table, _ = (intensity or height).table(span)
-    noise_h = max(height.noise, 1e-18)
-    noise_i = max(intensity.noise, 1e-18) if intensity else 0.0
+    height_table, step = height.table(2.2 * reach)
+    intensity_table, _ = (intensity or height).table(2.2 * reach)
     grey = cells.intensity if intensity is not None and cells.intensity is not None else np.empty(0)
+    other = intensity or height
+    noise = np.maximum(np.stack([height.noise, other.noise], axis=1), 1e-18)
+    sill = np.stack([height.sill, other.sill], axis=1)
     shared = (
         reach, gate, cells.key, cells.start, cells.block_size, surface.origin, surface.frame, surface.curvature,
         cells.position,
@@ -280,12 +284,12 @@ def build_predictor(
     weights_i = np.empty(total if len(grey) else 0)
     constant, variance, unresolved = np.zeros((blocks, 2)), np.zeros((blocks, 2)), np.zeros((blocks, 2))
     _solve_blocks(
-        *shared, grey, cells.count, first, height_table, intensity_table, step, noise_h, noise_i, st, weights_h,
-        weights_i, constant, variance, unresolved,
+        *shared, grey, cells.count, first, height_table, intensity_table, step, noise, sill, st, weights_h, weights_i,
+        constant, variance, unresolved,
     )  # fmt: skip
     return Predictor(
-        cells, surface, first, st, weights_h, weights_i, constant, variance, unresolved, (noise_h, noise_i),
-        height_table, intensity_table, step,
+        cells, surface, first, st, weights_h, weights_i, constant, variance, unresolved, noise, sill, height_table,
+        intensity_table, step,
     )  # fmt: skip
 
 

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import Cells
-from scanstrain.neighbourhood.covariance import CovarianceModel
+from scanstrain.neighbourhood.covariance import Covariance
 from scanstrain.neighbourhood.predict import Predictor, choose_block, predict_at
 
 FloatArray = NDArray[np.float64]
@@ -52,7 +52,7 @@ class Rows:
 @numba.njit(cache=True, nogil=True, parallel=True)
 def _evaluate(
     position: FloatArray, moved: FloatArray, count: FloatArray, normal: FloatArray, own_density: FloatArray,
-    density: FloatArray, gate: float, noise_h: float, noise_i: float, other_h: float, other_i: float,
+    density: FloatArray, gate: float, own_noise: FloatArray, noise: FloatArray,
     key: IntArray, size: float, origin: FloatArray, frame: FloatArray, curvature: FloatArray, first: IntArray,
     st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, variance: FloatArray,
     unresolved: FloatArray, height_table: FloatArray, intensity_table: FloatArray, step: float,
@@ -97,10 +97,10 @@ def _evaluate(
             slope[c, a], grey_slope[c, a] = out[1 + a], out[5 + a]
         # The current epoch's noise reaches a sum of rows as its own points do: by the ratio of point densities.
         share = own_density[c] / max(density[b], 1e-9)
-        out_variance[c, 0] = (noise_h + other_h * share) / count[c] + unresolved[b, 0]
-        out_variance[c, 1] = (noise_i + other_i * share) / count[c] + unresolved[b, 1]
-        out_variance[c, 2] = noise_h / count[c] + variance[b, 0]
-        out_variance[c, 3] = noise_i / count[c] + variance[b, 1]
+        out_variance[c, 0] = (own_noise[c, 0] + noise[b, 0] * share) / count[c] + unresolved[b, 0]
+        out_variance[c, 1] = (own_noise[c, 1] + noise[b, 1] * share) / count[c] + unresolved[b, 1]
+        out_variance[c, 2] = own_noise[c, 0] / count[c] + variance[b, 0]
+        out_variance[c, 3] = own_noise[c, 1] / count[c] + variance[b, 1]
 
 
 def block_density(cells: Cells) -> FloatArray:
@@ -120,7 +120,7 @@ def block_density(cells: Cells) -> FloatArray:
 
 def evaluate_rows(
     cells: Cells, normal: FloatArray, moved: FloatArray, predictor: Predictor,
-    noise: tuple[CovarianceModel, CovarianceModel | None], *, gate: float, density: tuple[FloatArray, FloatArray],
+    noise: tuple[Covariance, Covariance | None], *, gate: float, density: tuple[FloatArray, FloatArray],
 ) -> Rows:  # fmt: skip
     """Compare every reference cell, moved by `moved`, with the predicted current epoch.
 
@@ -134,7 +134,7 @@ def evaluate_rows(
         Present displacement of each cell [m].
     predictor : Predictor
         Current epoch.
-    noise : pair of CovarianceModel
+    noise : pair of Covariance
         Of the reference epoch: height, intensity.
     gate : float
         Misfits beyond this are no match [m].
@@ -146,10 +146,10 @@ def evaluate_rows(
         np.zeros(n, np.bool_), np.zeros(n), np.zeros((n, 3)), np.zeros(n), np.zeros((n, 3)), np.ones((n, 4)),
     )  # fmt: skip
     height, grey = noise
+    own_noise = np.stack([height.noise, (grey or height).noise], axis=1)[cells.block]
     current = predictor.surface
     _evaluate(
-        cells.position, moved, cells.count, normal, density[0], density[1], gate, height.noise,
-        grey.noise if grey else 0.0, predictor.noise[0], predictor.noise[1], predictor.cells.key,
+        cells.position, moved, cells.count, normal, density[0], density[1], gate, own_noise, predictor.noise, predictor.cells.key,
         predictor.cells.block_size, current.origin, current.frame, current.curvature, predictor.start, predictor.st,
         predictor.height, predictor.intensity, predictor.constant, predictor.variance, predictor.unresolved,
         predictor.height_table, predictor.intensity_table, predictor.table_step, *out,

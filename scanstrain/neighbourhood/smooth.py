@@ -76,7 +76,7 @@ def solve_in_place(A: FloatArray, b: FloatArray, n: int) -> bool:
 
 
 @numba.njit(cache=True, nogil=True)
-def _gather(
+def gather(
     x: float, y: float, z: float, radius: float, key: NDArray[np.int64], start: NDArray[np.int64], size: float,
     position: FloatArray, out: NDArray[np.int64],
 ) -> int:  # fmt: skip
@@ -156,7 +156,7 @@ def _fit_all(
         f = np.empty((3, 3))
         f[0, 0], f[1, 0], f[2, 0], f[0, 1], f[1, 1], f[2, 1] = tangents(normals[p, 0], normals[p, 1], normals[p, 2])
         f[:, 2] = normals[p]
-        m = _gather(o[0], o[1], o[2], radius, key, start, size, position, cells)
+        m = gather(o[0], o[1], o[2], radius, key, start, size, position, cells)
         none = np.zeros(6)
         q, sd = _quadratic(o, f, cells, m, position, count, radius, none, 1e30)
         for _ in range(2):

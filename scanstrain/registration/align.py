@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from contextlib import suppress
 from itertools import compress
 
 import numpy as np
@@ -13,7 +14,7 @@ from scanstrain.cells import median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OverlapError, RegistrationError, explain
 from scanstrain.registration.coarse import choose_start, refuse_apart, to_grid
-from scanstrain.registration.fit import MIN_MATCHES, align, level_metric, metric_of, motion, step_of, total
+from scanstrain.registration.fit import MIN_MATCHES, align, level_metric, metric_of, motion, rough, step_of, total
 from scanstrain.registration.options import Options, check
 from scanstrain.registration.report import assemble
 from scanstrain.registration.result import Registration
@@ -49,6 +50,8 @@ MAX_CUTS = 6
 """Most times that the current epoch is cut again in the reference's own grid."""
 SETTLED = 0.1
 """Cutting again is over when it moves the result by less than this part of its standard error."""
+TAKE_BACK = 5
+"""Rounds of taking back a motion: each leaves an error of second order in the one before."""
 MIN_PATCHES, MIN_SHARE = 6, 0.1
 """Fewer stable patches, or less of the surface, are no ground to stand on."""
 
@@ -171,20 +174,15 @@ def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Su
         T, started = choose_start(whole, theirs, to_grid(np.eye(4), theirs[-1]), options.start, options.seed)
     T_start = T @ theirs[-1].T_grid_epoch
     iterations = 0
-    for a, b in zip(mine, theirs, strict=True):
-        fit = align(a, b, T, metric=level_metric(a), **_rough(a, options))
-        T, iterations = fit.T_ref_grid, iterations + fit.iterations
+    for a, b in zip(mine[:-1], theirs[:-1], strict=True):
+        with suppress(OverlapError):
+            fit = align(a, b, T, metric=level_metric(a), **rough(a, options.max_iterations))
+            T, iterations = fit.T_ref_grid, iterations + fit.iterations
+    fit = align(mine[-1], theirs[-1], T, metric=level_metric(mine[-1]), **rough(mine[-1], options.max_iterations))
     index, count = patch_of_blocks(mine[-1])
-    work = Work(mine[-1], theirs[-1], fit, T, T_start, level_metric(mine[-1]), index, count)
+    work = Work(mine[-1], theirs[-1], fit, T, T_start, level_metric(mine[-1]), index, count, iterations=iterations)
     work.take(fit)
-    work.iterations = iterations
     return work, whole[-1], started
-
-
-def _rough(surface: Surface, options: Options) -> dict[str, float | int]:
-    """Limits for a fit that is not the last one."""
-    width = surface.width
-    return {"budget": width / 4, "tolerance": 1e-3 * width, "limit": options.max_iterations}
 
 
 def _check_blocks(surface: Surface) -> None:
@@ -215,7 +213,7 @@ def _find_ground(work: Work, options: Options) -> None:
             work.T_ref_grid,
             metric=work.metric,
             keep=work.keep,
-            **_rough(work.reference, options),
+            **rough(work.reference, options.max_iterations),
         )
     )
     work.metric = metric_of(work.fit.rows.place[work.fit.weight > 0])
@@ -267,8 +265,9 @@ def _decide_weak(work: Work) -> None:
     if work.weak.shape[1]:
         work.weak = follow(work)
         work.strong = complement(work.weak)
-    back = work.weak @ (work.weak.T @ motion(work.T @ inverse(work.T_start), at))
-    work.T = step_of(-back, at) @ work.T
+    for _ in range(TAKE_BACK):
+        back = work.weak @ (work.weak.T @ motion(work.T @ inverse(work.T_start), at))
+        work.T = step_of(-back, at) @ work.T
 
 
 def _finish(work: Work, points: FloatArray, options: Options) -> None:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import BLOCK_WIDTH, make_cells
 from scanstrain.errors import MissingDependencyError, OverlapError, explain
-from scanstrain.registration.fit import align, biweight, level_metric
+from scanstrain.registration.fit import align, biweight, level_metric, rough
 from scanstrain.registration.match import Metric, observe, pair
 from scanstrain.registration.rigid import inverse
 from scanstrain.registration.surfaces import MIN_COUNT, Surface, judged
@@ -53,7 +53,7 @@ def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) ->
 def settle(
     reference: list[Surface], current: list[Surface], T_ref_grid: FloatArray
 ) -> tuple[FloatArray, float]:
-    """Improve a start on wide blocks and say how well the surfaces then fit.
+    """Improve a start roughly and say how well the surfaces then fit.
 
     Parameters
     ----------
@@ -68,19 +68,12 @@ def settle(
         `share_close` on the finest of the given levels.
     """
     T = T_ref_grid
-    try:
-        for mine, theirs in zip(reference, current, strict=True):
-            T = align(
-                mine,
-                theirs,
-                T,
-                metric=level_metric(mine),
-                budget=mine.width / 4,
-                tolerance=1e-3 * mine.width,
-                limit=20,
-            ).T_ref_grid
-    except OverlapError:
-        return T_ref_grid, 0.0
+    for mine, theirs in zip(reference, current, strict=True):
+        try:
+            T = align(mine, theirs, T, metric=level_metric(mine), **rough(mine, 20)).T_ref_grid
+        except OverlapError:
+            # Too few of the wide blocks meet: a narrower level may still serve.
+            continue
     return T, share_close(reference[-1], current[-1], T)
 
 
@@ -233,14 +226,12 @@ def choose_start(
     """
     if start == "identity":
         return T_given, "identity"
-    levels = slice(0, max(1, len(reference) - 1))
-    rough = reference[levels], current[levels]
-    share = settle(*rough, T_given)[1]
+    share = settle(reference, current, T_given)[1]
     if start == "auto" and share >= SHARE_AT_ONCE:
         return T_given, "identity"
     tried = [(share, "identity", T_given)] if start == "auto" else []
     for proposal in feature_starts(reference[-1], current[-1], seed):
-        tried.append((settle(*rough, proposal)[1], "coarse", proposal))
+        tried.append((settle(reference, current, proposal)[1], "coarse", proposal))
     best = max(tried, key=lambda item: item[0], default=(0.0, "", T_given))
     if best[0] < SHARE_NEEDED:
         raise OverlapError(

@@ -25,8 +25,8 @@ MIN_SCALE = 0.1
 """The robust scale may fall below the a-priori noise (relief common to both epochs cancels), but not to nothing."""
 MIN_MATCHES = 20
 """Fewer matched blocks do not show a surface from enough sides."""
-FREEZE = 1e-3
-"""Matches are kept once a step is below this part of a block width."""
+FREEZE, FREEZE_AFTER = 1e-3, 20
+"""Matches are kept once a step is below this part of a block width, and after so many iterations in any case."""
 ROUNDING = 1e-12
 """A step [m] that is rounding at any extent that is accepted."""
 
@@ -134,6 +134,11 @@ def metric_of(places: FloatArray) -> Metric:
     return Metric(pivot=pivot, arm=float(np.linalg.norm(places - pivot, axis=1).max()))
 
 
+def rough(surface: Surface, limit: int) -> dict[str, float]:
+    """Limits for a fit that is not the last one: what wide blocks fix badly is left to narrower ones."""
+    return {"budget": surface.width / 10, "tolerance": 1e-3 * surface.width, "limit": limit}
+
+
 def step_of(vector: FloatArray, metric: Metric) -> FloatArray:
     """Return the 4x4 motion of a step in metric unknowns (6,)."""
     return about(metric.pivot, vector[:3] / metric.arm, vector[3:])
@@ -156,7 +161,7 @@ def align(
     metric: Metric,
     budget: float,
     tolerance: float,
-    limit: int,
+    limit: float,
     strong: tuple[FloatArray, FloatArray] | None = None,
     keep: BoolArray | None = None,
 ) -> Fit:
@@ -177,7 +182,7 @@ def align(
         Standard error at the place moved most beyond which a motion is held [m].
     tolerance : float
         Step at the farthest point that ends the iteration [m]; 0 means a hundredth of the standard error.
-    limit : int
+    limit : int or float
         Most iterations.
     strong : pair of ndarray, optional
         The motions to solve for and to hold, if they are decided already.
@@ -194,9 +199,9 @@ def align(
         Too few blocks find a partner.
     """
     T, scale, pairs, step = T_ref_grid, np.inf, None, np.inf
-    for iteration in range(1, limit + 1):
+    for iteration in range(1, int(limit) + 1):
         # Matches that still flip would keep the last digits from settling.
-        if pairs is None or step > FREEZE * reference.width:
+        if pairs is None or (step > FREEZE * reference.width and iteration <= FREEZE_AFTER):
             pairs = pair(reference, current, T)
         rows, weight, scale = weigh(reference, current, pairs, T, scale, metric, keep)
         full, shared, right = total(rows, weight)

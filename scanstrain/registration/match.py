@@ -52,7 +52,7 @@ class Rows:
         The same with half the difference of the two normals in place of their mean. The noise of the normals is the
         same in both, the surface itself is only in `row`.
     residual : ndarray of shape (m,)
-        Reference minus current along the mean normal [m].
+        Reference minus current along the mean normal, whose largest component is positive [m].
     sd : ndarray of shape (m,)
         A-priori standard deviation of the residual [m].
     place, normal : ndarray of shape (m, 3)
@@ -140,13 +140,19 @@ def _rows(
         cosine = 0.0
         for a in range(3):
             cosine += normal[p, a] * moved_normal[q, a]
-        sign = 1.0 if cosine >= 0 else -1.0
+        # One sign per facing, so that rows of a patch can be averaged: the largest component is positive.
+        side = 0
+        for a in range(1, 3):
+            if abs(normal[p, a]) > abs(normal[p, side]):
+                side = a
+        flip = 1.0 if normal[p, side] >= 0 else -1.0
+        sign = flip if cosine >= 0 else -flip
         length = np.sqrt(2.0 + 2.0 * abs(cosine))
         across = 0.0
         squared = 0.0
         for a in range(3):
-            n[a] = (normal[p, a] + sign * moved_normal[q, a]) / length
-            d[a] = (normal[p, a] - sign * moved_normal[q, a]) / length
+            n[a] = (flip * normal[p, a] + sign * moved_normal[q, a]) / length
+            d[a] = (flip * normal[p, a] - sign * moved_normal[q, a]) / length
             g[a] = place[p, a] - moved[q, a]
             c[a] = ((place[p, a] + moved[q, a]) / 2 - pivot[a]) / arm
             across += n[a] * g[a]
@@ -187,10 +193,21 @@ def nearest(
 
 
 def pair(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> IntArray:
-    """Return matches as rows of (reference block, current block), shape (m, 2)."""
+    """Return matches as rows of (reference block, current block), shape (m, 2).
+
+    Pairs that lie too far apart along the surface are left out. At the border of a cloud the limit is narrow: there the
+    nearest block may be near only because the cloud ends.
+    """
     other = nearest(reference, current, T_ref_grid)
-    mine = np.flatnonzero(other >= 0)
-    return np.stack([mine, other[mine]], axis=1)
+    p = np.flatnonzero(other >= 0)
+    q = other[p]
+    R, t = T_ref_grid[:3, :3], T_ref_grid[:3, 3]
+    gap = reference.cells.centre[p] - (current.cells.centre[q] @ R.T + t)
+    normal = reference.cells.normal[p]
+    along = np.linalg.norm(gap - normal * (gap * normal).sum(axis=1, keepdims=True), axis=1)
+    border = (reference.state[p] == BORDER) | (current.state[q] == BORDER)
+    near = along < np.where(border, BORDER_OFFSET, MAX_OFFSET) * reference.width
+    return np.stack([p[near], q[near]], axis=1)
 
 
 def observe(
@@ -213,7 +230,6 @@ def observe(
     Returns
     -------
     Rows
-        Without the pairs that lie too far apart along the surface: at a border the limit is narrow.
     """
     R, t = T_ref_grid[:3, :3], T_ref_grid[:3, 3]
     mine, theirs = reference.cells, current.cells
@@ -229,15 +245,12 @@ def observe(
     p, q = pairs.T
     variance = reference.variance[p] + current.variance[q]
     variance = variance + offset * (reference.tilt[p] + current.tilt[q]) / 4
-    # At the border of a cloud the nearest block may be near only because the cloud ends there.
-    border = (reference.state[p] == BORDER) | (current.state[q] == BORDER)
-    near = offset < (np.where(border, BORDER_OFFSET, MAX_OFFSET) * reference.width) ** 2
     return Rows(
-        row=row[near],
-        half=half[near],
-        residual=residual[near],
-        sd=np.sqrt(variance[near]),
-        place=mine.centre[p[near]],
-        normal=mine.normal[p[near]],
-        block=p[near],
+        row=row,
+        half=half,
+        residual=residual,
+        sd=np.sqrt(variance),
+        place=mine.centre[p],
+        normal=mine.normal[p],
+        block=p,
     )

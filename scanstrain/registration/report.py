@@ -24,6 +24,8 @@ BoolArray = NDArray[np.bool_]
 
 START_SIGMAS = 3.0
 """The capture range is taken as the three-sigma limit of the start's error along directions that stay at the start."""
+RIVAL = 0.45
+"""A second group of this part of the first one's area could as well be the stable one."""
 LOW_OVERLAP = 0.3
 """Share of the reference surface below which the overlap is worth a warning."""
 
@@ -131,7 +133,7 @@ def _stable_points(work: Work, points: FloatArray, options: Options) -> BoolArra
 
 def _warnings(ground: Ground | None, weak: tuple[WeakDirection, ...], overlap: float) -> list[str]:
     said = []
-    if ground is not None and ground.second_share > 0.5 * ground.share:
+    if ground is not None and ground.second_share > RIVAL * ground.share:
         said.append(
             f"stable ground is ambiguous: {ground.share:.0%} of the matched surface shares one motion and "
             f"{ground.second_share:.0%} shares another; if the second group were the stable one, displacements would "

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.registration.fit import TUKEY, biweight, robust_scale
+from scanstrain.registration.fit import MIN_SCALE, TUKEY, biweight, robust_scale
 from scanstrain.registration.match import Metric, Rows
 from scanstrain.registration.surfaces import Surface
 from scanstrain.registration.weak import reach
@@ -30,6 +30,8 @@ WANTED_PATCHES = 40
 """Smaller objects are cut into smaller patches, so that at least about so many are left."""
 CLEAR_SHARE = 0.65
 """Below this share of agreeing surface, what moved and what stood still is a matter of opinion."""
+SCATTER_ROUNDS = 3
+"""Rounds of weighting down odd blocks inside the patches."""
 SAMPLE = 1000
 """Patches that random starts are scored on."""
 
@@ -47,7 +49,7 @@ class Patches:
     sd : ndarray of shape (g,)
         Its standard deviation from the scatter inside the patches [m].
     blocks : ndarray of shape (g,)
-        Matched blocks, a measure of area; patches without one have 0.
+        Matched blocks, a measure of area; 0 for patches without one and for those that are torn.
     """
 
     row: FloatArray
@@ -126,31 +128,49 @@ def make_patches(rows: Rows, index: IntArray, count: int) -> Patches:
         Number of patches.
     """
     mine = index[rows.block]
-    inside = rows.residual - _medians(rows.residual, mine, count)[mine]
     blocks = np.bincount(mine, minlength=count).astype(float)
-    z = inside / rows.sd * np.sqrt(blocks / np.maximum(blocks - 1, 1))[mine]
-    scale = max(robust_scale(z[blocks[mine] > 2]), 1e-3) if (blocks[mine] > 2).any() else 1.0
-    weight = biweight(z / (TUKEY * scale)) / rows.sd**2
+    spare = np.maximum(blocks - 3, 0)[mine]
+    judge = spare > 0
+    weight = 1 / rows.sd**2
+    scale = np.inf
+    for _ in range(SCATTER_ROUNDS):
+        inside = (rows.residual - _trend(rows, mine, weight, count)) / rows.sd
+        z = inside[judge] * np.sqrt(blocks[mine] / np.maximum(spare, 1))[judge]
+        scale = max(min(scale, robust_scale(z)), MIN_SCALE) if len(z) else 1.0
+        weight = np.where(judge, biweight(inside / (TUKEY * scale)), 1.0) / rows.sd**2
     summed = np.maximum(np.bincount(mine, weight, minlength=count), 1e-300)
     row = np.stack([np.bincount(mine, weight * rows.row[:, a], minlength=count) for a in range(6)], axis=1)
     return Patches(
         row=row / summed[:, None],
         residual=np.bincount(mine, weight * rows.residual, minlength=count) / summed,
         sd=scale / np.sqrt(summed),
-        blocks=blocks,
+        blocks=np.where(_even(rows, mine, weight, blocks), blocks, 0.0),
     )
 
 
-def _medians(values: FloatArray, index: IntArray, count: int) -> FloatArray:
-    order = np.lexsort((values, index))
-    start = np.searchsorted(index[order], np.arange(count + 1))
-    out = np.zeros(count)
-    some = np.diff(start) > 0
-    ranked = values[order]
-    low = (start[:-1] + start[1:] - 1) // 2
-    high = (start[:-1] + start[1:]) // 2
-    out[some] = (ranked[low[some]] + ranked[high[some]]) / 2
-    return out
+def _even(rows: Rows, patch: IntArray, weight: FloatArray, blocks: FloatArray) -> BoolArray:
+    """Patches that are mostly of one piece: one that a moved part only half covers belongs to neither side."""
+    kept = np.bincount(patch, weight * rows.sd**2, minlength=len(blocks))
+    return np.asarray(kept >= blocks / 2)
+
+
+def _trend(rows: Rows, patch: IntArray, weight: FloatArray, count: int) -> FloatArray:
+    """Plane through the residuals of every patch, at the blocks [m].
+
+    A patch that is tilted, by a wrong pose or by deformation, is not a noisy patch.
+    """
+    summed = np.maximum(np.bincount(patch, weight, minlength=count), 1e-300)
+    middle = np.stack([np.bincount(patch, weight * rows.place[:, a], minlength=count) for a in range(3)], axis=1)
+    x = np.concatenate([rows.place - (middle / summed[:, None])[patch], np.ones((len(patch), 1))], axis=1)
+    N, right = np.empty((count, 4, 4)), np.empty((count, 4))
+    for a in range(4):
+        right[:, a] = np.bincount(patch, weight * x[:, a] * rows.residual, minlength=count)
+        for b in range(4):
+            N[:, a, b] = np.bincount(patch, weight * x[:, a] * x[:, b], minlength=count)
+    # The ridge stands for the third dimension, in which a patch has no extent.
+    ridge = 1e-6 * np.trace(N, axis1=1, axis2=2) + 1e-300
+    solved = np.linalg.solve(N + ridge[:, None, None] * np.eye(4), right[..., None])[..., 0]
+    return np.asarray((x * solved[patch]).sum(axis=1))
 
 
 def choose_ground(patches: Patches, strong: FloatArray, metric: Metric, places: FloatArray, seed: int) -> Ground:

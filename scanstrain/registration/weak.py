@@ -11,8 +11,8 @@ from scanstrain.registration.result import WeakDirection
 
 FloatArray = NDArray[np.float64]
 
-MIN_RELIABILITY = 0.5
-"""Least share of a direction's information that both epochs agree on. Below it most of it is noise of the normals."""
+MIN_RELIABILITY = 0.7
+"""Least share of a direction's information that both epochs agree on: below it too much is noise of the normals."""
 FLAT = 0.95
 """Share of the normals' scatter in one direction above which the surface is called a plane."""
 PRISMATIC = 0.03
@@ -57,7 +57,7 @@ def split(
     in itself: a straight smooth tunnel then seems to fix its own roll (the effect is described by Hatleskog & Alexis
     2024). Here it is measured instead of modelled: with n and m the two epochs' own normals at a match,
     sum w sym(a(n) a(m)') has the noise of neither, as the two are independent. A direction is weak where that shared
-    part is less than half of the information, or where the standard error at the place moved most exceeds the budget.
+    part is less than 70 % of the information, or where the standard error at the place moved most exceeds the budget.
 
     Parameters
     ----------

@@ -107,7 +107,7 @@ def sample_truth(name: str) -> SampleTruth:
         surface,
         motion,
         relief=_skin(surface, rms=0.001, correlation_length=0.05, seed=index // 3 * 10 + 1),
-        texture=_skin(surface, rms=0.18, correlation_length=0.04, seed=index // 3 * 10 + 2),
+        texture=_skin(surface, rms=0.30, correlation_length=0.04, seed=index // 3 * 10 + 2),
         origin=ORIGIN,
     )
     make = _adit_station if surface is ADIT else _wall_station

@@ -29,7 +29,7 @@ the adit. A cabinet stands at chainage 6.3 m and a pipe runs along the left wall
 runs 0.35 rad clockwise from east. The free side is to the right. A pavement, a return wall at its far end, a
 buttress, a downpipe and a post stand before it. Two epochs.
 
-Both have a relief of 1 mm rms (correlation exp(-(d/50 mm)^2)) and a reflectance texture of 18 % rms
+Both have a relief of 1 mm rms (correlation exp(-(d/50 mm)^2)) and a reflectance texture of 30 % rms
 (exp(-(d/40 mm)^2)), which ride on the surface. Floor, bulkhead, cabinet, pipe, pavement, return wall, buttress,
 downpipe and post have neither, and never move. LAS classes: 6 the structure, 2 floor and pavement, 1 the rest.
 
