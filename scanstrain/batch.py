@@ -16,10 +16,14 @@ from scanstrain.registry import unknown_name
 from scanstrain.workers import map_in_processes
 
 if TYPE_CHECKING:  # the options load NumPy, which must not happen before a worker has set its threads
-    from scanstrain.config import BatchConfig, CompareConfig
+    from scanstrain.config import BatchConfig, CompareConfig, EpochEntry
 
 Progress = Callable[[str, float], None]
 """Called with the name of the step at work and the share of the whole that is done, from 0 to 1."""
+
+
+EpochLabel = tuple[str, str | None]
+"""What the user calls an epoch, and its date in ISO form."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,6 +67,7 @@ class _Job:
     folder: Path
     config: CompareConfig
     assume_same_crs: bool
+    labels: tuple[EpochLabel, EpochLabel]
 
 
 def compare_to_folder(
@@ -72,9 +77,12 @@ def compare_to_folder(
     folder: Path,
     *,
     assume_same_crs: bool = False,
+    labels: tuple[EpochLabel, EpochLabel] | None = None,
     progress: Progress | None = None,
 ) -> dict[str, Any]:
     """Compare two scans and write everything into a folder.
+
+    `labels` are what the user calls the two epochs, each with its date; by default the files name them.
 
     Returns
     -------
@@ -92,7 +100,9 @@ def compare_to_folder(
     from scanstrain.outputs import write_result
     from scanstrain.pipeline import compare_files
 
-    result = compare_files(reference, current, config, assume_same_crs=assume_same_crs, progress=progress)
+    result = compare_files(
+        reference, current, config, assume_same_crs=assume_same_crs, labels=labels, progress=progress
+    )
     options = config.output
     write_result(
         result,
@@ -192,12 +202,17 @@ def _jobs(config: BatchConfig, only: Sequence[str]) -> list[_Job]:
         name = f"{reference.label}_to_{current.label}"
         names[name] = {name, reference.label, current.label}
         folder = config.output.folder / name
-        jobs.append(_Job(name, reference.file, current.file, folder, compare, config.assume_same_crs))
+        labels = _label(reference), _label(current)
+        jobs.append(_Job(name, reference.file, current.file, folder, compare, config.assume_same_crs, labels))
     known = sorted(set().union(*names.values()))
     for label in only:
         if label not in known:
             raise OptionError(unknown_name("only", label, known))
     return [job for job in jobs if not only or names[job.name] & set(only)]
+
+
+def _label(entry: EpochEntry) -> EpochLabel:
+    return entry.label, entry.date.isoformat() if entry.date else None
 
 
 def _run(job: _Job, progress: Progress | None = None) -> Outcome:
@@ -214,6 +229,7 @@ def _run(job: _Job, progress: Progress | None = None) -> Outcome:
             job.config,
             job.folder,
             assume_same_crs=job.assume_same_crs,
+            labels=job.labels,
             progress=step,
         )
     except Exception as error:  # whatever it was, the other comparisons go on

@@ -6,7 +6,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +20,7 @@ from scanstrain.result import Result
 
 FloatArray = NDArray[np.float64]
 Progress = Callable[[str, float], None]
+EpochLabel = tuple[str, str | None]
 
 AUTO_SPACINGS = 60.0
 """Gauge length of `gauge_length = "auto"`, in point spacings: some 2 800 points a gauge, which brings the noise of a
@@ -57,9 +58,13 @@ def compare_files(
     config: CompareConfig,
     *,
     assume_same_crs: bool = False,
+    labels: tuple[EpochLabel, EpochLabel] | None = None,
     progress: Progress | None = None,
 ) -> Result:
-    """Read two scan files and compare them; arguments as of `compare` and `compare_epochs`."""
+    """Read two scan files and compare them; arguments as of `compare` and `compare_epochs`.
+
+    `labels` are what the user calls the two epochs, each with its date; by default the files name them.
+    """
     from scanstrain.io import check_same_frame, read_scan
 
     clock = Clock(progress)
@@ -67,6 +72,8 @@ def compare_files(
         first = read_scan(reference)
         second = read_scan(current, origin=first.origin)
         notices = check_same_frame(first, second, assume_same_crs=assume_same_crs)
+    if labels:
+        first, second = _named(first, *labels[0]), _named(second, *labels[1])
     return _compare(first, second, config, clock, notices)
 
 
@@ -132,6 +139,7 @@ def _compare(
         )
     with clock.stage("points", 0.85):
         points = blend_to_points(strain, reference.points)
+    clock.say("done", 1.0)
     said = (*notices, *registration.warnings, *affine.warnings, *strain.warnings)
     return Result(
         reference, current, registration, affine, strain, points, config, clock.seconds, tuple(dict.fromkeys(said))
@@ -163,6 +171,12 @@ def tunnel_axis(reference: Epoch, gauge_length: float) -> FloatArray | None:
 def _number(value: float | str) -> float | None:
     """Turn the word auto into None."""
     return None if isinstance(value, str) else float(value)
+
+
+def _named(epoch: Epoch, label: str, date: str | None) -> Epoch:
+    """Return the epoch under the user's label and date."""
+    provenance = replace(epoch.provenance, date=date or epoch.provenance.date)
+    return replace(epoch, label=label, provenance=provenance)
 
 
 @dataclass

@@ -9,13 +9,14 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import median_spacing
+from scanstrain.cells import make_cells, median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import FitError, OptionError, explain
 from scanstrain.neighbourhood.gauges import frames_at, place_gauges
 from scanstrain.neighbourhood.intensity import comparable_intensity
-from scanstrain.neighbourhood.level import Estimate, Level, make_cells, make_surface
+from scanstrain.neighbourhood.level import Estimate, Level, make_surface
 from scanstrain.neighbourhood.result import AffineField, Status
+from scanstrain.neighbourhood.smooth import SmoothSurface
 
 FloatArray = NDArray[np.float64]
 Progress = Callable[[str, float], None]
@@ -24,7 +25,7 @@ CELLS_ACROSS = 100
 """No more cells than this across a gauge: a denser cloud is averaged, at no loss for texture wider than a cell."""
 COARSEST = 15
 """Cells across a gauge at the coarsest level: sets how large a displacement the pyramid captures."""
-REQUIRED_DISPLACEMENT_SD = 5e-3
+REQUIRED_DISPLACEMENT_SD = 2e-3
 """Metric default [m]: a displacement less certain than this says nothing about a structure."""
 REQUIRED_STRAIN_SD = 1e-3
 """Metric default [1]: a strain less certain than this cannot tell cracking from nothing (common practice)."""
@@ -34,6 +35,8 @@ REQUIRED_CURVATURE_SD = 0.1
 """Metric default [1/m] for changes of curvature."""
 MIN_COVER = 0.35
 """Share of the patch that must be covered: less is a sliver at an edge or hole."""
+SHARPEST = 0.5
+"""Largest slope of the smooth surface at the rim of a gauge [1]: beyond it the patch spans an arris, not a surface."""
 MIN_MATCHED = 0.5
 """Share of a patch's cells that the current epoch must show."""
 
@@ -151,7 +154,7 @@ def fit_affine(
         displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
         strain=required_strain_sd or REQUIRED_STRAIN_SD,
     )
-    status = _status(state, gauges.support, change.max(axis=1) > 0.5 * width, min_points)
+    status = _status(state, gauges, radius, change.max(axis=1) > 0.5 * width, min_points)
     if not (status == Status.FINE).any():
         counts = ", ".join(f"{Status(s).name.lower()} {int((status == s).sum())}" for s in np.unique(status))
         raise FitError(
@@ -216,24 +219,31 @@ def _intensities(
 
 
 def _status(
-    state: Estimate, support: NDArray[np.int64], moving: NDArray[np.bool_], min_points: int
+    state: Estimate, gauges: SmoothSurface, radius: float, moving: NDArray[np.bool_], min_points: int
 ) -> NDArray[np.uint8]:
     """Give every gauge its reason code."""
     total, matched, _, _, _, cover = state.info.T
     status = np.full(len(total), Status.FINE, np.uint8)
     status[moving] = Status.NOT_CONVERGED
-    status[cover < MIN_COVER] = Status.EDGE
+    bend = np.abs(gauges.curvature[:, [0, 2]]).max(axis=1) + np.abs(gauges.curvature[:, 1])
+    status[(cover < MIN_COVER) | (bend * radius > SHARPEST)] = Status.EDGE
     status[~np.isfinite(state.values).all(axis=1)] = Status.DEGENERATE
     status[matched < min_points] = Status.TOO_FEW_POINTS
     status[matched < MIN_MATCHED * total] = Status.NO_OVERLAP
     status[total < min_points] = Status.TOO_FEW_POINTS
-    status[support < 6] = Status.DEGENERATE
+    status[gauges.support < 6] = Status.DEGENERATE
     return status
 
 
 def _field(
-    state: Estimate, gauges, status, need: Requirements, gauge_length: float, spacing: float, warnings
-) -> AffineField:  # type: ignore[no-untyped-def]
+    state: Estimate,
+    gauges: SmoothSurface,
+    status: NDArray[np.uint8],
+    need: Requirements,
+    gauge_length: float,
+    spacing: float,
+    warnings: tuple[str, ...],
+) -> AffineField:
     """Scale the unknowns back to their units and blank what is not observable."""
     radius = gauge_length / 2
     scale = np.array([1.0] * 3 + [1 / radius] * 6 + [1 / radius**2] * 3)
@@ -261,5 +271,5 @@ def _field(
         residual_intensity=np.sqrt(state.info[:, 4]),
         gauge_length=gauge_length,
         gauge_spacing=spacing,
-        warnings=tuple(warnings),
+        warnings=warnings,
     )

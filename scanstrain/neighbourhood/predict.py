@@ -28,6 +28,8 @@ MARGIN = 1.5
 """Cells kept around a block so that its border is predicted from both sides, in cells."""
 _CONSTANT = 100.0
 """Prior variance of the unknown constant, relative to sill plus noise: large enough to leave it free."""
+_FILLED = 0.7
+"""Share of cells that hold a point where cells are as wide as the point spacing (Poisson: 0.63; scanner lines: more)."""
 _SAME_SHEET = 0.7
 """Cosine between normals above which a neighbouring block counts as the same sheet."""
 
@@ -156,8 +158,8 @@ def krige(
 ) -> tuple[float, float, float]:  # fmt: skip
     """Solve one ordinary kriging system.
 
-    Fills `weights` with the sill times K^-1 (values), to be multiplied with correlations; returns the constant, and the prediction variance and its structural part,
-    each averaged over four probes at (+-probe, +-probe).
+    Fills `weights` with the sill times K^-1 (values), to be multiplied with correlations; returns the constant and
+    what `_prediction_error` says for probes at (+-probe, +-probe).
     """
     constant = _CONSTANT * (sill + noise)
     for i in range(m):
@@ -182,24 +184,45 @@ def krige(
     offset = constant * weights[:m].sum()
     for i in range(m):
         weights[i] *= sill
-    k_probe = np.empty(m)
-    variance = unresolved = 0.0
-    for a in (-probe, probe):
-        for b in (-probe, probe):
-            for i in range(m):
-                dx, dy = s[i] - a, t[i] - b
-                k_probe[i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
-            _forward(L, k_probe, m)
-            v = sill + constant
-            for i in range(m):
-                v -= k_probe[i] * k_probe[i]
-            _backward(L, k_probe, m)
+    return (offset, *_prediction_error(s, t, share, m, table, step, noise, sill, constant, probe, L))
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_LANES)
+def _prediction_error(
+    s: FloatArray, t: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float, noise: float, sill: float,
+    constant: float, probe: float, L: FloatArray,
+) -> tuple[float, float]:  # fmt: skip
+    """Prediction variance, and what unresolved structure adds per row to the variance of a sum over many rows.
+
+    Judged at four probes one cell apart. Neighbouring rows miss the same structure, so to the variance of one row
+    come its covariances with the four nearest and four diagonal neighbours, as far as these cells are filled.
+    """
+    y, weights = np.empty((4, m)), np.empty((4, m))
+    for p in range(4):
+        a, b = probe * (2 * (p % 2) - 1), probe * (2 * (p // 2) - 1)
+        for i in range(m):
+            dx, dy = s[i] - a, t[i] - b
+            y[p, i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
+        _forward(L, y[p], m)
+        weights[p] = y[p]
+        _backward(L, weights[p], m)
+    variance = own = side = diagonal = 0.0
+    for p in range(4):
+        for q in range(p + 1):
+            apart = (p % 2 != q % 2) + (p // 2 != q // 2)
+            total = sill * lookup(table, 0, 4.0 * apart * probe * probe, step) + constant
             through = 0.0
             for i in range(m):
-                through += k_probe[i] * k_probe[i] * noise * share[i]
-            variance += 0.25 * max(v, through)
-            unresolved += 0.25 * max(v - through, 0.0)
-    return offset, variance, unresolved
+                total -= y[p, i] * y[q, i]
+                through += weights[p, i] * weights[q, i] * noise * share[i]
+            if apart == 0:
+                variance += 0.25 * max(total, through)
+                own += 0.25 * max(total - through, 0.0)
+            elif apart == 1:
+                side += 0.25 * (total - through)
+            else:
+                diagonal += 0.5 * (total - through)
+    return variance, max(own + _FILLED * 4.0 * (side + diagonal), 0.3 * own)
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)
@@ -236,7 +259,7 @@ def _solve_blocks(
         for i in range(m):
             share[i] = 1.0 / count[cells[i]]
             st[first[b] + i, 0], st[first[b] + i, 1] = s[i], t[i]
-        probe = 0.25 * size
+        probe = 0.5 * size / BLOCK_WIDTH
         constant[b, 0], variance[b, 0], unresolved[b, 0] = krige(
             s, t, h, share, m, height_table, step, noise[b, 0], sill[b, 0], probe, w, L
         )

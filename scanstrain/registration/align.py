@@ -145,6 +145,8 @@ def _cut(reference: FloatArray, current: FloatArray, options: Options) -> tuple[
     if not spacing > 0:
         got = "a spacing of zero"
         raise OverlapError(explain("registration", "points in different places", got, "export the scans again"))
+    _check_spread(reference, spacing)
+    _check_spread(current, spacing)
     points = min(len(reference), len(current))
     widths = level_widths(points, spacing, BLOCK_SPACINGS, options.capture_range)
     mine = pyramid(reference, widths, own_grid=False)
@@ -156,6 +158,21 @@ def _cut(reference: FloatArray, current: FloatArray, options: Options) -> tuple[
     enough = [min(a.flat(), b.flat()) >= 2 * MIN_MATCHES for a, b in zip(mine[:-1], theirs[:-1], strict=True)]
     enough.append(True)
     return list(compress(mine, enough)), list(compress(theirs, enough))
+
+
+def _check_spread(points: FloatArray, spacing: float) -> None:
+    """Refuse points along one line: every block would pass for flat."""
+    sample = points[:: max(1, len(points) // 5000)]
+    size = np.linalg.svd(sample - sample.mean(axis=0), compute_uv=False) / np.sqrt(len(sample))
+    if size[1] < CLUTTER_SPACINGS * spacing / 2:
+        raise RegistrationError(
+            explain(
+                "registration",
+                "points that span a surface",
+                f"points within {size[1]:.3g} m (rms) of one line, at a spacing of {spacing:.3g} m",
+                "check that this is a scan",
+            )
+        )
 
 
 def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Surface, str]:
@@ -233,7 +250,7 @@ def _check_ground(ground: Ground, seen: Patches) -> None:
 
 
 def _decide_weak(work: Work) -> None:
-    """Split the motions while the two grids are still independent, and take back what moved along weak ones."""
+    """Split the motions into those that the surfaces fix and weak ones, while the two grids are still independent."""
     at = work.metric
     # Same pose, rows about the final pivot.
     fit = align(
@@ -265,14 +282,19 @@ def _decide_weak(work: Work) -> None:
     if work.weak.shape[1]:
         work.weak = follow(work)
         work.strong = complement(work.weak)
-    for _ in range(TAKE_BACK):
-        back = work.weak @ (work.weak.T @ motion(work.T @ inverse(work.T_start), at))
-        work.T = step_of(-back, at) @ work.T
+
+
+def _take_back(work: Work) -> None:
+    """Undo what moved along weak directions since the start."""
+    for _ in range(TAKE_BACK if work.weak.shape[1] else 0):
+        back = work.weak @ (work.weak.T @ motion(work.T @ inverse(work.T_start), work.metric))
+        work.T = step_of(-back, work.metric) @ work.T
 
 
 def _finish(work: Work, points: FloatArray, options: Options) -> None:
     """Cut the current epoch in the reference's own grid, where both show the same pieces, and fit to the end."""
     for cut in range(MAX_CUTS):
+        _take_back(work)
         work.current = make_surface(points, work.reference.width, T_grid_epoch=work.T)
         work.take(
             align(

@@ -3,6 +3,7 @@
 
 from __future__ import annotations
 
+from contextlib import suppress
 from typing import Any
 
 import numpy as np
@@ -13,22 +14,29 @@ from scanstrain.errors import MissingDependencyError, OverlapError, explain
 from scanstrain.registration.fit import align, biweight, level_metric, rough
 from scanstrain.registration.match import Metric, observe, pair
 from scanstrain.registration.rigid import inverse
-from scanstrain.registration.surfaces import MIN_COUNT, Surface, judged
+from scanstrain.registration.surfaces import MIN_COUNT, UNUSABLE, Surface, judged
 
 FloatArray = NDArray[np.float64]
 
 SHARE_AT_ONCE = 0.5
 """Share of well matched surface above which the pose as given is believed and no other is looked for."""
+BETTER = 1.3
+"""How many times the share of the pose as given another pose must reach."""
+FACING = 0.1
+"""Part of the blocks that a facing must have to be counted."""
 SHARE_NEEDED = 0.1
 """Share of well matched surface below which no start is believed."""
 FEATURE_BLOCKS = (6000, 2500, 1000)
 """Blocks that the surface is cut into for features, from detailed to robust: three scales, the best one wins."""
-CLOSE = 0.1
+CLOSE = 0.25
 """A match is close within this part of a block width (or three standard deviations)."""
 
 
 def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> float:
     """Robust share of the smaller surface that lies close to the other with like normals.
+
+    The mean over the three facings that a surface may have, so that a wrong pose which keeps the floor on the floor does
+    not score by the size of the floor.
 
     Parameters
     ----------
@@ -42,12 +50,17 @@ def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) ->
         1 for surfaces that fit everywhere, 0 without any match.
     """
     pairs = pair(reference, current, T_ref_grid)
-    smaller = min(reference.flat(), current.flat())
-    if not len(pairs) or not smaller:
+    flat = reference.state != UNUSABLE
+    if not len(pairs) or not current.flat():
         return 0.0
     rows = observe(reference, current, pairs, T_ref_grid, Metric(np.zeros(3), 1.0))
     limit = np.maximum(CLOSE * reference.width, 3 * rows.sd)
-    return min(float(biweight(rows.residual / limit).sum()) / smaller, 1.0)
+    facing = np.abs(reference.cells.normal).argmax(axis=1)
+    blocks = np.bincount(facing[flat], minlength=3).astype(float)
+    close = np.bincount(facing[rows.block], biweight(rows.residual / limit), minlength=3)
+    counts = blocks >= FACING * blocks.sum()
+    smaller = min(1.0, current.flat() / blocks.sum())
+    return min(float((close[counts] / blocks[counts]).mean()) / smaller, 1.0)
 
 
 def settle(
@@ -144,7 +157,9 @@ def _feature_cloud(o3d: Any, surface: Surface, width: float, consistent: bool) -
     cloud = o3d.geometry.PointCloud(o3d.utility.Vector3dVector(centre))
     cloud.normals = o3d.utility.Vector3dVector(normal)
     if consistent and len(centre) > 20:
-        cloud.orient_normals_consistent_tangent_plane(12)
+        # On exactly flat clouds its triangulation gives up; the first orientation then has to serve.
+        with suppress(RuntimeError):
+            cloud.orient_normals_consistent_tangent_plane(12)
         turned = np.asarray(cloud.normals)
         if np.einsum("ij,ij->i", turned, normal).sum() < 0:
             cloud.normals = o3d.utility.Vector3dVector(-turned)
@@ -229,7 +244,8 @@ def choose_start(
     share = settle(reference, current, T_given)[1]
     if start == "auto" and share >= SHARE_AT_ONCE:
         return T_given, "identity"
-    tried = [(share, "identity", T_given)] if start == "auto" else []
+    # Features of a plain wall fit in many ways: another pose must be clearly better than the one given.
+    tried = [(share * BETTER, "identity", T_given)] if start == "auto" and share >= SHARE_NEEDED else []
     for proposal in feature_starts(reference[-1], current[-1], seed):
         tried.append((settle(reference, current, proposal)[1], "coarse", proposal))
     best = max(tried, key=lambda item: item[0], default=(0.0, "", T_given))

@@ -13,7 +13,7 @@ from scanstrain.registration.work import Work
 
 FloatArray = NDArray[np.float64]
 
-LONGEST, TRIALS = 1.0, 4
+LONGEST, TRIALS = 3.0, 4
 """How far the surface is slid at first [m], and how often that is halved until most of it still meets itself."""
 MEETING = 0.6
 """Part of the used surface that must meet itself after the slide."""

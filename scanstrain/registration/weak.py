@@ -17,6 +17,8 @@ FLAT = 0.95
 """Share of the normals' scatter in one direction above which the surface is called a plane."""
 PRISMATIC = 0.03
 """Share of the normals' scatter along a direction below which the surface is called an extrusion along it."""
+WIDEST_GAP = 0.75 * np.pi
+"""Opening angle up to which a surface around an axis counts as a tunnel: a hidden floor, not a missing half."""
 TRANSLATION = 0.2
 """Rotational part of a unit weak motion (in metres at the farthest point) below which it is called a slide."""
 
@@ -122,7 +124,7 @@ def _surrounds(normals: FloatArray, places: FloatArray, axis: FloatArray) -> boo
     across = (places - centre) @ u
     angles = np.sort(np.arctan2(across[:, 1], across[:, 0]))
     gap = np.diff(np.r_[angles, angles[0] + 2 * np.pi]).max()
-    return bool(gap < np.pi)
+    return bool(gap < WIDEST_GAP)
 
 
 def _slides(basis: FloatArray) -> FloatArray:

@@ -19,6 +19,13 @@ BoolArray = NDArray[np.bool_]
 ALIGNED = 0.1
 """A gauge tangent whose cosine with a structure axis is below this (6 degrees) adds nothing to that component."""
 
+DATUM_LIMIT = 0.01
+"""A displacement [m], tilt or spin [rad] whose datum is less certain than this is not given: the registration left
+that motion open, whatever the local fit saw."""
+
+_OF_THE_DATUM = (Observed.NORMAL, Observed.TILT, Observed.SPIN)
+"""What refers to the datum; strain and curvature do not."""
+
 _NEEDS = {
     Observed.NORMAL: ("un",),
     Observed.TILT: ("gn1", "gn2"),
@@ -41,6 +48,9 @@ class Gauges:
     parameters : ndarray of shape (g, 12)
         Unknowns in the order of `PARAMETERS`, zero where not observable.
     observable : ndarray of shape (g, 12), bool
+        By the local fit.
+    anchored : ndarray of shape (g, 12), bool
+        Of these, the ones whose datum is known well enough to state a motion.
     covariance : ndarray of shape (g, 12, 12)
         From observations; rows and columns of what is not observable are zero.
     datum_covariance : ndarray of shape (g, 12, 12)
@@ -53,6 +63,7 @@ class Gauges:
     shape: FloatArray
     parameters: FloatArray
     observable: BoolArray
+    anchored: BoolArray
     covariance: FloatArray
     datum_covariance: FloatArray
 
@@ -67,11 +78,12 @@ class Gauges:
     @property
     def has_displacement(self) -> BoolArray:
         """Whether the whole displacement vector is observable."""
-        return np.asarray(self.observable[:, :3].all(axis=1))
+        return np.asarray(self.anchored[:, :3].all(axis=1))
 
     def has(self, what: Observed) -> BoolArray:
         """Whether each gauge observes `what` (not for the displacements along u and v, which need axes)."""
-        return np.asarray(self.observable[:, [PARAMETERS.index(name) for name in _NEEDS[what]]].all(axis=1))
+        known = self.anchored if what in _OF_THE_DATUM else self.observable
+        return np.asarray(known[:, [PARAMETERS.index(name) for name in _NEEDS[what]]].all(axis=1))
 
     def observed_bits(self, axes: FloatArray) -> NDArray[np.uint8]:
         """Bits of `Observed`; displacement along u or v needs the tangents that are not square to that axis."""
@@ -80,7 +92,7 @@ class Gauges:
             bits |= np.where(self.has(what), np.uint8(what), np.uint8(0))
         for column, what in enumerate((Observed.DISPLACEMENT_U, Observed.DISPLACEMENT_V)):
             share = np.abs(np.einsum("gik,gi->gk", self.frame[:, :, :2], axes[:, :, column]))
-            seen = ((share < ALIGNED) | self.observable[:, :2]).all(axis=1)
+            seen = ((share < ALIGNED) | self.anchored[:, :2]).all(axis=1)
             bits |= np.where(seen, np.uint8(what), np.uint8(0))
         return bits
 
@@ -107,13 +119,15 @@ def fitted_gauges(field: AffineField, registration: Registration | None) -> Gaug
     observable = field.observable[fine] & np.isfinite(parameters)
     seen = observable[:, :, None] & observable[:, None, :]
     covariance = np.where(seen, field.covariance[fine], 0.0)
-    datum = covariance
+    datum, anchored = covariance, observable
     if registration is not None:
         if not np.isfinite(registration.covariance).all():
             raise OptionError(
                 explain("registration", "a finite covariance", "NaN or infinity", "register again, or leave it out")
             )
-        datum = covariance + np.where(seen, registration_covariance(position, frame, registration), 0.0)
+        error = registration_covariance(position, frame, registration)
+        datum = covariance + np.where(seen, error, 0.0)
+        anchored = observable & (np.sqrt(np.einsum("gii->gi", error)) <= DATUM_LIMIT)
     return Gauges(
         fine=fine,
         position=position,
@@ -121,6 +135,7 @@ def fitted_gauges(field: AffineField, registration: Registration | None) -> Gaug
         shape=field.shape[fine],
         parameters=np.where(observable, parameters, 0.0),
         observable=observable,
+        anchored=anchored,
         covariance=covariance,
         datum_covariance=datum,
     )

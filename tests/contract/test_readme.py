@@ -62,7 +62,11 @@ def test_it_opens_with_one_paragraph_and_two_commands():
     assert title == "# scanstrain"
     assert not paragraph.startswith(("#", "-", "|", "`"))
     assert heading == "## Two commands"
-    assert README.index("<!-- run -->") < README.index("<!-- test -->") < README.index("\n## ", README.index(heading) + 3)
+    assert (
+        README.index("<!-- run -->")
+        < README.index("<!-- test -->")
+        < README.index("\n## ", README.index(heading) + 3)
+    )
 
 
 def test_the_attribute_table_is_the_one_that_is_written():
@@ -147,7 +151,7 @@ def test_the_python_that_is_shown_runs(tmp_path, monkeypatch):
         las.write(f"{epoch}.laz")
     exec(files, names)
     exec(one_by_one, names)
-    assert {"strain.laz", "strain_tilt.laz", "strain_tilt.png"} <= set(os.listdir("result"))
+    assert {"strain.laz", "strain_tilt.laz", "strain_tilt.png"} <= {path.name for path in Path("result").iterdir()}
     assert np.isnan(names["strain"].values["strain_u"]).all()
 
 
@@ -174,3 +178,10 @@ def test_every_link_leads_somewhere():
 def test_nothing_else_stands_at_the_top():
     found = {path.name for path in ROOT.iterdir() if not path.name.startswith(".")}
     assert found - MADE_BY_USE == ALLOWED
+
+
+def test_the_layout_for_developers_names_every_module():
+    text = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8").split("<!-- layout -->")[1].split("```")[1]
+    named = re.findall(r"^ +([\w/]+\.py) +\S", text, re.MULTILINE)
+    package = ROOT / "scanstrain"
+    assert sorted(named) == sorted(path.relative_to(package).as_posix() for path in package.rglob("*.py"))

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 from scanstrain.linalg import rotation_matrix
+from scanstrain.neighbourhood.result import Observed
 from scanstrain.strain import compute_strain
 from scanstrain.strain.uncertainty import magnitude_sd, registration_covariance, worst_direction_sd
 
@@ -59,16 +60,27 @@ def test_registration_error_enters_displacement_and_rotation_and_not_strain_or_c
         rng.normal(size=(6, 3)), FIELDS["random_frames"](rng, 6), gradient=gradient, shape=[0.1, 0, 0]
     )
     alone = compute_strain(field, measure="small")
-    fit = FIELDS["registration"](random_covariance(rng, 6, 1e-3), PIVOT)
+    fit = FIELDS["registration"](random_covariance(rng, 6, 1e-4), PIVOT)
     both = compute_strain(field, registration=fit, measure="small")
     for name in ("strain_1_sd", "strain_2_sd", "curv_sd"):
         np.testing.assert_array_equal(both.values[name], alone.values[name])
     for name in ("disp_n_sd", "tilt_sd", "spin_sd"):
-        assert (both.values[name] > 100 * alone.values[name]).all(), name
+        assert (both.values[name] > 10 * alone.values[name]).all(), name
     normal = field.frame[:, :, 2]
     expected = np.sqrt(1e-12 + np.einsum("gi,gij,gj->g", normal, fit.displacement_covariance(field.position), normal))
     np.testing.assert_allclose(both.values["disp_n_sd"], expected, rtol=1e-9)
     np.testing.assert_allclose(both.detection_limit["disp_n"], 1.959963984540054 * expected, rtol=1e-9)
+
+
+def test_a_motion_that_the_datum_leaves_open_is_not_given(rng):
+    gradient = rng.normal(0, 1e-3, (6, 3, 2))
+    field = FIELDS["affine_field"](np.zeros((6, 3)), np.eye(3), gradient=gradient)
+    open_slide = np.diag([1e-12] * 3 + [0.3**2, 1e-12, 1e-12])
+    values = compute_strain(field, registration=FIELDS["registration"](open_slide, np.zeros(3))).values
+    assert np.isnan(values["disp_x"]).all()
+    assert not (values["observed"] & (Observed.DISPLACEMENT_U | Observed.DISPLACEMENT_V) == 24).any()
+    for name in ("disp_n", "tilt", "spin", "strain_xx", "curv_1"):
+        assert np.isfinite(values[name]).all(), name
 
 
 @pytest.mark.parametrize("measure", ["small", "green_lagrange", "almansi", "hencky", "biot"])
