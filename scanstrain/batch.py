@@ -251,9 +251,7 @@ def in_words(error: BaseException) -> str:
     if isinstance(error, ScanstrainError):
         return str(error)
     if isinstance(error, MemoryError):
-        return (
-            "memory: required more than there is; got no more from the system; use smaller scans or fewer --workers."
-        )
+        return "memory: required more than there is; got no more from the system; use smaller scans or fewer --workers."
     # Some libraries put a whole page into a message; its first line says what it is about.
     got = f"{type(error).__name__}: {(str(error).strip().splitlines() or ['no text'])[0]}"
     return explain("the program", "no fault of its own", got, "please report it with its traceback, from --verbose")

@@ -108,20 +108,14 @@ def make_epoch(
     """
     xyz = np.asarray(coordinates, dtype=np.float64)
     if xyz.ndim != 2 or xyz.shape[1] != 3:
-        raise InputFileError(
-            explain(label, "coordinates of shape (n, 3)", f"shape {xyz.shape}", "stack x, y, z")
-        )
+        raise InputFileError(explain(label, "coordinates of shape (n, 3)", f"shape {xyz.shape}", "stack x, y, z"))
     if len(xyz) < MIN_POINTS:
         raise InputFileError(
-            explain(
-                label, f"at least {MIN_POINTS} points", f"{len(xyz)}", "check that this is the whole scan"
-            )
+            explain(label, f"at least {MIN_POINTS} points", f"{len(xyz)}", "check that this is the whole scan")
         )
     if not np.isfinite(xyz).all():
         bad = int((~np.isfinite(xyz).all(axis=1)).sum())
-        raise InputFileError(
-            explain(label, "finite coordinates", f"{bad} points with NaN or infinity", "remove them")
-        )
+        raise InputFileError(explain(label, "finite coordinates", f"{bad} points with NaN or infinity", "remove them"))
     low, high = xyz.min(axis=0), xyz.max(axis=0)
     if not (high > low).any():
         raise InputFileError(

@@ -135,9 +135,7 @@ def inspect_files(paths: Sequence[Path]) -> list[Inspected]:
             first = epoch
             seen.append(Inspected(str(path), found))
         else:
-            seen.append(
-                Inspected(str(path), found, overlap=overlap_share(epoch, first), against=first.provenance.path)
-            )
+            seen.append(Inspected(str(path), found, overlap=overlap_share(epoch, first), against=first.provenance.path))
     return seen
 
 

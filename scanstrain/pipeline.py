@@ -98,9 +98,7 @@ def compare_epochs(
     return _compare(reference, current.shifted(reference.origin), config, Clock(progress), ())
 
 
-def _compare(
-    reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...]
-) -> Result:
+def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...]) -> Result:
     from scanstrain.neighbourhood import fit_affine
     from scanstrain.registration import register
     from scanstrain.strain import blend_to_points, compute_strain
@@ -121,9 +119,7 @@ def _compare(
             min_points=options.min_points,
             required_displacement_sd=_number(options.required_displacement_sd),
             required_strain_sd=_number(options.required_strain_sd),
-            free_side=None
-            if config.strain.free_side is None
-            else np.array(config.strain.free_side) - reference.origin,
+            free_side=None if config.strain.free_side is None else np.array(config.strain.free_side) - reference.origin,
             axis=axis,
             progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
         )
@@ -153,9 +149,7 @@ def auto_gauge_length(reference: Epoch, current: Epoch) -> float:
     spacing = max(median_spacing(reference.points), median_spacing(current.points))
     length = min(AUTO_SPACINGS * spacing, AUTO_SHARE * float(np.ptp(reference.points, axis=0).max()))
     if not length > 0:
-        raise OptionError(
-            explain("gauge_length", "scans with distinct points", "coincident ones", "export them again")
-        )
+        raise OptionError(explain("gauge_length", "scans with distinct points", "coincident ones", "export them again"))
     return float(f"{length:.2g}")
 
 

@@ -77,9 +77,7 @@ def _paragraphs(texts: Iterable[str]) -> list[str]:
 
 def batch_screen(outcomes: Sequence[Outcome], folder: Path) -> str:
     """Return a table with one line for each comparison of a batch."""
-    rows: list[Sequence[str]] = [
-        ("comparison", "result", "gauges", "changed", "normal displacement", "limit", "time")
-    ]
+    rows: list[Sequence[str]] = [("comparison", "result", "gauges", "changed", "normal displacement", "limit", "time")]
     for outcome in outcomes:
         state = "done" if outcome.done else "failed"
         rows.append((outcome.name, state, *_findings(outcome.summary), f"{outcome.seconds:.0f} s"))

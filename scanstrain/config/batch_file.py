@@ -123,9 +123,7 @@ def _repeated_epochs(epochs: tuple[EpochEntry, ...]) -> Iterator[Fault]:
         folded = entry.label.casefold()
         if folded in labels:
             got = f"{entry.label!r} beside {labels[folded]!r}"
-            yield contradiction(
-                "a different label for each epoch", got, "rename one of them", key=(position, "label")
-            )
+            yield contradiction("a different label for each epoch", got, "rename one of them", key=(position, "label"))
         if entry.file in files:
             got = f"{entry.file} again, which is epoch {files[entry.file]!r}"
             yield contradiction("a different file for each epoch", got, "name each scan once", key=(position, "file"))

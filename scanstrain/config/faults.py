@@ -185,9 +185,7 @@ def required(model: type[BaseModel], name: str) -> str:
     schema = model.model_json_schema()["properties"][name]
     unit = re.search(r" \[(m|rad)\]", schema.get("description", ""))
     words = _words(schema)
-    return (
-        words.replace(" or ", f"{unit[0]} or ", 1) if unit and " or " in words else words + (unit[0] if unit else "")
-    )
+    return words.replace(" or ", f"{unit[0]} or ", 1) if unit and " or " in words else words + (unit[0] if unit else "")
 
 
 def _words(schema: Mapping[str, Any]) -> str:

@@ -51,9 +51,7 @@ def check_batch(path: Path) -> list[str]:
         elif not entry.file.is_file():
             got = "a folder" if entry.file.is_dir() else "no such file"
             remedy = f"check the path, which starts at {path.absolute().parent}"
-            faults.append(
-                contradiction("a scan file", f"{got}, {entry.file}", remedy, key=("epoch", position, "file"))
-            )
+            faults.append(contradiction("a scan file", f"{got}, {entry.file}", remedy, key=("epoch", position, "file")))
     if faults:
         raise OptionError(_at_lines(path, read_toml(path)[0], faults))
     names = [f"{reference.label}_to_{current.label}" for reference, current in config.pairs()]

@@ -144,9 +144,7 @@ class StrainOptions(Options):
 class CompareConfig(Options):
     """Everything that one comparison needs to know."""
 
-    registration: RegistrationOptions = Field(
-        default=RegistrationOptions(), description="Alignment of the two epochs."
-    )
+    registration: RegistrationOptions = Field(default=RegistrationOptions(), description="Alignment of the two epochs.")
     neighbourhood: NeighbourhoodOptions = Field(default=NeighbourhoodOptions(), description="Gauges and their fit.")
     strain: StrainOptions = Field(default=StrainOptions(), description="Strain, rotation, significance.")
     output: OutputOptions = Field(default=OutputOptions(), description="Colours and missing values.")

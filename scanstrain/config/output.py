@@ -64,9 +64,7 @@ class OutputOptions(Options):
 
     @field_validator("colour_limits")
     @classmethod
-    def _fit_the_attribute(
-        cls, value: tuple[float, float] | None, info: ValidationInfo
-    ) -> tuple[float, float] | None:
+    def _fit_the_attribute(cls, value: tuple[float, float] | None, info: ValidationInfo) -> tuple[float, float] | None:
         if value is not None and "colour_by" in info.data:
             from scanstrain.outputs.colour import choose_scale
 

@@ -94,9 +94,7 @@ def write_starter(path: Path, scans: Sequence[Path] = ()) -> Path:
             explain(str(path), "a name that ends in .toml", f"{path.name!r}", "name the batch file first, then scans")
         )
     if len(scans) == 1:
-        raise OptionError(
-            explain(str(path), "two scans or more, or none", "one scan", "name the scans of all epochs")
-        )
+        raise OptionError(explain(str(path), "two scans or more, or none", "one scan", "name the scans of all epochs"))
     epochs = [StarterEpoch(_label(scan), _seen_from(path.absolute().parent, scan)) for scan in scans]
     try:
         with path.open("x", encoding="utf-8", newline="\n") as stream:

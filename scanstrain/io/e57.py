@@ -37,9 +37,7 @@ def read_e57(path: Path, *, origin: ArrayLike | None = None, label: str | None =
         with path.open("rb") as stream:
             start = stream.read(len(SIGNATURE))
     except OSError as error:
-        raise refuse(
-            path, "a file that can be read", error.strerror or str(error), "check the permissions"
-        ) from error
+        raise refuse(path, "a file that can be read", error.strerror or str(error), "check the permissions") from error
     if start != SIGNATURE:
         raise refuse(path, "an E57 file, which begins with ASTM-E57", repr(start), "check the kind of file")
     scans, text = _read_scans(path)

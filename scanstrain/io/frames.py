@@ -43,9 +43,7 @@ def check_same_frame(reference: Epoch, current: Epoch, *, assume_same_crs: bool 
         return ()
     if a.crs is None or b.crs is None:
         silent = a.path if a.crs is None else b.path
-        return (
-            f"{silent} states no coordinate system that can be compared: it is taken to be that of the other scan",
-        )
+        return (f"{silent} states no coordinate system that can be compared: it is taken to be that of the other scan",)
     return _compare(where, a.crs, b.crs, assume_same_crs=assume_same_crs)
 
 
@@ -72,9 +70,7 @@ def _compare(where: str, a: str, b: str, *, assume_same_crs: bool) -> tuple[str,
         if _same(level[1], upright[1]):
             return ()
     if assume_same_crs:
-        return (
-            f"{where}: stated coordinate systems differ ({first.name}; {second.name}) and were taken as the same",
-        )
+        return (f"{where}: stated coordinate systems differ ({first.name}; {second.name}) and were taken as the same",)
     raise InputFileError(
         explain(
             where, "one coordinate system", f"{first.name} and {second.name}",

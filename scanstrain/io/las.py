@@ -85,9 +85,7 @@ def _step(header: LasHeader, xyz: NDArray[np.float64]) -> float:
 def _notices(header: LasHeader, xyz: NDArray[np.float64]) -> tuple[str, ...]:
     notices = []
     if header.unread:
-        notices.append(
-            f"{header.unread} bytes after the last point are not mentioned in the header and were not read"
-        )
+        notices.append(f"{header.unread} bytes after the last point are not mentioned in the header and were not read")
     high, low = np.array(header.bounds[0::2]), np.array(header.bounds[1::2])
     slack = np.array(header.scales)
     if len(xyz) and ((xyz.min(axis=0) < low - slack) | (xyz.max(axis=0) > high + slack)).any():

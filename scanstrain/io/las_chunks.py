@@ -48,9 +48,7 @@ def reading(path: Path) -> Iterator[None]:
         raise refuse(path, "points that can be decoded", "damage: the decompressor gave up") from error
 
 
-def pieces(
-    header: LasHeader, *, fields: str = EVERYTHING, size: int = PIECE
-) -> Iterator[tuple[int, NDArray[np.void]]]:
+def pieces(header: LasHeader, *, fields: str = EVERYTHING, size: int = PIECE) -> Iterator[tuple[int, NDArray[np.void]]]:
     """Yield (number of the first point, records) until the whole file is read, or refuse it.
 
     Parameters
@@ -91,9 +89,7 @@ def _open(header: LasHeader, fields: str) -> Any:
     if fields == EVERYTHING:
         return laspy.open(header.path, **options)
     part = laspy.DecompressionSelection
-    wanted = (
-        part.base() | part.Z | part.CLASSIFICATION | part.FLAGS | part.INTENSITY | part.POINT_SOURCE_ID | part.RGB
-    )
+    wanted = part.base() | part.Z | part.CLASSIFICATION | part.FLAGS | part.INTENSITY | part.POINT_SOURCE_ID | part.RGB
     return laspy.open(header.path, decompression_selection=wanted, **options)
 
 

@@ -150,9 +150,7 @@ def describe(attribute: Attribute, values: NDArray[np.generic], no_data: float) 
     else:
         options |= MIN_BIT | MAX_BIT
         least, most = struct.pack(code, low), struct.pack(code, high)
-    return ExtraField(
-        _pack(TYPE_CODES[dtype.name], options, attribute.name, attribute.description, empty, least, most)
-    )
+    return ExtraField(_pack(TYPE_CODES[dtype.name], options, attribute.name, attribute.description, empty, least, most))
 
 
 def _extremes(

@@ -54,9 +54,7 @@ def read_vlrs(path: Path, stream: BinaryIO, count: int, start: int, end: int) ->
             got = f"record {number + 1} of {count} that ends {start + lay.VLR_HEADER + length - end} bytes after it"
             raise refuse(path, f"VLRs that end before the points at byte {end}", got)
         record_id = struct.unpack_from("<H", head, 18)[0]
-        records.append(
-            Record(_text(head[2:18]), record_id, start, lay.VLR_HEADER + length, head, stream.read(length))
-        )
+        records.append(Record(_text(head[2:18]), record_id, start, lay.VLR_HEADER + length, head, stream.read(length)))
         start += lay.VLR_HEADER + length
     return tuple(records)
 

@@ -78,9 +78,7 @@ def _check_evlrs(target: Path, header: LasHeader, plan: Plan) -> None:
     pairs = [(new.start, new.length, old.start, old.length)
              for new, old in zip(header.evlrs, plan.evlrs, strict=True)]  # fmt: skip
     if source.tail[0]:
-        pairs.append(
-            (header.tail[0], header.tail[1] - header.tail[0], source.tail[0], source.tail[1] - source.tail[0])
-        )
+        pairs.append((header.tail[0], header.tail[1] - header.tail[0], source.tail[0], source.tail[1] - source.tail[0]))
     for start, length, old_start, old_length in pairs:
         same = length == old_length and _digest(header.path, start, length) == _digest(source.path, old_start, length)
         _check(target, "EVLR", same, True)

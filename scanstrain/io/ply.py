@@ -54,9 +54,7 @@ def read_ply(path: Path, *, origin: ArrayLike | None = None, label: str | None =
             header = _read_header(path, stream)
             vertices = _read_vertices(path, stream, header)
     except OSError as error:
-        raise refuse(
-            path, "a file that can be read", error.strerror or str(error), "check the permissions"
-        ) from error
+        raise refuse(path, "a file that can be read", error.strerror or str(error), "check the permissions") from error
     names = {name.lower(): name for name in vertices.dtype.names or ()}
     missing = [axis for axis in "xyz" if axis not in names]
     if missing:
@@ -110,9 +108,7 @@ def _read_vertices(path: Path, stream: BinaryIO, header: PlyHeader) -> NDArray[n
     room = path.stat().st_size - stream.tell()
     if header.encoding != "ascii":
         if header.count * header.dtype.itemsize > room:
-            raise refuse(
-                path, f"{header.count} vertices", f"room for {room // header.dtype.itemsize}: the file is cut"
-            )
+            raise refuse(path, f"{header.count} vertices", f"room for {room // header.dtype.itemsize}: the file is cut")
         return np.fromfile(stream, header.dtype, header.count)
     if (
         header.count * 2 * len(header.dtype.names or ()) > room + 1

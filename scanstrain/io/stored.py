@@ -109,9 +109,7 @@ def _check_range(name: str, array: NDArray[Any], no_data: float | None) -> None:
         raise OptionError(explain(name, required, f"{low} to {high}", "cap the values first"))
 
 
-def expand_to_file(
-    epoch: Epoch, values: Mapping[str, NDArray[Any]], *, dropped_status: int
-) -> dict[str, NDArray[Any]]:
+def expand_to_file(epoch: Epoch, values: Mapping[str, NDArray[Any]], *, dropped_status: int) -> dict[str, NDArray[Any]]:
     """Spread values of the points of an epoch over all points of its file.
 
     Points that were dropped at reading get NaN, codes get 0, and `status` gets `dropped_status`.

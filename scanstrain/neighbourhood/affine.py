@@ -113,7 +113,7 @@ def fit_affine(
     FitError
         No gauge anywhere could be fitted.
     """
-    say = progress or (lambda phrase, share: None)
+    say = progress or _silent
     spacing = gauge_spacing or gauge_length / 4
     width = _resolution(reference, current, gauge_length, resolution)
     grey_reference, grey_current = (
@@ -145,7 +145,7 @@ def fit_affine(
         gate = max(ours.gate, 4 * step) if not last else ours.gate + step
         for turn in range(3 if last else 1):
             before = state.held[:, :3].copy()
-            level.fit(state, gate=gate, rounds=3 if last and turn else 2, min_points=min_points)
+            level.fit(state, gate=gate, rounds=2, min_points=min_points)
             change = np.abs(state.held[:, :3] - before)
             if last and turn and np.nanquantile(change.max(axis=1), 0.99) < 0.05 * step:
                 break
@@ -166,6 +166,10 @@ def fit_affine(
             )
         )
     return _field(state, gauges, status, need, gauge_length, spacing, warnings)
+
+
+def _silent(_phrase: str, _share: float) -> None:
+    """Report progress to nobody."""
 
 
 def _resolution(reference: Epoch, current: Epoch, gauge_length: float, resolution: float | None) -> float:

@@ -32,6 +32,8 @@ SIGNIFICANT = 4.0
 """A structured term counts where the rise of the variogram exceeds this many of its standard errors."""
 _FEWEST = 6
 """Blocks that a region needs before its own variogram is believed."""
+SAMPLED = 20_000
+"""About so many blocks give their pairs: enough for the local variograms of any scan that fits in memory."""
 FLOOR = 1e-6
 """Least noise variance over sill: keeps the prediction well conditioned where a scan has no noise at all."""
 LEAST_NOISE = 0.3
@@ -99,7 +101,9 @@ def _pair_sums(
     A pair has its first cell in the block, the second anywhere within a block width.
     """
     bins = out.shape[1]
-    for b in numba.prange(len(key)):
+    stride = max(1, len(key) // SAMPLED)
+    for turn in numba.prange((len(key) + stride - 1) // stride):
+        b = turn * stride
         if support[b] < 6:
             continue
         cells = np.empty(1024, np.int64)

@@ -9,6 +9,8 @@ observed to expected residuals scales each kind (variance components after Foers
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numba
 import numpy as np
 from numpy.typing import NDArray
@@ -25,17 +27,22 @@ TUKEY = 6.0
 
 
 def _tukey_moments(cut: float) -> tuple[float, float]:
-    """Ratio of weighted to plain residual variance, and of sandwich to weighted-normal covariance, for Gauss noise."""
+    """For Gaussian residuals: weighted over plain variance, and sandwich over weighted-normal covariance."""
     from scipy.integrate import quad
     from scipy.stats import norm
 
-    def mean(f: object) -> float:
-        return float(quad(lambda r: f(r) * norm.pdf(r), -cut, cut)[0])  # type: ignore[operator]
+    def mean(f: Callable[[float], float]) -> float:
+        return float(quad(lambda r: f(r) * norm.pdf(r), -cut, cut)[0])
 
-    w = lambda r: (1 - (r / cut) ** 2) ** 2  # noqa: E731
-    slope = lambda r: (1 - (r / cut) ** 2) * (1 - 5 * (r / cut) ** 2)  # noqa: E731
-    mean_w = mean(w)
-    return mean(lambda r: w(r) * r * r) / mean_w, mean(lambda r: (w(r) * r) ** 2) / mean(slope) ** 2 * mean_w
+    def weight(r: float) -> float:
+        return (1 - (r / cut) ** 2) ** 2
+
+    def slope(r: float) -> float:
+        return (1 - (r / cut) ** 2) * (1 - 5 * (r / cut) ** 2)
+
+    mean_weight = mean(weight)
+    shrink = mean(lambda r: weight(r) * r * r) / mean_weight
+    return shrink, mean(lambda r: (weight(r) * r) ** 2) / mean(slope) ** 2 * mean_weight
 
 
 @numba.njit(cache=True, nogil=True)
@@ -48,8 +55,8 @@ def _members(
     m = 0
     for i in range(-1, 2):
         for j in range(-1, 2):
-            for l in range(-1, 2):
-                b = find_key(key, base + (i << (2 * _BITS)) + (j << _BITS) + l)
+            for k_step in range(-1, 2):
+                b = find_key(key, base + (i << (2 * _BITS)) + (j << _BITS) + k_step)
                 if b < 0:
                     continue
                 for c in range(start[b], start[b + 1]):
@@ -193,8 +200,9 @@ def _inverse(N: FloatArray, n: int, out: FloatArray) -> bool:
 
 @numba.njit(cache=True, nogil=True, parallel=True)
 def fit_gauges(
-    origin: FloatArray, frame: FloatArray, shape: FloatArray, start_values: FloatArray, radius: float, sheet_gate: float,
-    weak_prior: float, nuisance: FloatArray, hold: float, rounds: int, min_points: int, capacity: int, shrink: float, inflate: float,
+    origin: FloatArray, frame: FloatArray, shape: FloatArray, start_values: FloatArray, radius: float,
+    sheet_gate: float, weak_prior: float, nuisance: FloatArray, hold: float, rounds: int, min_points: int,
+    capacity: int, shrink: float, inflate: float,
     key: IntArray, start: IntArray, size: float, position: FloatArray, normal: FloatArray, count: FloatArray,
     valid: NDArray[np.bool_], moved: FloatArray, misfit: FloatArray, slope: FloatArray, grey: FloatArray,
     grey_slope: FloatArray, variance: FloatArray, own_grey: FloatArray, gains: FloatArray,

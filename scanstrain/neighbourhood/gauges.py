@@ -55,9 +55,7 @@ def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
     places = cells.position[chosen]
     pairs = cKDTree(places).query_pairs(_CROWDED * spacing, output_type="ndarray")
     pairs = pairs[np.lexsort((pairs[:, 1], pairs[:, 0]))]
-    kept = _thin(
-        np.ascontiguousarray(pairs[:, 0], np.int64), np.ascontiguousarray(pairs[:, 1], np.int64), len(places)
-    )
+    kept = _thin(np.ascontiguousarray(pairs[:, 0], np.int64), np.ascontiguousarray(pairs[:, 1], np.int64), len(places))
     return places[kept], cells.normal[cells.block[chosen[kept]]]
 
 

@@ -148,7 +148,8 @@ def comparable_intensity(epoch: Epoch, width: float, fine: float) -> FloatArray 
     -------
     ndarray of shape (n,) or None
         The intensity itself for one set-up; for several, the relative deviation from the local level [1], or
-        the plain deviation where intensities are signed or logarithmic. None without intensity, or where it does not vary.
+        the plain deviation where intensities are signed or logarithmic. None without intensity, or where it does
+        not vary.
     """
     if epoch.intensity is None:
         return None

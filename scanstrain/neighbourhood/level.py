@@ -25,7 +25,7 @@ NUISANCE_DISPLACEMENT = 0.03
 NUISANCE_GRADIENT = 0.02
 """The same for in-plane gradients [1]: the limit of small strain (common practice)."""
 WEAK_PRIOR = 10.0
-"""Standard deviation of the prior that only keeps the equations solvable [m]: no surface moves so far between epochs."""
+"""Standard deviation of the prior that only keeps the equations solvable [m]: far beyond any motion."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -114,7 +114,8 @@ class Level:
         start_values = state.held.copy()
         fit_gauges(
             g.origin, g.frame, g.curvature, start_values, self.radius, self.reference.gate + 0.1 * self.radius,
-            WEAK_PRIOR, self.nuisance, cells.resolution, rounds, min_points, int(3 * per_gauge) + 256, TUKEY_SHRINK, TUKEY_INFLATE,
+            WEAK_PRIOR, self.nuisance, cells.resolution, rounds, min_points, int(3 * per_gauge) + 256,
+            TUKEY_SHRINK, TUKEY_INFLATE,
             key, start, self.radius, cells.position[order], self.normal[order], cells.count[order],
             rows.valid[order], rows.moved[order], rows.misfit[order], rows.slope[order], rows.grey[order],
             rows.grey_slope[order], rows.variance[order], grey[order] if len(grey) else grey, state.gains,

@@ -29,7 +29,7 @@ MARGIN = 1.5
 _CONSTANT = 100.0
 """Prior variance of the unknown constant, relative to sill plus noise: large enough to leave it free."""
 _FILLED = 0.7
-"""Share of cells that hold a point where cells are as wide as the point spacing (Poisson: 0.63; scanner lines: more)."""
+"""Share of cells that hold a point where cells are as wide as the point spacing (Poisson: 0.63)."""
 _SAME_SHEET = 0.7
 """Cosine between normals above which a neighbouring block counts as the same sheet."""
 
@@ -85,9 +85,8 @@ def lookup(table: FloatArray, column: int, q: float, step: float) -> float:
 
 @numba.njit(cache=True, nogil=True)
 def _neighbours(
-    b: int, reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray,
-    frame: FloatArray, curvature: FloatArray, position: FloatArray, cells: IntArray, s: FloatArray, t: FloatArray,
-    h: FloatArray,
+    b: int, reach: float, gate: float, key: IntArray, start: IntArray, origin: FloatArray, frame: FloatArray,
+    curvature: FloatArray, position: FloatArray, cells: IntArray, s: FloatArray, t: FloatArray, h: FloatArray,
 ) -> int:  # fmt: skip
     """Cells within `reach` of a block in its tangent plane, on its sheet; keeps the nearest if there are too many."""
     limit = len(cells)
@@ -227,7 +226,7 @@ def _prediction_error(
 
 @numba.njit(cache=True, nogil=True, parallel=True)
 def _count_neighbours(
-    reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray, frame: FloatArray,
+    reach: float, gate: float, key: IntArray, start: IntArray, origin: FloatArray, frame: FloatArray,
     curvature: FloatArray, position: FloatArray, support: IntArray, out: IntArray,
 ) -> None:  # fmt: skip
     for b in numba.prange(len(key)):
@@ -235,16 +234,16 @@ def _count_neighbours(
         s, t, h = np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS)
         out[b] = 0
         if support[b] >= 6:
-            out[b] = _neighbours(b, reach, gate, key, start, size, origin, frame, curvature, position, cells, s, t, h)
+            out[b] = _neighbours(b, reach, gate, key, start, origin, frame, curvature, position, cells, s, t, h)
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)
 def _solve_blocks(
-    reach: float, gate: float, key: IntArray, start: IntArray, size: float, origin: FloatArray, frame: FloatArray,
-    curvature: FloatArray, position: FloatArray, intensity: FloatArray, count: FloatArray, first: IntArray,
+    reach: float, gate: float, key: IntArray, start: IntArray, origin: FloatArray, frame: FloatArray,
+    curvature: FloatArray, position: FloatArray, size: float, intensity: FloatArray, count: FloatArray, first: IntArray,
     height_table: FloatArray, intensity_table: FloatArray, step: float, noise: FloatArray,
-    sill: FloatArray, st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, variance: FloatArray,
-    unresolved: FloatArray,
+    sill: FloatArray, st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray,
+    variance: FloatArray, unresolved: FloatArray,
 ) -> None:  # fmt: skip
     for b in numba.prange(len(key)):
         m = first[b + 1] - first[b]
@@ -254,7 +253,7 @@ def _solve_blocks(
         cells = np.empty(MAX_NEIGHBOURS, np.int64)
         s, t, h = np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS)
         L = np.empty((MAX_NEIGHBOURS, MAX_NEIGHBOURS))
-        _neighbours(b, reach, gate, key, start, size, origin, frame, curvature, position, cells, s, t, h)
+        _neighbours(b, reach, gate, key, start, origin, frame, curvature, position, cells, s, t, h)
         share, grey, w = np.empty(m), np.empty(m), np.empty(m)
         for i in range(m):
             share[i] = 1.0 / count[cells[i]]
@@ -296,8 +295,7 @@ def build_predictor(
     noise = np.maximum(np.stack([height.noise, other.noise], axis=1), 1e-18)
     sill = np.stack([height.sill, other.sill], axis=1)
     shared = (
-        reach, gate, cells.key, cells.start, cells.block_size, surface.origin, surface.frame, surface.curvature,
-        cells.position,
+        reach, gate, cells.key, cells.start, surface.origin, surface.frame, surface.curvature, cells.position,
     )  # fmt: skip
     found = np.zeros(blocks, np.int64)
     _count_neighbours(*shared, surface.support, found)
@@ -307,8 +305,8 @@ def build_predictor(
     weights_i = np.empty(total if len(grey) else 0)
     constant, variance, unresolved = np.zeros((blocks, 2)), np.zeros((blocks, 2)), np.zeros((blocks, 2))
     _solve_blocks(
-        *shared, grey, cells.count, first, height_table, intensity_table, step, noise, sill, st, weights_h, weights_i,
-        constant, variance, unresolved,
+        *shared, cells.block_size, grey, cells.count, first, height_table, intensity_table, step, noise, sill,
+        st, weights_h, weights_i, constant, variance, unresolved,
     )  # fmt: skip
     return Predictor(
         cells, surface, first, st, weights_h, weights_i, constant, variance, unresolved, noise, sill, height_table,
@@ -317,9 +315,7 @@ def build_predictor(
 
 
 @numba.njit(cache=True, nogil=True)
-def choose_block(
-    x: float, y: float, z: float, key: IntArray, first: IntArray, size: float, origin: FloatArray
-) -> int:
+def choose_block(x: float, y: float, z: float, key: IntArray, first: IntArray, size: float, origin: FloatArray) -> int:
     """Block that serves a place: the one it lies in, or else the nearest of the 26 around it; -1 if none."""
     base = pack(int(np.floor(x / size)), int(np.floor(y / size)), int(np.floor(z / size)))
     own = find_key(key, base)
@@ -346,7 +342,8 @@ def predict_at(
 ) -> bool:  # fmt: skip
     """Predict at a place; False outside the block's support.
 
-    Fills `out` with: height above the predicted surface [m], its gradient in local axes (3), intensity, its gradient (3).
+    Fills `out` with: height above the predicted surface [m], its gradient in local axes (3), intensity, its
+    gradient (3).
     """
     d0, d1, d2 = x - origin[b, 0], y - origin[b, 1], z - origin[b, 2]
     s = d0 * frame[b, 0, 0] + d1 * frame[b, 1, 0] + d2 * frame[b, 2, 0]

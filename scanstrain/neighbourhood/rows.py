@@ -149,7 +149,8 @@ def evaluate_rows(
     own_noise = np.stack([height.noise, (grey or height).noise], axis=1)[cells.block]
     current = predictor.surface
     _evaluate(
-        cells.position, moved, cells.count, normal, density[0], density[1], gate, own_noise, predictor.noise, predictor.cells.key,
+        cells.position, moved, cells.count, normal, density[0], density[1], gate, own_noise, predictor.noise,
+        predictor.cells.key,
         predictor.cells.block_size, current.origin, current.frame, current.curvature, predictor.start, predictor.st,
         predictor.height, predictor.intensity, predictor.constant, predictor.variance, predictor.unresolved,
         predictor.height_table, predictor.intensity_table, predictor.table_step, *out,

@@ -10,9 +10,7 @@ from scanstrain.attributes import BY_NAME
 from scanstrain.outputs.words import amount, interval, listed, number, percent
 
 Summary = Mapping[str, Any]
-UNKNOWN = (
-    "What is below these limits, not observable, not visible in both scans, or happened in between is not known."
-)
+UNKNOWN = "What is below these limits, not observable, not visible in both scans, or happened in between is not known."
 RARELY = 0.005
 """Below this share of the gauges a component counts as not observable in the sentences."""
 

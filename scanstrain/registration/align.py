@@ -5,16 +5,15 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from contextlib import suppress
-from itertools import compress
 
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OverlapError, RegistrationError, explain
 from scanstrain.registration.coarse import choose_start, refuse_apart, to_grid
-from scanstrain.registration.fit import MIN_MATCHES, align, level_metric, metric_of, motion, rough, step_of, total
+from scanstrain.registration.fit import align, level_metric, metric_of, motion, rough, step_of, total
+from scanstrain.registration.levels import check_blocks, cut_both
 from scanstrain.registration.options import Options, check
 from scanstrain.registration.report import assemble
 from scanstrain.registration.result import Registration
@@ -36,14 +35,6 @@ from scanstrain.registration.work import Work
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 
-BLOCK_SPACINGS = 12.0
-"""Final block width in point spacings: some 140 points a block, whose plane is known far better than its centre."""
-CLUTTER_SPACINGS = 4.0
-"""The same among furniture or vegetation, where wide blocks find no plane; narrower ones hold too few points."""
-MIN_FLAT = 0.5
-"""Share of the points in flat blocks below which a scan counts as cluttered."""
-WANTED_BLOCKS = 60
-"""Small objects get narrower blocks, so that about so many are left."""
 LEAST_BUDGET = 1e-3
 """Weak means a standard error above the noise of one point, but never below this [m]."""
 MAX_CUTS = 6
@@ -125,63 +116,13 @@ def register(
     return result
 
 
-def level_widths(points: int, spacing: float, spacings: float, capture_range: float) -> list[float]:
-    """Choose block widths [m] from the capture range down to a number of point spacings, halving.
-
-    >>> level_widths(1_000_000, 0.01, 12, 0.3)
-    [0.24, 0.12]
-    """
-    small = np.sqrt(points * spacing**2 / WANTED_BLOCKS)
-    finest = max(min(spacings * spacing, small, capture_range), CLUTTER_SPACINGS * spacing)
-    widths = [float(finest)]
-    while widths[0] * 1.5 < capture_range:
-        widths.insert(0, min(widths[0] * 2, capture_range))
-    return widths
-
-
-def _cut(reference: FloatArray, current: FloatArray, options: Options) -> tuple[list[Surface], list[Surface]]:
-    """Cut both epochs into blocks, from wide to fine."""
-    spacing = max(median_spacing(reference), median_spacing(current))
-    if not spacing > 0:
-        got = "a spacing of zero"
-        raise OverlapError(explain("registration", "points in different places", got, "export the scans again"))
-    _check_spread(reference, spacing)
-    _check_spread(current, spacing)
-    points = min(len(reference), len(current))
-    widths = level_widths(points, spacing, BLOCK_SPACINGS, options.capture_range)
-    mine = pyramid(reference, widths, own_grid=False)
-    if mine[-1].flat_share() < MIN_FLAT:
-        widths = level_widths(points, spacing, CLUTTER_SPACINGS, options.capture_range)
-        mine = pyramid(reference, widths, own_grid=False)
-    theirs = pyramid(current, widths, own_grid=True)
-    # A small object has too few wide blocks to be fitted by.
-    enough = [min(a.flat(), b.flat()) >= 2 * MIN_MATCHES for a, b in zip(mine[:-1], theirs[:-1], strict=True)]
-    enough.append(True)
-    return list(compress(mine, enough)), list(compress(theirs, enough))
-
-
-def _check_spread(points: FloatArray, spacing: float) -> None:
-    """Refuse points along one line: every block would pass for flat."""
-    sample = points[:: max(1, len(points) // 5000)]
-    size = np.linalg.svd(sample - sample.mean(axis=0), compute_uv=False) / np.sqrt(len(sample))
-    if size[1] < CLUTTER_SPACINGS * spacing / 2:
-        raise RegistrationError(
-            explain(
-                "registration",
-                "points that span a surface",
-                f"points within {size[1]:.3g} m (rms) of one line, at a spacing of {spacing:.3g} m",
-                "check that this is a scan",
-            )
-        )
-
-
 def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Surface, str]:
     """Cut both epochs, choose a start and come down to the finest level with all of the ground."""
-    whole, theirs = _cut(reference.points, current.points, options)
+    whole, theirs = cut_both(reference.points, current.points, options.capture_range)
     mine = whole
     if isinstance(options.stable, np.ndarray):
         mine = pyramid(reference.points[options.stable], [s.width for s in whole], own_grid=False)
-    _check_blocks(mine[-1])
+    check_blocks(mine[-1])
     options.report(0.2)
     if isinstance(options.start, np.ndarray):
         T, started = to_grid(options.start, theirs[-1]), "given"
@@ -202,18 +143,6 @@ def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Su
     return work, whole[-1], started
 
 
-def _check_blocks(surface: Surface) -> None:
-    if surface.flat() < MIN_MATCHES:
-        raise RegistrationError(
-            explain(
-                "registration",
-                f"at least {MIN_MATCHES} flat blocks {surface.width:.3g} m wide on stable ground",
-                f"{surface.flat()}",
-                "give a larger stable zone or a denser scan",
-            )
-        )
-
-
 def _find_ground(work: Work, options: Options) -> None:
     """Choose stable patches and fit them alone."""
     if isinstance(options.stable, str) and options.stable == "auto":
@@ -227,7 +156,7 @@ def _find_ground(work: Work, options: Options) -> None:
         align(
             work.reference,
             work.current,
-            work.T_ref_grid,
+            work.pose,
             metric=work.metric,
             keep=work.keep,
             **rough(work.reference, options.max_iterations),
@@ -256,7 +185,7 @@ def _decide_weak(work: Work) -> None:
     fit = align(
         work.reference,
         work.current,
-        work.T_ref_grid,
+        work.pose,
         metric=at,
         budget=np.inf,
         tolerance=np.inf,
@@ -331,7 +260,5 @@ def _readmit(work: Work) -> bool:
     if work.ground is None:
         return False
     seen = make_patches(work.fit.rows, work.patch, work.patches)
-    keep = agreeing(seen, work.ground.scale)[work.patch]
-    changed = bool((keep[work.fit.rows.block] != (work.fit.weight > 0)).any())
-    work.keep = keep
-    return changed
+    before, work.keep = work.keep, agreeing(seen, work.ground.scale)[work.patch]
+    return not np.array_equal(before, work.keep)

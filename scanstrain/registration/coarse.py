@@ -35,8 +35,8 @@ CLOSE = 0.25
 def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> float:
     """Robust share of the smaller surface that lies close to the other with like normals.
 
-    The mean over the three facings that a surface may have, so that a wrong pose which keeps the floor on the floor does
-    not score by the size of the floor.
+    The mean over the three facings that a surface may have, so that a wrong pose which keeps the floor on the floor
+    does not score by the size of the floor.
 
     Parameters
     ----------
@@ -60,12 +60,10 @@ def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) ->
     close = np.bincount(facing[rows.block], biweight(rows.residual / limit), minlength=3)
     counts = blocks >= FACING * blocks.sum()
     smaller = min(1.0, current.flat() / blocks.sum())
-    return min(float((close[counts] / blocks[counts]).mean()) / smaller, 1.0)
+    return float(min((close[counts] / blocks[counts]).mean() / smaller, 1.0))
 
 
-def settle(
-    reference: list[Surface], current: list[Surface], T_ref_grid: FloatArray
-) -> tuple[FloatArray, float]:
+def settle(reference: list[Surface], current: list[Surface], T_ref_grid: FloatArray) -> tuple[FloatArray, float]:
     """Improve a start roughly and say how well the surfaces then fit.
 
     Parameters

@@ -16,15 +16,13 @@ RESOLUTION = 1e-9
 """Standard error [m] that no result goes below: rounding of coordinates."""
 
 
-def estimate(
-    fit: Fit, patch: IntArray, count: int, basis: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+def estimate(fit: Fit, patch: IntArray, count: int, basis: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Solve for unknowns about the fitted motion and estimate their covariance.
 
-    Leave-one-patch-out (jackknife, the CR3 form of a cluster-robust sandwich): dropping patch P changes the estimate by
-    (N - N_P)^-1 g_P exactly, and the sum of squares of these changes, times (G - 1)/G, is the covariance, whatever the
-    correlation inside a patch. Rows are weighted robustly, so both are divided by the square of the mean slope of the
-    score over the mean weight (Huber 1981; formula from memory). The covariance of independent blocks, from the same
+    Leave-one-patch-out (jackknife, the CR3 form of a cluster-robust sandwich): dropping patch P changes the estimate
+    by (N - N_P)^-1 g_P exactly, and the sum of squares of these changes, times (G - 1)/G, is the covariance, whatever
+    the correlation inside a patch. Rows are weighted robustly, so both are divided by the square of the mean slope of
+    the score over the mean weight (Huber 1981; formula from memory). The covariance of independent blocks, from the same
     residuals, is a lower limit in every direction.
 
     Parameters
@@ -104,9 +102,7 @@ def physical(covariance: FloatArray, metric: Metric) -> FloatArray:
     return np.asarray((out + out.T) / 2)
 
 
-def full_covariance(
-    solved: FloatArray, strong: FloatArray, weak: FloatArray, weak_sd: FloatArray
-) -> FloatArray:
+def full_covariance(solved: FloatArray, strong: FloatArray, weak: FloatArray, weak_sd: FloatArray) -> FloatArray:
     """Put the 6x6 covariance together: estimated where solved for, the start's uncertainty where held.
 
     Parameters

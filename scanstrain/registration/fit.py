@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TypedDict
 
 import numba
 import numpy as np
@@ -100,9 +101,7 @@ def sums(
 
 def total(rows: Rows, weight: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Sum over all rows: (7, 7), (7, 7) and (7,), as `sums`."""
-    full, shared, right = sums(
-        rows.row, rows.half, rows.residual, weight, np.zeros(len(weight), np.int64), 1
-    )
+    full, shared, right = sums(rows.row, rows.half, rows.residual, weight, np.zeros(len(weight), np.int64), 1)
     return full[0], shared[0], right[0]
 
 
@@ -134,9 +133,17 @@ def metric_of(places: FloatArray) -> Metric:
     return Metric(pivot=pivot, arm=float(np.linalg.norm(places - pivot, axis=1).max()))
 
 
-def rough(surface: Surface, limit: int) -> dict[str, float]:
+class Limits(TypedDict):
+    """What `align` is to reach: budget and tolerance [m], most iterations."""
+
+    budget: float
+    tolerance: float
+    limit: int
+
+
+def rough(surface: Surface, limit: int) -> Limits:
     """Limits for a fit that is not the last one: what wide blocks fix badly is left to narrower ones."""
-    return {"budget": surface.width / 10, "tolerance": 1e-3 * surface.width, "limit": limit}
+    return Limits(budget=surface.width / 10, tolerance=1e-3 * surface.width, limit=limit)
 
 
 def step_of(vector: FloatArray, metric: Metric) -> FloatArray:
@@ -161,7 +168,7 @@ def align(
     metric: Metric,
     budget: float,
     tolerance: float,
-    limit: float,
+    limit: int,
     strong: tuple[FloatArray, FloatArray] | None = None,
     keep: BoolArray | None = None,
 ) -> Fit:
@@ -182,7 +189,7 @@ def align(
         Standard error at the place moved most beyond which a motion is held [m].
     tolerance : float
         Step at the farthest point that ends the iteration [m]; 0 means a hundredth of the standard error.
-    limit : int or float
+    limit : int
         Most iterations.
     strong : pair of ndarray, optional
         The motions to solve for and to hold, if they are decided already.
@@ -198,10 +205,11 @@ def align(
     OverlapError
         Too few blocks find a partner.
     """
-    T, scale, pairs, step = T_ref_grid, np.inf, None, np.inf
-    for iteration in range(1, int(limit) + 1):
+    T, scale, step = T_ref_grid, np.inf, np.inf
+    pairs = pair(reference, current, T)
+    for iteration in range(1, limit + 1):
         # Matches that still flip would keep the last digits from settling.
-        if pairs is None or (step > FREEZE * reference.width and iteration <= FREEZE_AFTER):
+        if step > FREEZE * reference.width and 1 < iteration <= FREEZE_AFTER:
             pairs = pair(reference, current, T)
         rows, weight, scale = weigh(reference, current, pairs, T, scale, metric, keep)
         full, shared, right = total(rows, weight)
@@ -210,7 +218,7 @@ def align(
             full[:6, :6], shared[:6, :6], variance=variance, places=places, metric=metric, budget=budget
         )
         reduced = V.T @ full[:6, :6] @ V
-        solved = V @ np.linalg.solve(reduced, V.T @ right[:6])
+        solved = V @ (np.linalg.pinv(reduced, rcond=1e-14, hermitian=True) @ (V.T @ right[:6]))
         step = float(np.linalg.norm(solved[:3]) + np.linalg.norm(solved[3:]))
         sd = np.sqrt(variance / max(np.linalg.eigvalsh(reduced)[0], 1e-300)) if V.shape[1] else 0.0
         T = step_of(solved, metric) @ T
@@ -234,11 +242,15 @@ def weigh(
 
     Parameters
     ----------
+    reference, current : Surface
     pairs : ndarray of shape (m, 2)
         Blocks that match.
     T_ref_grid : ndarray of shape (4, 4)
     scale : float
         Robust scale so far; the new one is not larger.
+    metric : Metric
+    keep : ndarray of shape (b,), bool, optional
+        Reference blocks on stable ground. Default: all.
 
     Returns
     -------

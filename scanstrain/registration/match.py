@@ -179,7 +179,7 @@ def nearest(
     centre = reference.cells.centre @ T[:3, :3].T + T[:3, 3]
     normal = reference.cells.normal @ T[:3, :3].T
     theirs = current.cells
-    return _nearest(
+    found: IntArray = _nearest(
         centre,
         normal,
         reference.state,
@@ -190,13 +190,14 @@ def nearest(
         current.state,
         min_cosine,
     )
+    return found
 
 
 def pair(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> IntArray:
     """Return matches as rows of (reference block, current block), shape (m, 2).
 
-    Pairs that lie too far apart along the surface are left out. At the border of a cloud the limit is narrow: there the
-    nearest block may be near only because the cloud ends.
+    Pairs that lie too far apart along the surface are left out. At the border of a cloud the limit is narrow: there
+    the nearest block may be near only because the cloud ends.
     """
     other = nearest(reference, current, T_ref_grid)
     p = np.flatnonzero(other >= 0)
@@ -210,9 +211,7 @@ def pair(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> IntArr
     return np.stack([p[near], q[near]], axis=1)
 
 
-def observe(
-    reference: Surface, current: Surface, pairs: IntArray, T_ref_grid: FloatArray, metric: Metric
-) -> Rows:
+def observe(reference: Surface, current: Surface, pairs: IntArray, T_ref_grid: FloatArray, metric: Metric) -> Rows:
     """Make the observation rows of matches at a pose.
 
     Each row is n.(p - q) with n the mean of the two unit normals (Chen & Medioni 1992; symmetric form of Rusinkiewicz

@@ -66,9 +66,7 @@ def check(reference: Epoch, current: Epoch, options: Options) -> None:
             explain("capture_range", "a length in metres above 0", f"{options.capture_range}", "give 0.3")
         )
     if options.max_iterations < 1:
-        raise OptionError(
-            explain("max_iterations", "at least 1", f"{options.max_iterations}", "give for example 60")
-        )
+        raise OptionError(explain("max_iterations", "at least 1", f"{options.max_iterations}", "give for example 60"))
 
 
 def _check_frames(reference: Epoch, current: Epoch) -> None:

@@ -23,7 +23,7 @@ FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 
 START_SIGMAS = 3.0
-"""The capture range is taken as the three-sigma limit of the start's error along directions that stay at the start."""
+"""The capture range is taken as the three-sigma limit of the start along directions that stay at the start."""
 RIVAL = 0.45
 """A second group of this part of the first one's area could as well be the stable one."""
 LOW_OVERLAP = 0.3
@@ -58,9 +58,7 @@ def assemble(work: Work, whole: Surface, reference: Epoch, options: Options, sta
     sd = np.full(weak.shape[1], held_sd)
     directions = name_directions(weak, fit.rows, used, sd)
     scale, scale_sd = (
-        scale_ppm(fit, work.patch, work.patches, work.metric, work.strong)
-        if work.scale_known
-        else (np.nan, np.nan)
+        scale_ppm(fit, work.patch, work.patches, work.metric, work.strong) if work.scale_known else (np.nan, np.nan)
     )
     overlap = _overlap(whole, work.current, fit.T_ref_grid)
     return Registration(
@@ -92,11 +90,12 @@ def _overlap(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> fl
 
 
 @numba.njit(cache=True, nogil=True)
-def _block_of_points(
-    points: FloatArray, keys: NDArray[np.int64], size: float, normal: FloatArray
-) -> NDArray[np.int64]:
-    """Block of every point, -1 without one. Blocks hold points as projected onto the surface, so a point whose own
-    voxel is empty is looked for a quarter of a block further along the axes."""
+def _block_of_points(points: FloatArray, keys: NDArray[np.int64], size: float) -> NDArray[np.int64]:
+    """Block of every point, -1 without one.
+
+    Blocks hold points as projected onto the surface, so a point whose own voxel is empty is looked for a quarter of a
+    block further along the axes.
+    """
     out = np.empty(len(points), np.int64)
     for p in range(len(points)):
         x, y, z = points[p, 0], points[p, 1], points[p, 2]
@@ -124,7 +123,7 @@ def _stable_points(work: Work, points: FloatArray, options: Options) -> BoolArra
     ground[work.patch[rows.block[work.fit.weight > 0]]] = True
     good = ground[work.patch] & (surface.state != USABLE)
     good[rows.block] = work.fit.weight > 0
-    block = _block_of_points(points, surface.cells.key, surface.width, surface.cells.normal)
+    block = _block_of_points(points, surface.cells.key, surface.width)
     stable = (block >= 0) & good[block]
     if isinstance(options.stable, np.ndarray):
         stable &= options.stable

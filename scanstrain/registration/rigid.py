@@ -87,9 +87,7 @@ def is_rigid(T: FloatArray) -> bool:
     return bool(straight and np.linalg.det(R) > 0)
 
 
-def rigid_fit(
-    source: ArrayLike, target: ArrayLike, weights: ArrayLike | None = None
-) -> tuple[FloatArray, FloatArray]:
+def rigid_fit(source: ArrayLike, target: ArrayLike, weights: ArrayLike | None = None) -> tuple[FloatArray, FloatArray]:
     """Fit the rotation and translation that best take corresponding points onto one another; scale is 1.
 
     Minimises sum_i w_i |R s_i + t - g_i|^2 in closed form by singular values (Kabsch 1976; Umeyama 1991, equation

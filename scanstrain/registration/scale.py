@@ -37,9 +37,7 @@ def determined(fit: Fit, strong: FloatArray) -> bool:
     return left[1] > 0 and left[0] > MIN_RELIABILITY * left[1]
 
 
-def scale_ppm(
-    fit: Fit, patch: IntArray, count: int, metric: Metric, strong: FloatArray
-) -> tuple[float, float]:
+def scale_ppm(fit: Fit, patch: IntArray, count: int, metric: Metric, strong: FloatArray) -> tuple[float, float]:
     """Fit a seventh parameter about the result, on the same rows and weights.
 
     Parameters

@@ -226,7 +226,7 @@ def choose_ground(patches: Patches, strong: FloatArray, metric: Metric, places: 
 
 
 def agreeing(patches: Patches, scale: float) -> BoolArray:
-    """Patches whose residual at the present motion is within the agreement limit: lost ones leave, good ones return."""
+    """Patches whose residual at the present motion is within the agreement limit."""
     return np.asarray((patches.blocks > 0) & (np.abs(patches.residual) < AGREES * scale * patches.sd))
 
 

@@ -24,7 +24,7 @@ MAX_PLANARITY = 0.3
 CLEARLY_FLAT = 0.1
 """The same ratio for a block without a step, corner or loose object in it."""
 ENDS_OFFSET = 0.25
-"""Shift of the neighbourhood's centre, in block widths, beyond which the surface ends here (0.5 at a straight edge)."""
+"""Shift of the neighbourhood's centre, in block widths, beyond which the surface ends here (a straight edge: 0.5)."""
 SHARED_NOISE = 0.05
 """Part of a point's noise that its neighbours in a block share: averaging more than 1/0.05^2 points gains nothing."""
 

@@ -22,10 +22,10 @@ MEETING = 0.6
 def follow(work: Work) -> FloatArray:
     """Refine weak directions so that motion along them leaves the surface in itself.
 
-    Eigenvectors come from noisy normals and are good to some 0.1 mrad. Times the large uncertainty along a weak direction
-    that would be a false uncertainty across the surface. Here the reference is moved along each direction both ways,
-    the other motions are fitted, and the chord of the two ends is the direction: it rests on block centres and a long
-    baseline.
+    Eigenvectors come from noisy normals and are good to some 0.1 mrad. Times the large uncertainty along a weak
+    direction that would be a false uncertainty across the surface. Here the reference is moved along each direction both
+    ways, the other motions are fitted, and the chord of the two ends is the direction: it rests on block centres and a
+    long baseline.
 
     Parameters
     ----------
@@ -55,7 +55,7 @@ def _chord(work: Work, unit: FloatArray, strong: FloatArray) -> FloatArray:
 
 
 def _slide(work: Work, vector: FloatArray, strong: FloatArray) -> FloatArray | None:
-    """Move the reference along itself and fit the strong motions: where it ends, (6,), or None where it left itself."""
+    """Move the reference along itself and fit the strong motions: where it ends, or None where it left itself."""
     width = work.reference.width
     try:
         fit = align(
@@ -84,7 +84,7 @@ def _twist(vector: FloatArray, arm: float) -> FloatArray:
     angle = float(np.linalg.norm(vector[:3])) / arm
     if angle == 0.0:
         return vector
-    axis = vector[:3] / (arm * angle)
+    axis: FloatArray = vector[:3] / (arm * angle)
     along = axis * (axis @ vector[3:])
     longer = 1.0 / float(np.sinc(angle / (2 * np.pi)))
     return np.r_[vector[:3], along + (vector[3:] - along) * longer]

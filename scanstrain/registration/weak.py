@@ -82,8 +82,9 @@ def split(
     """
     values, vectors = np.linalg.eigh((shared + shared.T) / 2)
     total = np.einsum("ik,ij,jk->k", vectors, information, vectors)
-    sd = np.sqrt(variance / np.maximum(values, 1e-300)) * reach(vectors, places, metric)
-    strong = (values > MIN_RELIABILITY * total) & (values > 0) & (sd <= budget)
+    positive = values > 1e-14 * max(values[-1], 0.0)
+    sd = np.sqrt(variance / np.where(positive, values, np.inf)) * reach(vectors, places, metric)
+    strong = positive & (values > MIN_RELIABILITY * total) & (sd <= budget)
     return np.ascontiguousarray(vectors[:, strong]), np.ascontiguousarray(vectors[:, ~strong])
 
 

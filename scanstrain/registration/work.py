@@ -61,7 +61,7 @@ class Work:
     iterations: int = 0
 
     @property
-    def T_ref_grid(self) -> FloatArray:
+    def pose(self) -> FloatArray:
         """Present pose of the current surface's grid frame."""
         return self.T @ inverse(self.current.T_grid_epoch)
 

@@ -115,9 +115,7 @@ def _check(
         raise OptionError(unknown_name("structure", structure, list(STRUCTURES)))
     if thickness is not None and not (np.isfinite(thickness) and thickness > 0):
         raise OptionError(
-            explain(
-                "thickness", "a length in metres above 0", f"{thickness}", "give for example 0.25, or leave it out"
-            )
+            explain("thickness", "a length in metres above 0", f"{thickness}", "give for example 0.25, or leave it out")
         )
     if not 0 < false_discovery_rate < 1:
         raise OptionError(

@@ -172,9 +172,7 @@ def _columns(strain: StrainField, rows: NDArray[np.int64]) -> Columns:
     from scanstrain.strain.blend import Columns
 
     column = {name: np.asarray(strain.values[name], dtype=np.float64)[rows] for group in GROUPS for name in group}
-    tensor = np.stack(
-        [np.asarray(strain.values[n], np.float64)[rows] for n in ("strain_u", "strain_v", "shear_uv")], 1
-    )
+    tensor = np.stack([np.asarray(strain.values[n], np.float64)[rows] for n in ("strain_u", "strain_v", "shear_uv")], 1)
     present = [np.isfinite([column[n] for n in group]).all(axis=0) for group in GROUPS]
     return Columns(
         tensor=tensor,
