@@ -101,7 +101,7 @@ def compare_epochs(
 def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...]) -> Result:
     from scanstrain.neighbourhood import fit_affine
     from scanstrain.registration import register
-    from scanstrain.strain import blend_to_points, compute_strain
+    from scanstrain.strain import blend_to_points, calibrate, compute_strain
 
     options = config.neighbourhood
     gauge_length = _number(options.gauge_length) or auto_gauge_length(reference, current)
@@ -124,6 +124,7 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
             progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
         )
     with clock.stage("strain", 0.8):
+        affine, calibration, doubts = calibrate(affine, registration, reference.points)
         strain = compute_strain(
             affine,
             registration=registration,
@@ -136,9 +137,18 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
     with clock.stage("points", 0.85):
         points = blend_to_points(strain, reference.points)
     clock.say("done", 1.0)
-    said = (*notices, *registration.warnings, *affine.warnings, *strain.warnings)
+    said = (*notices, *registration.warnings, *affine.warnings, *doubts, *strain.warnings)
     return Result(
-        reference, current, registration, affine, strain, points, config, clock.seconds, tuple(dict.fromkeys(said))
+        reference,
+        current,
+        registration,
+        affine,
+        calibration,
+        strain,
+        points,
+        config,
+        clock.seconds,
+        tuple(dict.fromkeys(said)),
     )
 
 

@@ -88,12 +88,12 @@ def neighbourhood(data: Arrays, **options: Any) -> Data:
 def strain(data: Arrays, **options: Any) -> Data:
     """Add `gauges` and `points`: every attribute at the gauges and at the reference points.
 
-    Needs `field`; uses the covariance of `registration` where there is one. Options as of
+    Needs `field`; uses the covariance and the stable ground of `registration` where there is one. Options as of
     `scanstrain.compute_strain`.
     """
     from scanstrain.neighbourhood.result import AffineField
     from scanstrain.registration.result import Registration, WeakDirection
-    from scanstrain.strain import blend_to_points, compute_strain
+    from scanstrain.strain import blend_to_points, calibrate, compute_strain
 
     if "field" not in data:
         raise OptionError(explain("strain", "a mapping with `field`", "none", "run the neighbourhood stage first"))
@@ -102,7 +102,10 @@ def strain(data: Arrays, **options: Any) -> Data:
     if "registration" in data:
         weak = tuple(WeakDirection(**w) for w in data["registration"]["weak_directions"])
         datum = Registration(**{**data["registration"], "weak_directions": weak})
-    result = compute_strain(AffineField(**data["field"]), registration=datum, **options)
+    field = AffineField(**data["field"])
+    if datum is not None:
+        field, _, _ = calibrate(field, datum, reference.points)
+    result = compute_strain(field, registration=datum, **options)
     return {**data, "gauges": dict(result.values), "points": blend_to_points(result, reference.points)}
 
 

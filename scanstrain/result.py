@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.result import AffineField
 from scanstrain.registration.result import Registration
+from scanstrain.strain.calibration import Calibration
 from scanstrain.strain.result import StrainField
 
 FloatArray = NDArray[np.float64]
@@ -30,6 +31,8 @@ class Result:
         The rigid motion from the current epoch into the reference frame.
     field : AffineField
         Local affine maps, one per gauge.
+    calibration : Calibration
+        Factors by which standard errors were raised to match the scatter on stable ground.
     strain : StrainField
         Strain, rotation and their errors, one row per gauge, in the same order as `field`.
     points : mapping of str to ndarray of shape (n,)
@@ -47,6 +50,7 @@ class Result:
     current: Epoch
     registration: Registration
     field: AffineField
+    calibration: Calibration
     strain: StrainField
     points: Mapping[str, NDArray[np.generic]]
     config: Any

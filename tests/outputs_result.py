@@ -14,8 +14,10 @@ from scanstrain.epoch import Provenance, make_epoch
 from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.registration.result import Registration, WeakDirection
 from scanstrain.result import Result
+from scanstrain.strain.calibration import GROUPS, Calibration
 from scanstrain.strain.result import StrainField
 
+CALIBRATION = Calibration(dict.fromkeys(GROUPS, 1.0), "none", 0)
 ORIGIN = np.array([482310.0, 5391270.0, 100.0])
 IN_PLANE = [name for name in (a.name for a in ATTRIBUTES) if name.startswith(("strain", "shear", "dilation", "spin"))]
 # gauges 0..11 along the wall; gauge 11 failed, gauges 6..11 see no texture, gauges 0..2 moved
@@ -94,7 +96,8 @@ def make_result(path="north_wall_0.laz", current="north_wall_1.laz"):
         gauge_length=0.6, gauge_spacing=0.5,
     )  # fmt: skip
     return Result(
-        reference=reference, current=moved, registration=registration, field=field, strain=strain, points=points,
+        reference=reference, current=moved, registration=registration, field=field,
+        calibration=CALIBRATION, strain=strain, points=points,
         config=Config(), timing={"read": 0.5, "registration": 1.0, "neighbourhood": 1.5}, warnings=("Twice said.",),
     )  # fmt: skip
 

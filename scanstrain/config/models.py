@@ -86,7 +86,7 @@ class NeighbourhoodOptions(Options):
     required_displacement_sd: Positive | Auto = Field(
         default="auto",
         description="Largest standard error at which a displacement along the surface counts as observable [m]."
-        " Default auto: 0.005 m, because a vaguer one says nothing about a structure.",
+        " Default auto: 0.002 m, because a vaguer one says nothing about a structure.",
     )
     required_strain_sd: Positive | Auto = Field(
         default="auto",

@@ -222,7 +222,7 @@ def _local(
     share, gamma, lag = pooled[:, :, 1] / pairs, pooled[:, :, column] / pairs, pooled[:, :, 4] / pairs
     rise = 1.0 - FAMILIES[family](lag / length)
     flat = (pooled[:, :, 0] * share * gamma).sum(axis=1) / np.maximum((pooled[:, :, 0] * share**2).sum(axis=1), 1e-30)
-    weight = pooled[:, :, 0] / np.maximum(gamma, 1e-12 * flat[:, None] + 1e-300) ** 2 / np.maximum(lag, 1e-12)
+    weight = pooled[:, :, 0] / np.maximum(gamma, 1e-9 * flat[:, None] + 1e-100) ** 2 / np.maximum(lag, 1e-12)
     ss, sr, rr = (weight * share**2).sum(1), (weight * share * rise).sum(1), (weight * rise**2).sum(1)
     sg, rg = (weight * share * gamma).sum(1), (weight * rise * gamma).sum(1)
     determinant = np.where(ss * rr - sr**2 > 1e-12 * ss * rr, ss * rr - sr**2, np.inf)

@@ -53,6 +53,11 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         # the motion of each body after registration needs zones
         "rigid_motion": {},
         "gauges": _gauges(result),
+        "calibration": {
+            "factors": result.calibration.factors,
+            "ground": result.calibration.ground,
+            "gauges": result.calibration.gauges,
+        },
         "results": attribute_statistics(result),
         "strain_measure": {"used": strain.measure, "why": strain.measure_reason},
         "inputs": {"reference": _input(result.reference), "current": _input(result.current)},

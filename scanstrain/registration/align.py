@@ -4,14 +4,13 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from contextlib import suppress
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.epoch import Epoch
-from scanstrain.errors import OverlapError, RegistrationError, explain
-from scanstrain.registration.coarse import choose_start, refuse_apart, to_grid
+from scanstrain.errors import RegistrationError, explain
+from scanstrain.registration.coarse import choose_start, refuse_apart, settle, to_grid
 from scanstrain.registration.fit import align, level_metric, metric_of, motion, rough, step_of, total
 from scanstrain.registration.levels import check_blocks, cut_both
 from scanstrain.registration.options import Options, check
@@ -124,23 +123,27 @@ def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Su
         mine = pyramid(reference.points[options.stable], [s.width for s in whole], own_grid=False)
     check_blocks(mine[-1])
     options.report(0.2)
-    if isinstance(options.start, np.ndarray):
-        T, started = to_grid(options.start, theirs[-1]), "given"
-    else:
-        if options.start == "auto":
-            refuse_apart(reference.points, current.points)
-        T, started = choose_start(whole, theirs, to_grid(np.eye(4), theirs[-1]), options.start, options.seed)
-    T_start = T @ theirs[-1].T_grid_epoch
-    iterations = 0
-    for a, b in zip(mine[:-1], theirs[:-1], strict=True):
-        with suppress(OverlapError):
-            fit = align(a, b, T, metric=level_metric(a), **rough(a, options.max_iterations))
-            T, iterations = fit.T_ref_grid, iterations + fit.iterations
+    T_raw, T, started = _start(whole, theirs, reference.points, current.points, options)
+    if mine is not whole:
+        T = settle(mine, theirs, T_raw)[0]
     fit = align(mine[-1], theirs[-1], T, metric=level_metric(mine[-1]), **rough(mine[-1], options.max_iterations))
+    T_start = T_raw @ theirs[-1].T_grid_epoch
     index, count = patch_of_blocks(mine[-1])
-    work = Work(mine[-1], theirs[-1], fit, T, T_start, level_metric(mine[-1]), index, count, iterations=iterations)
+    work = Work(mine[-1], theirs[-1], fit, T, T_start, level_metric(mine[-1]), index, count)
     work.take(fit)
     return work, whole[-1], started
+
+
+def _start(
+    mine: list[Surface], theirs: list[Surface], reference: FloatArray, current: FloatArray, options: Options
+) -> tuple[FloatArray, FloatArray, str]:
+    """Pose of the current grid frame to begin with, the same after a rough alignment, and where it came from."""
+    if isinstance(options.start, np.ndarray):
+        T = to_grid(options.start, theirs[-1])
+        return T, settle(mine, theirs, T)[0], "given"
+    if options.start == "auto":
+        refuse_apart(reference, current)
+    return choose_start(mine, theirs, to_grid(np.eye(4), theirs[-1]), options.start, options.seed)
 
 
 def _find_ground(work: Work, options: Options) -> None:
@@ -261,4 +264,4 @@ def _readmit(work: Work) -> bool:
         return False
     seen = make_patches(work.fit.rows, work.patch, work.patches)
     before, work.keep = work.keep, agreeing(seen, work.ground.scale)[work.patch]
-    return not np.array_equal(before, work.keep)
+    return before is None or not np.array_equal(before, work.keep)

@@ -212,7 +212,7 @@ def refuse_apart(reference: FloatArray, current: FloatArray) -> None:
 
 def choose_start(
     reference: list[Surface], current: list[Surface], T_given: FloatArray, start: str, seed: int
-) -> tuple[FloatArray, str]:
+) -> tuple[FloatArray, FloatArray, str]:
     """Choose where the fine fit begins, by how well the surfaces fit after a rough alignment.
 
     Parameters
@@ -228,7 +228,9 @@ def choose_start(
     Returns
     -------
     T_ref_grid : ndarray of shape (4, 4)
-        The chosen start itself, not yet improved.
+        The chosen start itself.
+    settled : ndarray of shape (4, 4)
+        The same after the rough alignment.
     used : str
         "identity" or "coarse".
 
@@ -237,16 +239,15 @@ def choose_start(
     OverlapError
         No start makes the surfaces meet.
     """
-    if start == "identity":
-        return T_given, "identity"
-    share = settle(reference, current, T_given)[1]
-    if start == "auto" and share >= SHARE_AT_ONCE:
-        return T_given, "identity"
+    settled, share = settle(reference, current, T_given)
+    if start == "identity" or (start == "auto" and share >= SHARE_AT_ONCE):
+        return T_given, settled, "identity"
     # Features of a plain wall fit in many ways: another pose must be clearly better than the one given.
-    tried = [(share * BETTER, "identity", T_given)] if start == "auto" and share >= SHARE_NEEDED else []
+    tried = [(share * BETTER, "identity", T_given, settled)] if start == "auto" and share >= SHARE_NEEDED else []
     for proposal in feature_starts(reference[-1], current[-1], seed):
-        tried.append((settle(reference, current, proposal)[1], "coarse", proposal))
-    best = max(tried, key=lambda item: item[0], default=(0.0, "", T_given))
+        settled, share = settle(reference, current, proposal)
+        tried.append((share, "coarse", proposal, settled))
+    best = max(tried, key=lambda item: item[0], default=(0.0, "", T_given, T_given))
     if best[0] < SHARE_NEEDED:
         raise OverlapError(
             explain(
@@ -256,7 +257,7 @@ def choose_start(
                 "check that both scans show the same place",
             )
         )
-    return best[2], best[1]
+    return best[2], best[3], best[1]
 
 
 def to_grid(T_ref_cur: FloatArray, surface: Surface) -> FloatArray:

@@ -22,8 +22,8 @@ def estimate(fit: Fit, patch: IntArray, count: int, basis: FloatArray) -> tuple[
     Leave-one-patch-out (jackknife, the CR3 form of a cluster-robust sandwich): dropping patch P changes the estimate
     by (N - N_P)^-1 g_P exactly, and the sum of squares of these changes, times (G - 1)/G, is the covariance, whatever
     the correlation inside a patch. Rows are weighted robustly, so both are divided by the square of the mean slope of
-    the score over the mean weight (Huber 1981; formula from memory). The covariance of independent blocks, from the same
-    residuals, is a lower limit in every direction.
+    the score over the mean weight (Huber 1981; formula from memory). The covariance of independent blocks, from the
+    same residuals, is a lower limit in every direction.
 
     Parameters
     ----------

@@ -143,7 +143,7 @@ class Limits(TypedDict):
 
 def rough(surface: Surface, limit: int) -> Limits:
     """Limits for a fit that is not the last one: what wide blocks fix badly is left to narrower ones."""
-    return Limits(budget=surface.width / 10, tolerance=1e-3 * surface.width, limit=limit)
+    return Limits(budget=surface.width / 4, tolerance=1e-3 * surface.width, limit=limit)
 
 
 def step_of(vector: FloatArray, metric: Metric) -> FloatArray:

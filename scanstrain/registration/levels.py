@@ -17,8 +17,13 @@ FloatArray = NDArray[np.float64]
 
 BLOCK_SPACINGS = 12.0
 """Final block width in point spacings: some 140 points a block, whose plane is known far better than its centre."""
-CLUTTER_SPACINGS = 4.0
-"""The same among furniture or vegetation, where wide blocks find no plane; narrower ones hold too few points."""
+CLUTTER_SPACINGS = (8.0, 6.0, 4.0)
+"""Widths that are tried among furniture or vegetation, where wide blocks find few planes."""
+KEPT_AREA = 0.85
+"""A narrower width serves if its flat blocks cover at least this part of the area that the widest ones cover: where
+they do not, they hold too few points."""
+MIN_SPACINGS = 4.0
+"""Blocks are never narrower than this."""
 MIN_FLAT = 0.5
 """Share of the points in flat blocks below which a scan counts as cluttered."""
 WANTED_BLOCKS = 60
@@ -49,7 +54,7 @@ def level_widths(points: int, spacing: float, spacings: float, capture_range: fl
     [0.24, 0.12]
     """
     small = np.sqrt(points * spacing**2 / WANTED_BLOCKS)
-    finest = max(min(spacings * spacing, small, capture_range), CLUTTER_SPACINGS * spacing)
+    finest = max(min(spacings * spacing, small, capture_range), MIN_SPACINGS * spacing)
     widths = [float(finest)]
     while widths[0] * 1.5 < capture_range:
         widths.insert(0, min(widths[0] * 2, capture_range))
@@ -86,8 +91,12 @@ def cut_both(reference: FloatArray, current: FloatArray, capture_range: float) -
     widths = level_widths(points, spacing, BLOCK_SPACINGS, capture_range)
     mine = pyramid(reference, widths, own_grid=False)
     if mine[-1].flat_share() < MIN_FLAT:
-        widths = level_widths(points, spacing, CLUTTER_SPACINGS, capture_range)
-        mine = pyramid(reference, widths, own_grid=False)
+        area = mine[-1].flat() * mine[-1].width ** 2
+        for spacings in CLUTTER_SPACINGS:
+            narrower = level_widths(points, spacing, spacings, capture_range)
+            other = pyramid(reference, narrower, own_grid=False)
+            if other[-1].flat() * other[-1].width ** 2 > KEPT_AREA * area:
+                widths, mine = narrower, other
     theirs = pyramid(current, widths, own_grid=True)
     # A small object has too few wide blocks to be fitted by.
     enough = [min(a.flat(), b.flat()) >= 2 * MIN_MATCHES for a, b in zip(mine[:-1], theirs[:-1], strict=True)]
@@ -99,7 +108,7 @@ def _check_spread(points: FloatArray, spacing: float) -> None:
     """Refuse points along one line: every block would pass for flat."""
     sample = points[:: max(1, len(points) // 5000)]
     size = np.linalg.svd(sample - sample.mean(axis=0), compute_uv=False) / np.sqrt(len(sample))
-    if size[1] < CLUTTER_SPACINGS * spacing / 2:
+    if size[1] < MIN_SPACINGS * spacing / 2:
         raise RegistrationError(
             explain(
                 "registration",

@@ -23,9 +23,9 @@ def follow(work: Work) -> FloatArray:
     """Refine weak directions so that motion along them leaves the surface in itself.
 
     Eigenvectors come from noisy normals and are good to some 0.1 mrad. Times the large uncertainty along a weak
-    direction that would be a false uncertainty across the surface. Here the reference is moved along each direction both
-    ways, the other motions are fitted, and the chord of the two ends is the direction: it rests on block centres and a
-    long baseline.
+    direction that would be a false uncertainty across the surface. Here the reference is moved along each direction
+    both ways, the other motions are fitted, and the chord of the two ends is the direction: it rests on block centres
+    and a long baseline.
 
     Parameters
     ----------

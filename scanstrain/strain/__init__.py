@@ -1,8 +1,9 @@
 # SPDX-License-Identifier: MIT
 """Strain stage: from local affine maps to strain, rotation and bending with standard errors."""
 
+from scanstrain.strain.calibration import Calibration, calibrate
 from scanstrain.strain.compute import compute_strain
 from scanstrain.strain.points import blend_to_points
 from scanstrain.strain.result import StrainField
 
-__all__ = ["StrainField", "blend_to_points", "compute_strain"]
+__all__ = ["Calibration", "StrainField", "blend_to_points", "calibrate", "compute_strain"]

@@ -48,9 +48,7 @@ def documented(docstring):
 def parameters(node, owner):
     """Names of the parameters of a function without self, or of the constructor of a class."""
     if isinstance(node, ast.ClassDef):
-        made = next(
-            (each for each in node.body if isinstance(each, ast.FunctionDef) and each.name == "__init__"), None
-        )
+        made = next((each for each in node.body if isinstance(each, ast.FunctionDef) and each.name == "__init__"), None)
         if made is None:
             return [each.target.id for each in node.body if isinstance(each, ast.AnnAssign)]
         node, owner = made, node

@@ -99,9 +99,7 @@ def test_a_stage_knows_only_the_results_of_the_stages_before_it(module):
 @pytest.mark.parametrize("module", sorted(name for name in MODULES if unit(name) in NUMERICS))
 def test_numerics_know_nothing_of_files_and_screens(module):
     tree = ast.parse(MODULES[module].read_text(encoding="utf-8"))
-    called = {
-        node.func.id for node in ast.walk(tree) if isinstance(node, ast.Call) and isinstance(node.func, ast.Name)
-    }
+    called = {node.func.id for node in ast.walk(tree) if isinstance(node, ast.Call) and isinstance(node.func, ast.Name)}
     outside = {outermost for _, _, outermost in imports(module)}
     assert outside & (FILES | SHOWN) == set()
     assert "open" not in called

@@ -63,9 +63,7 @@ def test_it_opens_with_one_paragraph_and_two_commands():
     assert not paragraph.startswith(("#", "-", "|", "`"))
     assert heading == "## Two commands"
     assert (
-        README.index("<!-- run -->")
-        < README.index("<!-- test -->")
-        < README.index("\n## ", README.index(heading) + 3)
+        README.index("<!-- run -->") < README.index("<!-- test -->") < README.index("\n## ", README.index(heading) + 3)
     )
 
 

@@ -17,67 +17,94 @@ MEASURES = runpy.run_path(str(Path(__file__).parent / "scene_measures.py"))
 rms, coverage = MEASURES["rms"], MEASURES["coverage"]
 GRADIENT = ((1.5e-3, 4e-4), (-6e-4, -1e-3), (3e-3, -2e-3))
 HOLES = {
-    "reference": ((1.0, 1.0, 0.35), (2.9, 2.2, 0.3), (0.4, 2.4, 0.25)),
-    "current": ((2.1, 0.9, 0.35), (3.3, 1.2, 0.3), (1.6, 2.6, 0.25)),
+    "reference": ((0.9, 1.0, 0.3), (3.1, 2.1, 0.3)),
+    "current": ((2.0, 1.4, 0.5), (3.3, 0.8, 0.3)),
 }
 """Shadows (q1, q2, radius) [m]: elsewhere in each epoch."""
+CASES = ("stray points", "shadows")
+UNKNOWNS = MEASURES["MOTION"]
+
+
+def pair(scene, *, outliers=0.0, holes=None):
+    """Two epochs of the scene."""
+    shadows = holes or {"reference": (), "current": ()}
+    return [
+        sample_epoch(
+            scene, deformed=deformed, spacing=0.01, intensity_noise=30.0, seed=71 + deformed, outliers=outliers,
+            holes=shadows["current" if deformed else "reference"],
+        )
+        for deformed in (False, True)
+    ]  # fmt: skip
 
 
 @pytest.fixture(scope="module")
-def fields():
-    """The same homogeneous motion, seen clean and seen with 5 % stray points and shadows."""
+def seen():
+    """The same homogeneous motion, seen clean, with 5 % stray points, and with shadows: field, errors, reference."""
     scene = MEASURES["textured"](Wall(4.0, 3.0), Linear(GRADIENT, centre=(2.0, 1.5), offset=(0.001, -0.002, 0.004)))
-    out = {}
-    for name, outliers in (("clean", 0.0), ("cluttered", 0.05)):
-        reference, current = (
-            sample_epoch(
-                scene, deformed=deformed, spacing=0.01, intensity_noise=30.0, seed=71 + deformed, outliers=outliers,
-                holes=HOLES["current" if deformed else "reference"] if outliers else (),
-            )
-            for deformed in (False, True)
-        )  # fmt: skip
+    out = {"scene": scene}
+    for name, options in (("clean", {}), ("stray points", {"outliers": 0.05}), ("shadows", {"holes": HOLES})):
+        reference, current = pair(scene, **options)
         field = fit_affine(reference, current, gauge_length=0.6, gauge_spacing=0.15)
         out[name] = field, MEASURES["errors_of"](scene, field), reference
-    return scene, out
+    return out
 
 
-@pytest.mark.parametrize("unknown", MEASURES["MOTION"])
-def test_clutter_costs_no_more_than_the_points_it_takes(fields, unknown):
-    _, seen = fields
-    clean, _ = seen["clean"][1].of(unknown)
-    error, sd = seen["cluttered"][1].of(unknown)
-    assert len(error) > 0.6 * len(clean)
-    assert rms(error) < 1.4 * rms(clean)
-    assert coverage(error, sd) >= 0.88
+@pytest.mark.parametrize("case", CASES)
+@pytest.mark.parametrize("unknown", UNKNOWNS)
+def test_it_costs_no_more_than_the_points_it_takes(seen, case, unknown):
+    _, clean, _ = seen["clean"]
+    _, errors, _ = seen[case]
+    # Gauges that the shadows leave whole are judged; what happens at their rims is the next test.
+    whole = errors.inside & (rim_distance(errors.material, case) > 0.3)
+    error, sd = errors.of(unknown, whole)
+    assert len(error) > 50
+    assert rms(error) < 1.4 * rms(clean.of(unknown)[0])
+    assert coverage(error, sd) >= 0.85
 
 
-def test_cluttered_strain_is_not_biased(fields):
-    _, seen = fields
-    field, errors, _ = seen["cluttered"]
+def rim_distance(q, case):
+    """Distance to the nearest shadow of either epoch [m]."""
+    if case != "shadows":
+        return np.full(len(q), np.inf)
+    discs = [disc for discs in HOLES.values() for disc in discs]
+    return np.min([np.hypot(q[:, 0] - u, q[:, 1] - v) - radius for u, v, radius in discs], axis=0)
+
+
+@pytest.mark.parametrize("unknown", UNKNOWNS)
+def test_what_is_said_at_the_rim_of_a_shadow_is_right(seen, unknown):
+    _, errors, _ = seen["shadows"]
+    error, sd = errors.of(unknown, errors.inside & (rim_distance(errors.material, "shadows") <= 0.3))
+    assert len(error) > 50
+    assert coverage(error, sd) >= 0.85
+
+
+@pytest.mark.parametrize("case", CASES)
+def test_strain_is_not_biased(seen, case):
+    field, errors, _ = seen[case]
     for unknown in ("g11", "g12", "g21", "g22"):
         error, _ = errors.of(unknown)
-        given = errors.inside & np.isfinite(errors.error[:, MEASURES["MOTION"].index(unknown)])
+        given = errors.inside & np.isfinite(errors.error[:, UNKNOWNS.index(unknown)])
         mean, its_error = MEASURES["mean_and_error"](error, errors.material[given], field.gauge_length)
         assert abs(mean) < 3 * its_error, unknown
 
 
-def test_nothing_is_said_where_an_epoch_is_blind(fields):
-    scene, seen = fields
-    field, _, reference = seen["cluttered"]
+def test_nothing_is_said_in_the_middle_of_a_shadow(seen):
+    """Points of the reference more than half a gauge from anything that the current epoch shows."""
+    field, _, reference = seen["shadows"]
     points = blend_to_points(compute_strain(field), reference.points)
-    q, height = scene.surface.project(reference.points)
-    on_wall = np.abs(height) < 0.01
-    for u, v, radius in HOLES["current"]:
-        deep = on_wall & (np.hypot(q[:, 0] - u, q[:, 1] - v) < radius - 0.15)
-        assert deep.sum() > 100
-        assert np.isnan(points["strain_1"][deep]).mean() > 0.9, (u, v)
-        assert (points["status"][deep] > 0).mean() > 0.9, (u, v)
+    q, _ = seen["scene"].surface.project(reference.points)
+    u, v, radius = HOLES["current"][0]
+    deep = np.hypot(q[:, 0] - u, q[:, 1] - v) < radius - field.gauge_length / 2 - 0.05
+    assert deep.sum() > 500
+    for name in ("disp_n", "disp_x", "strain_1", "tilt", "curv_1", "spin"):
+        assert np.isnan(points[name][deep]).all(), name
+    assert (points["status"][deep] > 0).all()
 
 
-def test_stray_points_carry_no_gauges_of_their_own(fields):
-    scene, seen = fields
-    field, _, _ = seen["cluttered"]
-    _, height = scene.surface.project(field.position)
-    off = np.abs(height) > 0.02
-    assert np.isnan(field.displacement[off, 2]).all()
-    assert np.isnan(field.gradient[off][:, :2]).all()
+def test_stray_points_are_no_surface(seen):
+    """Gauges that stand on points far before the wall have no numbers."""
+    field, _, _ = seen["stray points"]
+    _, height = seen["scene"].surface.project(field.position)
+    off = np.abs(height) > 0.1
+    assert np.isnan(field.displacement[off]).all()
+    assert np.isnan(field.gradient[off]).all()
