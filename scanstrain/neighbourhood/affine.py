@@ -37,6 +37,9 @@ MIN_COVER = 0.35
 """Share of the patch that must be covered: less is a sliver at an edge or hole."""
 SHARPEST = 0.5
 """Largest slope of the smooth surface at the rim of a gauge [1]: beyond it the patch spans an arris, not a surface."""
+UNEXPLAINED = 1.6
+"""Residual spread over the typical one of the scan beyond which one affine map does not describe the patch: a joint,
+a crack, an arris or clutter runs through it. Range and incidence alone change the spread by less."""
 MIN_MATCHED = 0.5
 """Share of a patch's cells that the current epoch must show."""
 
@@ -229,6 +232,9 @@ def _status(
     total, matched, _, _, _, cover = state.info.T
     status = np.full(len(total), Status.FINE, np.uint8)
     status[moving] = Status.NOT_CONVERGED
+    spread = np.sqrt(state.info[:, 3])
+    typical = np.nanmedian(spread) if np.isfinite(spread).any() else np.inf
+    status[spread > UNEXPLAINED * typical] = Status.JOINT
     bend = np.abs(gauges.curvature[:, [0, 2]]).max(axis=1) + np.abs(gauges.curvature[:, 1])
     status[(cover < MIN_COVER) | (bend * radius > SHARPEST)] = Status.EDGE
     status[~np.isfinite(state.values).all(axis=1)] = Status.DEGENERATE

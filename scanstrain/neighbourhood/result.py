@@ -38,7 +38,7 @@ STATUS_WORDS = {
     Status.NO_OVERLAP: "the current epoch does not show this place",
     Status.EDGE: "the patch is one-sided or has a gap: edge of the surface",
     Status.NOT_CONVERGED: "the local fit did not converge",
-    Status.JOINT: "a joint or crack crosses the patch",
+    Status.JOINT: "residuals exceed the noise: a joint, crack or arris crosses the patch",
     Status.OUTSIDE: "no valid gauge within half a gauge length",
     Status.DEGENERATE: "the points do not span a surface",
 }

@@ -20,8 +20,9 @@ FloatArray = NDArray[np.float64]
 
 CURVATURE_PRIOR = 2.0
 """Standard deviation of surface curvature before the data speak [1/m]: keeps one-sided supports well posed."""
-_REJECT = 4.0
-"""Residuals beyond this many standard deviations of the first fit are left out of the second."""
+_TRIM = (2.0, 2.5, 3.0, 4.0)
+"""Residuals beyond so many standard deviations of one fit are left out of the next. The first cuts are sharp because
+a pipe or cable before the surface inflates the first standard deviation; the last one keeps all of the surface."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -159,10 +160,10 @@ def _fit_all(
         m = gather(o[0], o[1], o[2], radius, key, start, size, position, cells)
         none = np.zeros(6)
         q, sd = _quadratic(o, f, cells, m, position, count, radius, none, 1e30)
-        for _ in range(2):
+        for trim in _TRIM:
             if np.isnan(q[0]):
                 break
-            limit = _REJECT * sd + 1e-9
+            limit = trim * sd + 1e-9
             for a in range(3):
                 o[a] += q[0] * radius * f[a, 2]
             n0 = f[0, 2] - q[1] * f[0, 0] - q[2] * f[0, 1]
