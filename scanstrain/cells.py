@@ -24,9 +24,10 @@ BLOCK_WIDTH = 4
 """Block width in cells: wide enough that a block and its neighbours hold the 30-60 cells a plane and a local
 prediction need, narrow enough that curvature stays small inside one."""
 
-_BITS = 20
-_BIAS = 1 << (_BITS - 1)
-_MASK = (1 << _BITS) - 1
+KEY_BITS = 20
+"""Bits of one coordinate in a packed voxel index: neighbours are found by adding (i << 2 bits) + (j << bits) + k."""
+_BIAS = 1 << (KEY_BITS - 1)
+_MASK = (1 << KEY_BITS) - 1
 _KEY_LIMIT = _BIAS - 2
 
 
@@ -87,7 +88,7 @@ class Cells:
 @numba.njit(cache=True, nogil=True, inline="always")
 def pack(i: int, j: int, k: int) -> int:
     """Pack a voxel index into one ordered integer."""
-    return ((i + _BIAS) << (2 * _BITS)) | ((j + _BIAS) << _BITS) | (k + _BIAS)
+    return ((i + _BIAS) << (2 * KEY_BITS)) | ((j + _BIAS) << KEY_BITS) | (k + _BIAS)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -180,7 +181,7 @@ def _merge_neighbours(keys: IntArray, moments: FloatArray) -> FloatArray:
         for i in range(-1, 2):
             for j in range(-1, 2):
                 for k in range(-1, 2):
-                    other = find_key(keys, keys[b] + (i << (2 * _BITS)) + (j << _BITS) + k)
+                    other = find_key(keys, keys[b] + (i << (2 * KEY_BITS)) + (j << KEY_BITS) + k)
                     if other >= 0:
                         found[m] = other
                         m += 1

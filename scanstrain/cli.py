@@ -95,7 +95,7 @@ def run(terminal: Terminal, config: Path, workers: int, only: tuple[str, ...]) -
 @click.option("--measure", metavar="NAME", help="Strain measure: auto, small, green_lagrange, almansi, hencky, biot.")
 @click.option("--colour-by", metavar="ATTRIBUTE", help="Attribute that colours the points.")
 @click.option("--no-data", type=NumberOrWord(), help="Number for missing values, in place of NaN.")
-@click.option("--assume-same-crs", is_flag=True, help="Compare scans that do not both name their coordinate system.")
+@click.option("--assume-same-crs", is_flag=True, help="Compare although the stated coordinate systems differ.")
 @json_option
 @loudness
 @click.pass_obj

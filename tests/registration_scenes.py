@@ -17,9 +17,9 @@ def epoch(points, label=""):
     return Epoch(points=np.ascontiguousarray(points, float), origin=np.zeros(3), label=label)
 
 
-def wall(rng, n=40_000, *, noise=0.002, relief=0.0, aspect=2.0):
+def wall(rng, n=40_000, *, noise=0.002, relief=0.0, aspect=2.0, spacing=SPACING):
     """Upright wall in the plane y = 0, with a smooth relief on request, centred on the origin."""
-    height = np.sqrt(n * SPACING**2 / aspect)
+    height = np.sqrt(n * spacing**2 / aspect)
     x, z = rng.uniform(-0.5, 0.5, (2, n)) * [[aspect * height], [height]]
     y = relief * (np.sin(9 * x + 1) * np.cos(7 * z) + np.sin(3.1 * x + 4 * z))
     return np.c_[x, y + rng.normal(0, noise, n), z]

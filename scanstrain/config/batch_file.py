@@ -5,6 +5,7 @@ from __future__ import annotations
 
 import datetime as dt
 import difflib
+import os
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Annotated, Literal
@@ -61,7 +62,7 @@ class BatchConfig(CompareConfig):
 
     assume_same_crs: bool = Field(
         default=False,
-        description="Compare epochs of which one or both name no coordinate system. Default false, because"
+        description="Compare epochs although the coordinate systems that they state differ. Default false, because"
         " two systems taken for one look like movement.",
     )
     comparisons: Literal["first", "previous"] | None = Field(
@@ -110,9 +111,14 @@ class BatchConfig(CompareConfig):
 
     def placed(self, base: Path) -> BatchConfig:
         """Return the same batch with relative paths starting at the folder `base`."""
-        epochs = tuple(entry.model_copy(update={"file": base / entry.file}) for entry in self.epoch)
-        output = self.output.model_copy(update={"folder": base / self.output.folder})
+        epochs = tuple(entry.model_copy(update={"file": placed_at(base, entry.file)}) for entry in self.epoch)
+        output = self.output.model_copy(update={"folder": placed_at(base, self.output.folder)})
         return self.model_copy(update={"epoch": epochs, "output": output})
+
+
+def placed_at(base: Path, path: Path) -> Path:
+    """Return `path` as seen from the folder `base`, without detours; links are not followed."""
+    return Path(os.path.normpath(base / path))
 
 
 def _repeated_epochs(epochs: tuple[EpochEntry, ...]) -> Iterator[Fault]:

@@ -130,7 +130,8 @@ class StrainOptions(Options):
         default=None,
         examples=[[0.0, 0.0, 1.5]],
         description="A point [x, y, z] on the free side in file coordinates [m], towards which normals "
-        "look. No default: normals look into the tunnel, or to the side that was scanned.",
+        "look. No default: normals look into a tunnel, or to the middle of the object; on a single plane the side "
+        "is arbitrary, and a warning says which was taken.",
     )
     false_discovery_rate: float = Field(
         default=0.05,

@@ -36,6 +36,8 @@ def fresh_source(
 
     Parameters
     ----------
+    path : Path
+        The scan.
     values, colour
         One row per point of the file; returned with one row per kept point.
 

@@ -58,6 +58,8 @@ def pieces(header: LasHeader, *, fields: str = EVERYTHING, size: int = PIECE) ->
     fields : {"everything", "geometry"}
         With "geometry" the layers of a LAZ file that no epoch needs (times, waveforms, extra bytes) stay packed
         and hold zeros: half the time for point formats 6 to 10.
+    size : int
+        Most points in a piece.
 
     Raises
     ------

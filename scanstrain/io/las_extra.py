@@ -135,6 +135,8 @@ def describe(attribute: Attribute, values: NDArray[np.generic], no_data: float) 
 
     Parameters
     ----------
+    attribute : Attribute
+        What is written.
     values : ndarray of shape (n,)
         In the unit of the attribute; NaN where there is no value.
     no_data : float

@@ -134,7 +134,12 @@ def assemble(plan: Plan, rows: NDArray[np.uint8], values: StoredValues, start: i
 
     Parameters
     ----------
+    plan : Plan
+        Where each byte goes.
     rows : ndarray of shape (n, record length), uint8
+        Records of the reference.
+    values : StoredValues
+        Of all points of the file.
     start : int
         Number of the first point.
 

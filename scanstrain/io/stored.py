@@ -116,6 +116,8 @@ def expand_to_file(epoch: Epoch, values: Mapping[str, NDArray[Any]], *, dropped_
 
     Parameters
     ----------
+    epoch : Epoch
+        As read from the file.
     values : mapping of str to ndarray of shape (len(epoch), ...)
     dropped_status : int
         Reason code for dropped points.

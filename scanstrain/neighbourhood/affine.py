@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from scanstrain.cells import make_cells, median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import FitError, OptionError, explain
+from scanstrain.neighbourhood.fit import CELLS, COVER, MATCHED, POINTS, SCALE_GREY, SCALE_NORMAL
 from scanstrain.neighbourhood.gauges import frames_at, place_gauges
 from scanstrain.neighbourhood.intensity import comparable_intensity
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
@@ -148,7 +149,7 @@ def fit_affine(
         gate = max(ours.gate, 4 * step) if not last else ours.gate + step
         for turn in range(3 if last else 1):
             before = state.held[:, :3].copy()
-            level.fit(state, gate=gate, rounds=2, min_points=min_points)
+            level.fit(state, gate=gate, min_points=min_points)
             change = np.abs(state.held[:, :3] - before)
             if last and turn and np.nanquantile(change.max(axis=1), 0.99) < 0.05 * step:
                 break
@@ -229,10 +230,10 @@ def _status(
     state: Estimate, gauges: SmoothSurface, radius: float, moving: NDArray[np.bool_], min_points: int
 ) -> NDArray[np.uint8]:
     """Give every gauge its reason code."""
-    total, matched, _, _, _, cover = state.info.T
+    total, matched, cover = state.info[:, CELLS], state.info[:, MATCHED], state.info[:, COVER]
     status = np.full(len(total), Status.FINE, np.uint8)
     status[moving] = Status.NOT_CONVERGED
-    spread = np.sqrt(state.info[:, 3])
+    spread = np.sqrt(state.info[:, SCALE_NORMAL])
     typical = np.nanmedian(spread) if np.isfinite(spread).any() else np.inf
     status[spread > UNEXPLAINED * typical] = Status.JOINT
     bend = np.abs(gauges.curvature[:, [0, 2]]).max(axis=1) + np.abs(gauges.curvature[:, 1])
@@ -276,9 +277,9 @@ def _field(
         shape=gauges.curvature,
         observable=observable,
         status=status,
-        points=state.info[:, 2].astype(np.int64),
-        residual_normal=np.sqrt(state.info[:, 3]),
-        residual_intensity=np.sqrt(state.info[:, 4]),
+        points=state.info[:, POINTS].astype(np.int64),
+        residual_normal=np.sqrt(state.info[:, SCALE_NORMAL]),
+        residual_intensity=np.sqrt(state.info[:, SCALE_GREY]),
         gauge_length=gauge_length,
         gauge_spacing=spacing,
         warnings=warnings,

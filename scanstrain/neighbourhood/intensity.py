@@ -16,7 +16,8 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import BLOCK_WIDTH, group, make_cells, tangents, voxel_keys
 from scanstrain.epoch import Epoch
-from scanstrain.neighbourhood.smooth import gather, solve_in_place
+from scanstrain.neighbourhood.smooth import gather
+from scanstrain.neighbourhood.solve import solve_in_place
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]

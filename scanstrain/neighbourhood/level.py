@@ -8,9 +8,9 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import Cells, make_cells
+from scanstrain.cells import Cells, group, make_cells, voxel_keys
+from scanstrain.neighbourhood import fit
 from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
-from scanstrain.neighbourhood.fit import TUKEY_INFLATE, TUKEY_SHRINK, fit_gauges
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
 from scanstrain.neighbourhood.rows import Rows, block_density, evaluate_rows
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface
@@ -93,7 +93,7 @@ class Level:
         self.nuisance = np.full(12, WEAK_PRIOR)
         self.nuisance[[0, 1]], self.nuisance[[3, 4, 5, 6]] = NUISANCE_DISPLACEMENT, gradient
         # Members are gathered through a coarse hash of their own, as wide as a gauge radius.
-        self.hash = make_hash(cells.position, radius)
+        self.hash = group(voxel_keys(cells.position, radius))
 
     def rows(self, held: FloatArray, gate: float) -> Rows:
         """Compare the moved reference cells with the current epoch."""
@@ -104,27 +104,30 @@ class Level:
         noise = self.reference.height, self.reference.grey if self.textured else None
         return evaluate_rows(cells, self.normal, moved, self.predictor, noise, gate=gate, density=self.density)
 
-    def fit(self, state: Estimate, *, gate: float, rounds: int, min_points: int) -> None:
+    def fit(self, state: Estimate, *, gate: float, min_points: int) -> None:
         """Improve `state` by one comparison and one fit of every gauge."""
-        rows = self.rows(state.held, gate)
         cells, g = self.reference.cells, self.gauges
         order, key, start = self.hash
-        grey = cells.intensity if self.textured and cells.intensity is not None else np.empty(0)
         per_gauge = np.pi * (self.radius / cells.resolution) ** 2
-        start_values = state.held.copy()
-        fit_gauges(
-            g.origin, g.frame, g.curvature, start_values, self.radius, self.reference.gate + 0.1 * self.radius,
-            WEAK_PRIOR, self.nuisance, cells.resolution, rounds, min_points, int(3 * per_gauge) + 256,
-            TUKEY_SHRINK, TUKEY_INFLATE,
-            key, start, self.radius, cells.position[order], self.normal[order], cells.count[order],
-            rows.valid[order], rows.moved[order], rows.misfit[order], rows.slope[order], rows.grey[order],
-            rows.grey_slope[order], rows.variance[order], grey[order] if len(grey) else grey, state.gains,
-            state.values, state.held, state.covariance, state.data_sd, state.info,
+        fit.fit_gauges(
+            g.origin, g.frame, g.curvature, self.radius, self.reference.gate + 0.1 * self.radius, WEAK_PRIOR,
+            self.nuisance, cells.resolution, min_points, int(3 * per_gauge) + 256, self.textured, key, start,
+            self.table(self.rows(state.held, gate))[order], state.gains, state.held, state.values, state.covariance,
+            state.data_sd, state.info,
         )  # fmt: skip
 
-
-def make_hash(position: FloatArray, size: float) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:
-    """Sort cells by voxels of width `size` [m]: order, keys and starts as of `cells.group`."""
-    from scanstrain.cells import group, voxel_keys
-
-    return group(voxel_keys(position, size))
+    def table(self, rows: Rows) -> FloatArray:
+        """Put everything that the fit needs of a cell beside each other, columns as in `fit`."""
+        cells = self.reference.cells
+        table = np.empty((len(cells), fit.COLUMNS))
+        for column, values in (
+            (fit.POSITION, cells.position), (fit.NORMAL, self.normal), (fit.COUNT, cells.count),
+            (fit.VALID, rows.valid), (fit.MOVED, rows.moved), (fit.MISFIT, rows.misfit), (fit.SLOPE, rows.slope),
+            (fit.GREY, rows.grey), (fit.GREY_SLOPE, rows.grey_slope), (fit.VARIANCE, rows.variance),
+            (fit.OWN_GREY, 0.0 if cells.intensity is None else cells.intensity),
+        ):  # fmt: skip
+            wide = np.ndim(values) == 2
+            table[:, column : column + (np.shape(values)[1] if wide else 1)] = (
+                values if wide else np.reshape(values, (-1, 1))
+            )
+        return table

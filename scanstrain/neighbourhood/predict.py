@@ -16,9 +16,10 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import _BITS, BLOCK_WIDTH, Cells, find_key, pack
+from scanstrain.cells import BLOCK_WIDTH, KEY_BITS, Cells, find_key, pack
 from scanstrain.neighbourhood.covariance import Covariance
 from scanstrain.neighbourhood.smooth import SmoothSurface
+from scanstrain.neighbourhood.solve import LANES, backward, factor, forward
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -96,7 +97,7 @@ def _neighbours(
     for i in range(-1, 2):
         for j in range(-1, 2):
             for k in range(-1, 2):
-                other = find_key(key, key[b] + (i << (2 * _BITS)) + (j << _BITS) + k)
+                other = find_key(key, key[b] + (i << (2 * KEY_BITS)) + (j << KEY_BITS) + k)
                 if other < 0:
                     continue
                 dot = 0.0
@@ -128,29 +129,7 @@ def _neighbours(
     return m
 
 
-# Sums over contiguous rows may be taken in vector lanes; see the note in `fit`.
-_LANES = {"reassoc", "contract", "nsz"}
-
-
-@numba.njit(cache=True, nogil=True, fastmath=_LANES)
-def _forward(L: FloatArray, b: FloatArray, n: int) -> None:
-    for i in range(n):
-        v = b[i]
-        for k in range(i):
-            v -= L[i, k] * b[k]
-        b[i] = v / L[i, i]
-
-
-@numba.njit(cache=True, nogil=True, fastmath=_LANES)
-def _backward(L: FloatArray, b: FloatArray, n: int) -> None:
-    for i in range(n - 1, -1, -1):
-        v = b[i] / L[i, i]
-        b[i] = v
-        for k in range(i):
-            b[k] -= L[i, k] * v
-
-
-@numba.njit(cache=True, nogil=True, fastmath=_LANES)
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
 def krige(
     s: FloatArray, t: FloatArray, values: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float,
     noise: float, sill: float, probe: float, weights: FloatArray, L: FloatArray,
@@ -166,27 +145,19 @@ def krige(
             dx, dy = s[i] - s[j], t[i] - t[j]
             L[i, j] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
         L[i, i] = sill + constant + noise * share[i]
-    for j in range(m):
-        d = L[j, j]
-        for k in range(j):
-            d -= L[j, k] * L[j, k]
-        d = np.sqrt(max(d, 1e-12 * constant))
-        L[j, j] = d
-        for i in range(j + 1, m):
-            v = L[i, j]
-            for k in range(j):
-                v -= L[i, k] * L[j, k]
-            L[i, j] = v / d
+    if not factor(L, m):
+        weights[:m] = 0.0
+        return values[:m].mean(), np.inf, np.inf
     weights[:m] = values[:m]
-    _forward(L, weights, m)
-    _backward(L, weights, m)
+    forward(L, weights, m)
+    backward(L, weights, m)
     offset = constant * weights[:m].sum()
     for i in range(m):
         weights[i] *= sill
     return (offset, *_prediction_error(s, t, share, m, table, step, noise, sill, constant, probe, L))
 
 
-@numba.njit(cache=True, nogil=True, fastmath=_LANES)
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
 def _prediction_error(
     s: FloatArray, t: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float, noise: float, sill: float,
     constant: float, probe: float, L: FloatArray,
@@ -202,9 +173,9 @@ def _prediction_error(
         for i in range(m):
             dx, dy = s[i] - a, t[i] - b
             y[p, i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
-        _forward(L, y[p], m)
+        forward(L, y[p], m)
         weights[p] = y[p]
-        _backward(L, weights[p], m)
+        backward(L, weights[p], m)
     variance = own = side = diagonal = 0.0
     for p in range(4):
         for q in range(p + 1):
@@ -325,7 +296,7 @@ def choose_block(x: float, y: float, z: float, key: IntArray, first: IntArray, s
     for i in range(-1, 2):
         for j in range(-1, 2):
             for k in range(-1, 2):
-                b = find_key(key, base + (i << (2 * _BITS)) + (j << _BITS) + k)
+                b = find_key(key, base + (i << (2 * KEY_BITS)) + (j << KEY_BITS) + k)
                 if b < 0 or first[b + 1] - first[b] < 6:
                     continue
                 d = (origin[b, 0] - x) ** 2 + (origin[b, 1] - y) ** 2 + (origin[b, 2] - z) ** 2

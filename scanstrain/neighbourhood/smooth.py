@@ -14,7 +14,8 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import _BITS, Cells, find_key, pack, tangents
+from scanstrain.cells import KEY_BITS, Cells, find_key, pack, tangents
+from scanstrain.neighbourhood.solve import solve_in_place
 
 FloatArray = NDArray[np.float64]
 
@@ -48,35 +49,6 @@ class SmoothSurface:
 
 
 @numba.njit(cache=True, nogil=True)
-def solve_in_place(A: FloatArray, b: FloatArray, n: int) -> bool:
-    """Solve A x = b by Cholesky on the lower triangle; `A` becomes the factor and `b` the solution."""
-    for j in range(n):
-        d = A[j, j]
-        for k in range(j):
-            d -= A[j, k] * A[j, k]
-        if d <= 0.0:
-            return False
-        d = np.sqrt(d)
-        A[j, j] = d
-        for i in range(j + 1, n):
-            s = A[i, j]
-            for k in range(j):
-                s -= A[i, k] * A[j, k]
-            A[i, j] = s / d
-    for i in range(n):
-        s = b[i]
-        for k in range(i):
-            s -= A[i, k] * b[k]
-        b[i] = s / A[i, i]
-    for i in range(n - 1, -1, -1):
-        s = b[i]
-        for k in range(i + 1, n):
-            s -= A[k, i] * b[k]
-        b[i] = s / A[i, i]
-    return True
-
-
-@numba.njit(cache=True, nogil=True)
 def gather(
     x: float, y: float, z: float, radius: float, key: NDArray[np.int64], start: NDArray[np.int64], size: float,
     position: FloatArray, out: NDArray[np.int64],
@@ -87,7 +59,7 @@ def gather(
     for i in range(-1, 2):
         for j in range(-1, 2):
             for k in range(-1, 2):
-                b = find_key(key, base + (i << (2 * _BITS)) + (j << _BITS) + k)
+                b = find_key(key, base + (i << (2 * KEY_BITS)) + (j << KEY_BITS) + k)
                 if b < 0:
                     continue
                 for c in range(start[b], start[b + 1]):

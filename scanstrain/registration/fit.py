@@ -22,8 +22,8 @@ BoolArray = NDArray[np.bool_]
 
 TUKEY = 4.685
 """Cut-off of the biweight in robust standard deviations: 95 % efficient on normal errors (common practice)."""
-MIN_SCALE = 0.1
-"""The robust scale may fall below the a-priori noise (relief common to both epochs cancels), but not to nothing."""
+MIN_SCALE = 1e-6
+"""The robust scale may fall below the a-priori noise (common relief and curvature cancel), but not to nothing."""
 MIN_MATCHES = 20
 """Fewer matched blocks do not show a surface from enough sides."""
 FREEZE, FREEZE_AFTER = 1e-3, 20

@@ -26,6 +26,8 @@ MIN_SPACINGS = 4.0
 """Blocks are never narrower than this."""
 MIN_FLAT = 0.5
 """Share of the points in flat blocks below which a scan counts as cluttered."""
+STEPS = 4
+"""Block widths per factor of two."""
 WANTED_BLOCKS = 60
 """Small objects get narrower blocks, so that about so many are left."""
 
@@ -51,11 +53,12 @@ def level_widths(points: int, spacing: float, spacings: float, capture_range: fl
     Examples
     --------
     >>> level_widths(1_000_000, 0.01, 12, 0.3)
-    [0.24, 0.12]
+    [0.25, 0.125]
     """
     small = np.sqrt(points * spacing**2 / WANTED_BLOCKS)
-    finest = max(min(spacings * spacing, small, capture_range), MIN_SPACINGS * spacing)
-    widths = [float(finest)]
+    wanted = max(min(spacings * spacing, small, capture_range), MIN_SPACINGS * spacing)
+    # In coarse steps, so that the result does not depend on which points the spacing was estimated from.
+    widths = [float(2 ** (np.round(STEPS * np.log2(wanted)) / STEPS))]
     while widths[0] * 1.5 < capture_range:
         widths.insert(0, min(widths[0] * 2, capture_range))
     return widths

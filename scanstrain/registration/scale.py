@@ -3,17 +3,21 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.registration.covariance import estimate
-from scanstrain.registration.fit import Fit, total
+from scanstrain.registration.fit import MIN_SCALE, TUKEY, Fit, biweight, robust_scale, total
 from scanstrain.registration.match import UNKNOWNS, Metric
 from scanstrain.registration.weak import MIN_RELIABILITY
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
+ROUNDS = 10
+"""Rounds of weighting: ground returns from the middle outwards."""
 WORTHLESS = 1e4
 """Standard error [ppm] beyond which the scale is not reported: a per cent says nothing about an instrument."""
 
@@ -38,7 +42,10 @@ def determined(fit: Fit, strong: FloatArray) -> bool:
 
 
 def scale_ppm(fit: Fit, patch: IntArray, count: int, metric: Metric, strong: FloatArray) -> tuple[float, float]:
-    """Fit a seventh parameter about the result, on the same rows and weights.
+    """Fit a seventh parameter about the result.
+
+    On all matches, with weights of its own: a scale moves the far ends most, and ground that is stable but for the
+    scale would be left out there.
 
     Parameters
     ----------
@@ -57,8 +64,16 @@ def scale_ppm(fit: Fit, patch: IntArray, count: int, metric: Metric, strong: Flo
     scale, sd : float
         Current over reference minus one and its standard error [ppm]; NaN where the surfaces do not fix it.
     """
-    step, covariance, _ = estimate(fit, patch, count, with_scale(strong))
+    basis = with_scale(strong)
+    moved = np.zeros(UNKNOWNS)
+    for _ in range(ROUNDS):
+        step, covariance, _ = estimate(fit, patch, count, basis)
+        moved += basis @ step
+        rows = replace(fit.rows, residual=fit.rows.residual - fit.rows.row @ (basis @ step))
+        z = rows.residual / rows.sd
+        spread = max(MIN_SCALE, min(fit.scale, robust_scale(z[fit.weight > 0])))
+        fit = replace(fit, rows=rows, scale=spread, weight=biweight(z / (TUKEY * spread)) / rows.sd**2)
     sd = float(np.sqrt(covariance[-1, -1])) / metric.arm * 1e6
     if not sd < WORTHLESS:
         return np.nan, np.nan
-    return float(step[-1]) / metric.arm * 1e6, sd
+    return float(moved[-1]) / metric.arm * 1e6, sd

@@ -245,7 +245,7 @@ def _search(
     refined = [_refine(A, b, start) for start in starts]
     # One yardstick for all: a hypothesis that is loose everywhere must not win by its own wide scale.
     yardstick = min(scale for _, scale in refined)
-    support = [float((area * biweight((b - A @ y) / (TUKEY * yardstick))).sum()) for y, _ in refined]
+    support = [float((area * biweight((b - A @ y) / (AGREES * yardstick))).sum()) for y, _ in refined]
     best = int(np.argmax(support))
     return refined[best]
 

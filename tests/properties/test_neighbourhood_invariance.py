@@ -5,11 +5,11 @@ from __future__ import annotations
 
 import runpy
 from dataclasses import replace
+from functools import cache
 from pathlib import Path
 
 import numpy as np
-import pytest
-from hypothesis import HealthCheck, given, settings
+from hypothesis import Phase, given, settings
 from hypothesis import strategies as st
 
 from scanstrain.linalg import rotation_matrix
@@ -18,19 +18,25 @@ from scanstrain.strain import compute_strain
 from scanstrain.synthetic import Linear, Wall, sample_epoch
 
 MEASURES = runpy.run_path(str(Path(__file__).parents[1] / "scenes" / "scene_measures.py"))
-FEW = settings(max_examples=4, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+FEW = settings(
+    max_examples=4,
+    deadline=None,
+    phases=[Phase.explicit, Phase.generate],  # a failing example is not made simpler: each costs a fit
+)
+VAGUE = 0.02
+"""Strains of these small gauges count as given up to this standard error."""
 GAUGE = 0.4
 SCENE = MEASURES["textured"](
     Wall(1.5, 1.2), Linear(((1.5e-3, 2e-4), (-4e-4, -1e-3), (2e-3, -1e-3)), centre=(0.75, 0.6), offset=(0, 0, 0.002))
 )
 NUMBERS = st.floats(-1.0, 1.0)
 VECTORS = st.tuples(NUMBERS, NUMBERS, NUMBERS).map(np.array)
-SHIFTED = 0.6
-"""Cells fall elsewhere after a shift or a turn, so that noise is averaged otherwise; strains may differ by this share
-of their standard error, root mean square: between two independent scans it would be 1.4."""
+SHIFTED = 0.95
+"""Cells fall elsewhere after a shift or a turn, so that noise is averaged otherwise. What that may change, root mean
+square in standard errors: two estimates of efficiency 1.2 that share all but their own losses, sqrt(2 (1.2^2 - 1))."""
 
 
-@pytest.fixture(scope="module")
+@cache
 def pair():
     return tuple(
         sample_epoch(SCENE, deformed=deformed, spacing=0.012, intensity_noise=30.0, seed=30 + deformed)
@@ -38,14 +44,14 @@ def pair():
     )
 
 
-@pytest.fixture(scope="module")
-def before(pair):
-    return invariants(*pair)
+@cache
+def before():
+    return invariants(*pair())
 
 
 def invariants(reference, current):
     """Numbers per gauge that do not depend on the frame, with their places and standard errors."""
-    field = fit_affine(reference, current, gauge_length=GAUGE, gauge_spacing=0.1)
+    field = fit_affine(reference, current, gauge_length=GAUGE, gauge_spacing=0.1, required_strain_sd=VAGUE)
     values = compute_strain(field).values
     inner = (field.status == 0) & np.isfinite(values["strain_1"])
     numbers = {name: values[name][inner] for name in ("strain_1", "strain_2", "dilation", "tilt")}
@@ -76,43 +82,31 @@ def compare(before, places, numbers):
 
 @given(shift=VECTORS)
 @FEW
-def test_carrying_both_epochs_away_changes_no_strain(pair, before, shift):
+def test_carrying_both_epochs_away_changes_no_strain(shift):
     T = np.eye(4)
     T[:3, 3] = 100.0 * shift
-    places, numbers, _ = invariants(*(epoch.moved(T) for epoch in pair))
-    for name, apart in compare(before, places - T[:3, 3], numbers).items():
+    places, numbers, _ = invariants(*(epoch.moved(T) for epoch in pair()))
+    for name, apart in compare(before(), places - T[:3, 3], numbers).items():
         assert apart < SHIFTED, name
 
 
 @given(turn=VECTORS)
 @FEW
-def test_turning_both_epochs_changes_no_strain(pair, before, turn):
+def test_turning_both_epochs_changes_no_strain(turn):
     T = np.eye(4)
     T[:3, :3] = rotation_matrix(3.0 * turn)
-    places, numbers, _ = invariants(*(epoch.moved(T) for epoch in pair))
-    for name, apart in compare(before, places @ T[:3, :3], numbers).items():
+    places, numbers, _ = invariants(*(epoch.moved(T) for epoch in pair()))
+    for name, apart in compare(before(), places @ T[:3, :3], numbers).items():
         assert apart < SHIFTED, name
-
-
-def test_a_shift_by_whole_blocks_changes_nothing(pair):
-    """Cells then hold the same points: only rounding is left."""
-    options = {"gauge_length": GAUGE, "gauge_spacing": 0.1, "resolution": 0.0125, "free_side": np.array([0.7, -9.0, 0.6])}
-    one = fit_affine(*pair, **options)
-    shift = np.array([64.0, -32.0, 128.0])  # whole numbers of every width that the stage cuts with are powers of two
-    T = np.eye(4)
-    T[:3, 3] = shift
-    other = fit_affine(*(epoch.moved(T) for epoch in pair), **{**options, "free_side": options["free_side"] + shift})
-    if len(one) == len(other) and np.allclose(other.position - shift, one.position, atol=1e-9):
-        np.testing.assert_allclose(other.gradient, one.gradient, atol=1e-8)
-        np.testing.assert_allclose(other.displacement, one.displacement, atol=1e-9)
 
 
 @given(gain=st.floats(0.4, 2.5), offset=st.floats(0.0, 3000.0))
 @FEW
-def test_another_brightness_in_one_epoch_changes_nothing(pair, gain, offset):
-    reference, current = pair
+def test_another_brightness_in_one_epoch_changes_nothing(gain, offset):
+    reference, current = pair()
     brighter = replace(current, intensity=(gain * current.intensity + offset).astype(np.float32))
-    one, other = (fit_affine(reference, each, gauge_length=GAUGE, gauge_spacing=0.15) for each in (current, brighter))
+    options = {"gauge_length": GAUGE, "gauge_spacing": 0.15, "required_strain_sd": VAGUE}
+    one, other = (fit_affine(reference, each, **options) for each in (current, brighter))
     np.testing.assert_array_equal(other.status, one.status)
     both = one.observable & other.observable
     assert both.sum() > 0.98 * one.observable.sum()

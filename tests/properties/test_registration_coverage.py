@@ -49,11 +49,10 @@ def across(points):
     ids=["wall", "lining", "correlated"],
 )
 def test_claimed_errors_cover_the_true_ones(make, normals, drift):
-    """A quarter of the noise variance of a block is one part of its centre's; 0.5 mm that neighbours share is five times
-    that, and a covariance of independent blocks would be too small by more than two."""
-    z = standardised(make, normals, drift)
-    # About three independent numbers a seed: the share outside 1.96 is 5 % +- 2 % and the rms 1 +- 0.065; the small scene
-    # adds some uncertainty of the held motions, so the lower limit is wide.
+    """Also where neighbours share a part of their error: independent blocks would then claim less than half of it."""
+    z = standardised(make, normals, drift, **({"spacing": 0.02} if drift else {}))
+    # About three independent numbers a seed: the rms is known to 6 %, the share outside 1.96 to 2 %. Held motions blur
+    # these small scenes a little, so the lower limit is wide.
     assert 0.5 < np.sqrt((z**2).mean()) < 1.25
     assert (np.abs(z) > 1.96).mean() < 0.12
 
@@ -63,11 +62,14 @@ def test_result_follows_the_frame():
     rng = np.random.default_rng(1)
     a, b = room(rng, noise=0.002), apply(motion(0.4, 0.02), room(rng, noise=0.002))
     S = motion(130.0, 7.0)
-    first = register(epoch(a), epoch(b)).T_ref_cur
+    result = register(epoch(a), epoch(b))
     second = register(epoch(apply(S, a)), epoch(apply(S, b))).T_ref_cur
-    expected = S @ first @ np.linalg.inv(S)
+    expected = S @ result.T_ref_cur @ np.linalg.inv(S)
     moved = apply(second, apply(S, b)) - apply(expected, apply(S, b))
-    assert np.abs(moved).max() < 0.15e-3
+    # Blocks are cut along the axes of the frame, so other cuts weigh the same noise a little differently.
+    assert np.sqrt((moved**2).sum(axis=1).mean()) < 2 * np.sqrt(
+        np.trace(result.displacement_covariance(b).mean(axis=0))
+    )
 
 
 def test_order_of_the_points_does_not_matter():

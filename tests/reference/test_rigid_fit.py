@@ -1,8 +1,8 @@
 # SPDX-License-Identifier: MIT
 """The closed-form rigid fit against published and independently computed values.
 
-The reflection trap is the set-up of Umeyama 1991 (inputs seen in several public tests; numbers recomputed with c = 1), the
-3-D case is a closed form, the covariance is the textbook one of a centred point set.
+The reflection trap is the set-up of Umeyama 1991 (inputs seen in several public tests; numbers recomputed with c = 1),
+the 3-D case is a closed form, the covariance is the textbook one of a centred point set.
 """
 
 import numpy as np

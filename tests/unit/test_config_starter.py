@@ -93,7 +93,7 @@ def test_the_committed_batch_files_say_what_they_shall():
     assert [f"{a.label} {b.label}" for a, b in adit.pairs()] == ["march june", "march september"]
     assert [f"{a.label} {b.label}" for a, b in wall.pairs()] == ["march september"]
     assert (adit.strain.structure, wall.strain.structure) == ("tunnel", "wall")
-    assert adit.neighbourhood.gauge_length == wall.neighbourhood.gauge_length == 0.6
+    assert adit.neighbourhood.gauge_length == wall.neighbourhood.gauge_length == 0.8
     assert [str(epoch.date) for epoch in adit.epoch] == ["2031-03-04", "2031-06-10", "2031-09-12"]
     assert adit.epoch[0].file.name == "adit_2031-03-04.laz"
     assert adit.output.folder.resolve() == ROOT / "results" / "adit"

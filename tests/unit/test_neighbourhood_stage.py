@@ -30,7 +30,9 @@ BACK = np.array([0.0, -10.0, 0.0])
 
 
 def fitted(reference, current, **options):
-    return fit_affine(reference, current, **{"gauge_length": GAUGE, "gauge_spacing": 0.15, "free_side": BACK, **options})
+    # Strains of these small gauges count as given up to a vague 1 %.
+    usual = {"gauge_length": GAUGE, "gauge_spacing": 0.15, "free_side": BACK, "required_strain_sd": 0.01}
+    return fit_affine(reference, current, **usual | options)
 
 
 @pytest.fixture(scope="module")
@@ -146,8 +148,6 @@ def test_intensity_that_says_nothing_is_not_used(pair, which):
     assert (field.status == Status.FINE).mean() > 0.9
     np.testing.assert_array_equal(field.observable, without.observable)
     np.testing.assert_allclose(all_values(field), all_values(without), atol=1e-9)
-    # Relief of 1 mm alone leaves strain vaguer than the default limit.
-    assert not field.observable[:, IN_PLANE[2:]].any()
 
 
 def test_a_bare_wall_gives_nothing_in_plane():
@@ -162,26 +162,24 @@ def test_a_bare_wall_gives_nothing_in_plane():
     assert field.observable[:, NORMAL][field.status == Status.FINE].all()
 
 
-def test_duplicate_points_are_no_new_information(pair, field):
+def test_duplicate_points_are_no_new_information(pair):
     twice = [
         replace(epoch, points=np.repeat(epoch.points, 2, axis=0), intensity=np.repeat(epoch.intensity, 2))
         for epoch in pair
     ]
-    doubled = fitted(*twice)
-    assert len(doubled) == len(field)
-    both = field.observable & doubled.observable
-    assert both.sum() > 0.9 * field.observable.sum()
-    np.testing.assert_allclose(doubled.position, field.position, atol=1e-3)
-    sd, sd_doubled = (np.sqrt(np.einsum("gii->gi", f.covariance)) for f in (field, doubled))
-    ratio = (sd_doubled / sd)[both]
-    assert np.median(ratio) == pytest.approx(1.0, abs=0.1)
-    error = (all_values(doubled) - all_values(field))[both] / sd[both]
-    assert MEASURES["rms"](error) < 0.3
+    once, doubled = (fitted(*epochs, resolution=SPACING) for epochs in (pair, twice))
+    np.testing.assert_allclose(doubled.position, once.position, atol=1e-3)
+    both = once.observable & doubled.observable
+    assert both.sum() > 0.98 * once.observable.sum()
+    sd, sd_doubled = (np.sqrt(np.einsum("gii->gi", f.covariance)) for f in (once, doubled))
+    assert np.median((sd_doubled / sd)[both]) == pytest.approx(1.0, abs=0.05)
+    assert MEASURES["rms"]((all_values(doubled) - all_values(once))[both] / sd[both]) < 0.1
 
 
-def test_two_sheets_closer_than_a_gauge_keep_to_themselves():
-    """The faces of a slab 150 mm thick, gauges of 400 mm: the front moves by +5 mm, the back by -3 mm."""
-    moves, pair = {0.0: -5e-3, 0.15: -3e-3}, []
+@pytest.mark.parametrize("thickness", [0.3, 0.15])
+def test_two_sheets_closer_than_a_gauge_keep_to_themselves(thickness):
+    """The faces of a slab, gauges of 400 mm: the front moves by +5 mm, the back by -3 mm, both along -y."""
+    moves, pair = {0.0: -5e-3, thickness: -3e-3}, []
     rng = np.random.default_rng(4)
     for deformed in (False, True):
         sheets = []
@@ -194,22 +192,23 @@ def test_two_sheets_closer_than_a_gauge_keep_to_themselves():
     inner = ((field.position[:, [0, 2]] > 0.3) & (field.position[:, [0, 2]] < 1.2)).all(axis=1)
     fine = inner & (field.status == Status.FINE)
     assert fine.sum() > 0.9 * inner.sum() > 30
-    front = field.position[:, 1] < 0.075
+    front = field.position[:, 1] < thickness / 2
     for sheet, move in ((front, 5e-3), (~front, 3e-3)):
         np.testing.assert_allclose(field.displacement[sheet & fine, 2], move, atol=3e-4)
 
 
-def test_order_of_points_does_not_matter(pair, field):
+@pytest.mark.parametrize("resolution", [SPACING, None], ids=["given resolution", "own resolution"])
+def test_order_of_points_does_not_matter(pair, resolution):
     rng = np.random.default_rng(5)
     mixed = []
     for epoch in pair:
         order = rng.permutation(len(epoch))
         mixed.append(replace(epoch, points=epoch.points[order], intensity=epoch.intensity[order]))
-    other = fitted(*mixed)
-    np.testing.assert_array_equal(other.status, field.status)
-    np.testing.assert_array_equal(other.observable, field.observable)
-    np.testing.assert_allclose(all_values(other), all_values(field), atol=1e-8)
-    np.testing.assert_allclose(other.covariance, field.covariance, rtol=1e-4, atol=1e-16)
+    one, other = (fitted(*epochs, resolution=resolution) for epochs in (pair, mixed))
+    np.testing.assert_array_equal(other.status, one.status)
+    np.testing.assert_array_equal(other.observable, one.observable)
+    np.testing.assert_allclose(all_values(other), all_values(one), atol=1e-8)
+    np.testing.assert_allclose(other.covariance, one.covariance, rtol=1e-4, atol=1e-16)
 
 
 @pytest.mark.parametrize(

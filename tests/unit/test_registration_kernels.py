@@ -52,8 +52,7 @@ def test_nearest_block_is_that_of_brute_force(surfaces):
 
 
 def test_rows_are_the_derivatives_of_the_residual(surfaces):
-    """Numerically, for a small motion and scale of the current blocks; normals turn along by half, which is of second
-    order in the tangential offset and left out of the rows."""
+    """Of a turn, a shift and a larger current cloud, by their formulas in plain NumPy."""
     a, b = surfaces
     metric = Metric(np.array([0.2, -0.1, 0.3]), 2.5)
     pairs = pair(a, b, np.eye(4))
@@ -93,7 +92,7 @@ def test_two_places_on_one_circle_leave_no_residual():
 def test_edges_of_a_wall_are_borders_and_its_middle_is_not():
     surface = make_surface(SCENES["wall"](np.random.default_rng(3)), 0.085)
     half = np.abs(surface.cells.centre[:, [0, 2]]).max(axis=0)
-    inside = (np.abs(surface.cells.centre[:, [0, 2]]) < half - 0.12).all(axis=1)
+    inside = (np.abs(surface.cells.centre[:, [0, 2]]) < half - 0.2).all(axis=1)
     dense = surface.cells.weight > 60
     assert (surface.state[inside & dense] == USABLE).mean() > 0.98
     outermost = (np.abs(surface.cells.centre[:, [0, 2]]) > half - 0.03).any(axis=1)
