@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import make_cells, median_spacing
+from scanstrain.cells import median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import FitError, OptionError, explain
 from scanstrain.neighbourhood.fit import CELLS, COVER, MATCHED, POINTS, SCALE_GREY, SCALE_NORMAL
@@ -17,7 +17,7 @@ from scanstrain.neighbourhood.gauges import frames_at, place_gauges
 from scanstrain.neighbourhood.intensity import comparable_intensity
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
 from scanstrain.neighbourhood.result import AffineField, Status
-from scanstrain.neighbourhood.smooth import SmoothSurface
+from scanstrain.neighbourhood.smooth import SmoothSurface, support_cells
 
 FloatArray = NDArray[np.float64]
 Progress = Callable[[str, float], None]
@@ -129,7 +129,7 @@ def fit_affine(
     say("surface model", 0.0)
     finest = make_surface(reference.points, grey_reference, width, support, max(spacing, 4 * width))
     places, normals = place_gauges(finest.cells, spacing)
-    gauges, warnings = frames_at(places, normals, make_cells(finest.cells.position, radius / 4), free_side, axis)
+    gauges, warnings = frames_at(places, normals, support_cells(finest.cells.position, radius), free_side, axis)
     state = Estimate(np.zeros((len(places), 12)), np.ones(len(places)))
 
     change = np.zeros((len(places), 3))

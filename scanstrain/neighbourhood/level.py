@@ -13,7 +13,7 @@ from scanstrain.neighbourhood import fit
 from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
 from scanstrain.neighbourhood.rows import Rows, block_density, evaluate_rows
-from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface
+from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells
 from scanstrain.neighbourhood.warp import blend, nearest_gauges
 
 FloatArray = NDArray[np.float64]
@@ -66,8 +66,7 @@ def make_surface(
 ) -> Surface:
     """Model one epoch at one resolution [m], smooth over `support_radius` [m], noise judged over `region` [m]."""
     cells = make_cells(points, resolution, intensity=intensity)
-    wide = make_cells(cells.position, support_radius / 4)
-    smooth = smooth_surface(cells.centre, cells.normal, wide)
+    smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, support_radius))
     gate = CLUTTER * float(np.median(cells.roughness)) + 0.1 * resolution
     height, grey = measure_covariance(cells, smooth, gate=gate, region_width=region)
     return Surface(cells, smooth, height, grey, gate)

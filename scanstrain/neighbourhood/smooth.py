@@ -14,16 +14,21 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import KEY_BITS, Cells, find_key, pack, tangents
+from scanstrain.cells import BLOCK_WIDTH, KEY_BITS, Cells, find_key, make_cells, pack, tangents
 from scanstrain.neighbourhood.solve import solve_in_place
 
 FloatArray = NDArray[np.float64]
 
 CURVATURE_PRIOR = 2.0
 """Standard deviation of surface curvature before the data speak [1/m]: keeps one-sided supports well posed."""
-_TRIM = (2.0, 2.5, 3.0, 4.0)
-"""Residuals beyond so many standard deviations of one fit are left out of the next. The first cuts are sharp because
-a pipe or cable before the surface inflates the first standard deviation; the last one keeps all of the surface."""
+KEEP = 3.0
+"""Cells farther from the surface than this many robust standard deviations are left out: a pipe, a cable."""
+_TRIMS = 6
+"""Fits in which cells are dropped and taken back; with a third of clutter the choice settles in four."""
+_TURNS = 2
+"""Refits in the frame of the fit before; the second changes the slope by less than 1e-6."""
+REACH = 2
+"""Support radius in block widths of the cells it is fitted on: some 200 cells."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,12 +58,13 @@ def gather(
     x: float, y: float, z: float, radius: float, key: NDArray[np.int64], start: NDArray[np.int64], size: float,
     position: FloatArray, out: NDArray[np.int64],
 ) -> int:  # fmt: skip
-    """List the cells within `radius` (at most a block width) of a place; returns how many."""
+    """List the cells within `radius` of a place, as many as `out` holds; returns how many."""
     base = pack(int(np.floor(x / size)), int(np.floor(y / size)), int(np.floor(z / size)))
+    reach = int(np.ceil(radius / size - 1e-9))
     m = 0
-    for i in range(-1, 2):
-        for j in range(-1, 2):
-            for k in range(-1, 2):
+    for i in range(-reach, reach + 1):
+        for j in range(-reach, reach + 1):
+            for k in range(-reach, reach + 1):
                 b = find_key(key, base + (i << (2 * KEY_BITS)) + (j << KEY_BITS) + k)
                 if b < 0:
                     continue
@@ -71,50 +77,83 @@ def gather(
 
 
 @numba.njit(cache=True, nogil=True)
-def _quadratic(
-    o: FloatArray, f: FloatArray, cells: NDArray[np.int64], m: int, position: FloatArray, count: FloatArray,
-    radius: float, previous: FloatArray, limit: float,
-) -> tuple[FloatArray, float]:  # fmt: skip
-    """Weighted quadratic of height in the frame `f` at `o`; cells farther than `limit` from `previous` are out.
-
-    Returns (height, slope 1, slope 2, k11, k12, k22) in units of `radius` and the residual standard deviation.
-    """
-    A = np.zeros((6, 6))
-    b = np.zeros(6)
-    ridge = (0.1 / (CURVATURE_PRIOR * radius)) ** 2
-    rows = np.empty((m, 7))
-    used = 0
-    for r in range(m):
+def _terms(
+    o: FloatArray, f: FloatArray, cells: NDArray[np.int64], radius: float, position: FloatArray, rows: FloatArray
+) -> None:
+    """Quadratic terms and height of every cell in the frame `f` at `o`, in units of `radius`."""
+    for r in range(len(cells)):
         c = cells[r]
         dx, dy, dz = position[c, 0] - o[0], position[c, 1] - o[1], position[c, 2] - o[2]
-        x1 = (dx * f[0, 0] + dy * f[1, 0] + dz * f[2, 0]) / radius
-        x2 = (dx * f[0, 1] + dy * f[1, 1] + dz * f[2, 1]) / radius
-        h = (dx * f[0, 2] + dy * f[1, 2] + dz * f[2, 2]) / radius
-        row = np.array([1.0, x1, x2, 0.5 * x1 * x1, x1 * x2, 0.5 * x2 * x2])
-        off = h
-        for k in range(6):
-            off -= row[k] * previous[k]
-        if abs(off) > limit:
+        x = (dx * f[0, 0] + dy * f[1, 0] + dz * f[2, 0]) / radius
+        y = (dx * f[0, 1] + dy * f[1, 1] + dz * f[2, 1]) / radius
+        rows[r, 0], rows[r, 1], rows[r, 2] = 1.0, x, y
+        rows[r, 3], rows[r, 4], rows[r, 5] = 0.5 * x * x, x * y, 0.5 * y * y
+        rows[r, 6] = (dx * f[0, 2] + dy * f[1, 2] + dz * f[2, 2]) / radius
+
+
+@numba.njit(cache=True, nogil=True)
+def _quadratic(rows: FloatArray, weight: FloatArray, ridge: float, q: FloatArray) -> bool:
+    """Weighted least squares of height on the six terms; curvatures carry a ridge."""
+    A = np.zeros((6, 6))
+    q[:] = 0.0
+    used = 0
+    for r in range(len(rows)):
+        if weight[r] == 0.0:
             continue
-        rows[used, :6] = row
-        rows[used, 6] = h
         used += 1
         for i in range(6):
-            b[i] += count[c] * row[i] * h
+            v = weight[r] * rows[r, i]
+            q[i] += v * rows[r, 6]
             for j in range(i + 1):
-                A[i, j] += count[c] * row[i] * row[j]
+                A[i, j] += v * rows[r, j]
     total = A[0, 0]
     for i in range(6):
         A[i, i] += 1e-9 * total + (ridge if i > 2 else 0.0)
-    if used < 6 or not solve_in_place(A, b, 6):
-        return np.full(6, np.nan), 0.0
-    ss = 0.0
-    for r in range(used):
-        e = rows[r, 6]
+    return used >= 6 and solve_in_place(A, q, 6)
+
+
+@numba.njit(cache=True, nogil=True)
+def _trim(rows: FloatArray, count: FloatArray, q: FloatArray, weight: FloatArray) -> None:
+    """Weigh by count the cells within `KEEP` robust standard deviations of the surface `q`, the rest not at all."""
+    off = np.empty(len(rows))
+    for r in range(len(rows)):
+        off[r] = rows[r, 6]
         for k in range(6):
-            e -= rows[r, k] * b[k]
-        ss += e * e
-    return b, np.sqrt(ss / max(used - 6, 1))
+            off[r] -= rows[r, k] * q[k]
+        off[r] = abs(off[r])
+    limit = KEEP * 1.4826 * np.median(off) + 1e-9
+    for r in range(len(rows)):
+        weight[r] = count[r] if off[r] <= limit else 0.0
+
+
+@numba.njit(cache=True, nogil=True)
+def _settle(
+    o: FloatArray, f: FloatArray, cells: NDArray[np.int64], radius: float, position: FloatArray, count: FloatArray,
+    q: FloatArray,
+) -> bool:  # fmt: skip
+    """Fit the surface to the cells that belong to it, and move `o` and turn `f` onto it."""
+    rows = np.empty((len(cells), 7))
+    own = count[cells]
+    weight = own.copy()
+    ridge = (0.1 / (CURVATURE_PRIOR * radius)) ** 2
+    _terms(o, f, cells, radius, position, rows)
+    for _ in range(_TRIMS):
+        if not _quadratic(rows, weight, ridge, q):
+            return False
+        _trim(rows, own, q, weight)
+    for _ in range(_TURNS):
+        for a in range(3):
+            o[a] += q[0] * radius * f[a, 2]
+        n = f[:, 2] - q[1] * f[:, 0] - q[2] * f[:, 1]
+        n /= np.sqrt(np.sum(n * n))
+        f[0, 0], f[1, 0], f[2, 0], f[0, 1], f[1, 1], f[2, 1] = tangents(n[0], n[1], n[2])
+        f[:, 2] = n
+        _terms(o, f, cells, radius, position, rows)
+        if not _quadratic(rows, weight, ridge, q):
+            return False
+    for a in range(3):
+        o[a] += q[0] * radius * f[a, 2]
+    return True
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)
@@ -125,44 +164,19 @@ def _fit_all(
 ) -> None:  # fmt: skip
     for p in numba.prange(len(places)):
         cells = np.empty(512, np.int64)
-        o = places[p].copy()
-        f = np.empty((3, 3))
+        q = np.zeros(6)
+        origin[p] = places[p]
+        f = frame[p]
         f[0, 0], f[1, 0], f[2, 0], f[0, 1], f[1, 1], f[2, 1] = tangents(normals[p, 0], normals[p, 1], normals[p, 2])
         f[:, 2] = normals[p]
-        m = gather(o[0], o[1], o[2], radius, key, start, size, position, cells)
-        none = np.zeros(6)
-        q, sd = _quadratic(o, f, cells, m, position, count, radius, none, 1e30)
-        for trim in _TRIM:
-            if np.isnan(q[0]):
-                break
-            limit = trim * sd + 1e-9
-            for a in range(3):
-                o[a] += q[0] * radius * f[a, 2]
-            n0 = f[0, 2] - q[1] * f[0, 0] - q[2] * f[0, 1]
-            n1 = f[1, 2] - q[1] * f[1, 0] - q[2] * f[1, 1]
-            n2 = f[2, 2] - q[1] * f[2, 0] - q[2] * f[2, 1]
-            s = np.sqrt(n0 * n0 + n1 * n1 + n2 * n2)
-            f[0, 2], f[1, 2], f[2, 2] = n0 / s, n1 / s, n2 / s
-            f[0, 0], f[1, 0], f[2, 0], f[0, 1], f[1, 1], f[2, 1] = tangents(n0 / s, n1 / s, n2 / s)
-            # In the new tangents the old curvatures no longer serve, so the first refit only tests the plane part.
-            near = np.zeros(6)
-            near[3] = near[5] = 0.5 * (q[3] + q[5])
-            spread = 0.5 * np.sqrt((q[3] - q[5]) ** 2 + 4.0 * q[4] * q[4])
-            q, sd = _quadratic(o, f, cells, m, position, count, radius, near, limit + 0.5 * spread)
-        if np.isnan(q[0]):
-            support[p] = 0
-            q[:] = 0.0
-        else:
-            support[p] = m
-        for a in range(3):
-            o[a] += q[0] * radius * f[a, 2]
-        origin[p] = o
-        frame[p] = f
-        curvature[p] = q[3:] / radius
+        m = gather(places[p, 0], places[p, 1], places[p, 2], radius, key, start, size, position, cells)
+        fitted = m >= 6 and _settle(origin[p], f, cells[:m], radius, position, count, q)
+        support[p] = m if fitted else 0
+        curvature[p] = q[3:] / radius if fitted else np.zeros(3)
 
 
 def smooth_surface(places: FloatArray, normals: FloatArray, cells: Cells) -> SmoothSurface:
-    """Fit a quadratic about every place, over a radius of one block width of `cells`.
+    """Fit a quadratic about every place, over a radius of `REACH` block widths of `cells`.
 
     Parameters
     ----------
@@ -171,7 +185,7 @@ def smooth_surface(places: FloatArray, normals: FloatArray, cells: Cells) -> Smo
     normals : ndarray of shape (m, 3)
         Approximate unit normals; their sign is kept.
     cells : Cells
-        Cells whose block width is the wanted support radius.
+        Cells whose block width is half of the wanted support radius; see `support_cells`.
 
     Returns
     -------
@@ -180,7 +194,12 @@ def smooth_surface(places: FloatArray, normals: FloatArray, cells: Cells) -> Smo
     m = len(places)
     out = np.empty((m, 3)), np.empty((m, 3, 3)), np.empty((m, 3)), np.zeros(m, np.int64)
     _fit_all(
-        np.ascontiguousarray(places), np.ascontiguousarray(normals), cells.block_size, cells.key, cells.start,
+        np.ascontiguousarray(places), np.ascontiguousarray(normals), REACH * cells.block_size, cells.key, cells.start,
         cells.block_size, cells.position, cells.count, *out,
     )  # fmt: skip
     return SmoothSurface(*out)
+
+
+def support_cells(position: FloatArray, radius: float) -> Cells:
+    """Make the cells on which `smooth_surface` fits over a radius [m]."""
+    return make_cells(position, radius / (REACH * BLOCK_WIDTH))

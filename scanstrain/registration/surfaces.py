@@ -74,26 +74,34 @@ class Surface:
 
 
 @numba.njit(cache=True, nogil=True)
+def _middle(key: int, size: float) -> tuple[float, float, float]:
+    """Middle of the voxel with a packed key."""
+    bias, mask = 1 << 19, (1 << 20) - 1
+    i, j, k = (key >> 40) - bias, ((key >> 20) & mask) - bias, (key & mask) - bias
+    return (i + 0.5) * size, (j + 0.5) * size, (k + 0.5) * size
+
+
+@numba.njit(cache=True, nogil=True)
 def _surroundings(
-    keys: IntArray, centre: FloatArray, normal: FloatArray, weight: FloatArray
+    keys: IntArray, centre: FloatArray, normal: FloatArray, weight: FloatArray, size: float
 ) -> tuple[FloatArray, FloatArray]:
-    """Points in a block and its 26 neighbours, and how far their mean lies from the block along the surface."""
+    """Points in a block and its 26 neighbours, and how far along the surface their mean lies from the voxel's middle."""
     total, offset = np.empty(len(keys)), np.empty(len(keys))
     row, layer = 1 << 20, 1 << 40
     for b in range(len(keys)):
         n, mx, my, mz = 0.0, 0.0, 0.0, 0.0
-        blocks = 0
         for i in range(-1, 2):
             for j in range(-1, 2):
                 for k in range(-1, 2):
                     o = find_key(keys, keys[b] + i * layer + j * row + k)
                     if o >= 0:
                         n += weight[o]
-                        blocks += 1
-                        mx += weight[o] * (centre[o, 0] - centre[b, 0])
-                        my += weight[o] * (centre[o, 1] - centre[b, 1])
-                        mz += weight[o] * (centre[o, 2] - centre[b, 2])
-        mx, my, mz = mx / n, my / n, mz / n
+                        mx += weight[o] * centre[o, 0]
+                        my += weight[o] * centre[o, 1]
+                        mz += weight[o] * centre[o, 2]
+        # Not from the block's own centre, which lies aside where the surface only cuts a corner of the voxel.
+        x, y, z = _middle(keys[b], size)
+        mx, my, mz = mx / n - x, my / n - y, mz / n - z
         along = mx * normal[b, 0] + my * normal[b, 1] + mz * normal[b, 2]
         total[b] = n
         offset[b] = np.sqrt(max(mx * mx + my * my + mz * mz - along * along, 0.0))
@@ -110,7 +118,7 @@ def make_surface(points: FloatArray, width: float, *, T_grid_epoch: FloatArray |
 
 def judged(cells: Cells, T_grid_epoch: FloatArray) -> Surface:
     """Add state and variances to cells."""
-    total, offset = _surroundings(cells.key, cells.centre, cells.normal, cells.weight)
+    total, offset = _surroundings(cells.key, cells.centre, cells.normal, cells.weight, cells.block_size)
     flat = (cells.weight >= MIN_COUNT) & (cells.planarity < MAX_PLANARITY) & (total >= 4 * MIN_COUNT)
     state = np.full(len(cells.key), UNUSABLE, np.uint8)
     inner = offset[flat] < ENDS_OFFSET * cells.block_size

@@ -153,7 +153,7 @@ def test_measured_covariance_of_known_noise_and_texture():
     points = wall.points(q) + (relief(q) + rng.normal(0, 5e-4, len(q)))[:, None] * normal
     grey = 1500 + texture(q) + rng.normal(0, 30.0, len(q))
     cells = make_cells(points, 0.008, intensity=grey)
-    smooth = smooth_surface(cells.centre, cells.normal, make_cells(cells.position, 0.15 / 4))
+    smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, 0.15))
     height, intensity = measure_covariance(cells, smooth, gate=0.01, region_width=0.2)
     assert np.sqrt(np.median(height.noise)) == pytest.approx(5e-4, rel=0.1)
     assert np.sqrt(np.median(intensity.noise)) == pytest.approx(30.0, rel=0.2)
@@ -169,7 +169,7 @@ def test_even_reflectance_shows_no_structure():
     q = jittered_grid(wall, 0.01, rng)
     points = wall.points(q) + rng.normal(0, 5e-4, (len(q), 1)) * wall.frames(q)[:, :, 2]
     cells = make_cells(points, 0.01, intensity=1500 + rng.normal(0, 30.0, len(q)))
-    smooth = smooth_surface(cells.centre, cells.normal, make_cells(cells.position, 0.15 / 4))
+    smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, 0.15))
     _, intensity = measure_covariance(cells, smooth, gate=0.01, region_width=0.2)
     assert (intensity.sill == 0).mean() > 0.98
     assert np.sqrt(np.median(intensity.noise)) == pytest.approx(30.0, rel=0.05)

