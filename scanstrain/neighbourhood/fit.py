@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import KEY_BITS, find_key, pack
-from scanstrain.neighbourhood.solve import LANES, inverse, solve_in_place
+from scanstrain.neighbourhood.solve import accumulate, inverse, solve_in_place
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -165,25 +165,6 @@ def observation_rows(
             along = g[0] * moved[0] + g[1] * moved[1] + g[2] * moved[2]
             data[1, r] = table[c, OWN_GREY] - gain * table[c, GREY] + along
             data[3, r], data[5, r] = table[c, VARIANCE + 1], table[c, VARIANCE + 3]
-
-
-@numba.njit(cache=True, nogil=True, fastmath=LANES)
-def accumulate(rows: FloatArray, rhs: FloatArray, w: FloatArray, N: FloatArray, b: FloatArray) -> None:
-    """Add the weighted normal equations of `rows` (n, m) to the lower triangle of `N` and to `b`."""
-    n, m = rows.shape
-    weighted = np.empty(m)
-    for i in range(n):
-        for r in range(m):
-            weighted[r] = w[r] * rows[i, r]
-        s = 0.0
-        for r in range(m):
-            s += weighted[r] * rhs[r]
-        b[i] += s
-        for j in range(i + 1):
-            s = 0.0
-            for r in range(m):
-                s += weighted[r] * rows[j, r]
-            N[i, j] += s
 
 
 @numba.njit(cache=True, nogil=True)

@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import BLOCK_WIDTH, KEY_BITS, Cells, find_key, make_cells, pack, tangents
-from scanstrain.neighbourhood.solve import solve_in_place
+from scanstrain.neighbourhood.solve import accumulate, solve_in_place
 
 FloatArray = NDArray[np.float64]
 
@@ -25,8 +25,12 @@ KEEP = 3.0
 """Cells farther from the surface than this many robust standard deviations are left out: a pipe, a cable."""
 _TRIMS = 6
 """Fits in which cells are dropped and taken back; with a third of clutter the choice settles in four."""
-_TURNS = 2
-"""Refits in the frame of the fit before; the second changes the slope by less than 1e-6."""
+CLEAN = 5.0
+"""A surface whose worst cell lies within so many robust standard deviations has no clutter to trim."""
+_TURNS = 3
+"""Most refits in the frame of the fit before."""
+LEVEL = 1e-5
+"""Slope left in its own frame at which a fit stands [1]: a hundredth of the noise of a slope."""
 REACH = 2
 """Support radius in block widths of the cells it is fitted on: some 200 cells."""
 
@@ -78,52 +82,52 @@ def gather(
 
 @numba.njit(cache=True, nogil=True)
 def _terms(
-    o: FloatArray, f: FloatArray, cells: NDArray[np.int64], radius: float, position: FloatArray, rows: FloatArray
-) -> None:
-    """Quadratic terms and height of every cell in the frame `f` at `o`, in units of `radius`."""
+    o: FloatArray, f: FloatArray, cells: NDArray[np.int64], radius: float, position: FloatArray, rows: FloatArray,
+    height: FloatArray,
+) -> None:  # fmt: skip
+    """Quadratic terms (6, m) and height (m,) of the cells in the frame `f` at `o`, in units of `radius`."""
     for r in range(len(cells)):
         c = cells[r]
         dx, dy, dz = position[c, 0] - o[0], position[c, 1] - o[1], position[c, 2] - o[2]
         x = (dx * f[0, 0] + dy * f[1, 0] + dz * f[2, 0]) / radius
         y = (dx * f[0, 1] + dy * f[1, 1] + dz * f[2, 1]) / radius
-        rows[r, 0], rows[r, 1], rows[r, 2] = 1.0, x, y
-        rows[r, 3], rows[r, 4], rows[r, 5] = 0.5 * x * x, x * y, 0.5 * y * y
-        rows[r, 6] = (dx * f[0, 2] + dy * f[1, 2] + dz * f[2, 2]) / radius
+        rows[0, r], rows[1, r], rows[2, r] = 1.0, x, y
+        rows[3, r], rows[4, r], rows[5, r] = 0.5 * x * x, x * y, 0.5 * y * y
+        height[r] = (dx * f[0, 2] + dy * f[1, 2] + dz * f[2, 2]) / radius
 
 
 @numba.njit(cache=True, nogil=True)
-def _quadratic(rows: FloatArray, weight: FloatArray, ridge: float, q: FloatArray) -> bool:
+def _quadratic(rows: FloatArray, height: FloatArray, weight: FloatArray, ridge: float, q: FloatArray) -> bool:
     """Weighted least squares of height on the six terms; curvatures carry a ridge."""
+    if np.count_nonzero(weight) < 6:
+        return False
     A = np.zeros((6, 6))
     q[:] = 0.0
-    used = 0
-    for r in range(len(rows)):
-        if weight[r] == 0.0:
-            continue
-        used += 1
-        for i in range(6):
-            v = weight[r] * rows[r, i]
-            q[i] += v * rows[r, 6]
-            for j in range(i + 1):
-                A[i, j] += v * rows[r, j]
-    total = A[0, 0]
+    accumulate(rows, height, weight, A, q)
     for i in range(6):
-        A[i, i] += 1e-9 * total + (ridge if i > 2 else 0.0)
-    return used >= 6 and solve_in_place(A, q, 6)
+        A[i, i] += 1e-9 * A[0, 0] + (ridge if i > 2 else 0.0)
+    return solve_in_place(A, q, 6)
 
 
 @numba.njit(cache=True, nogil=True)
-def _trim(rows: FloatArray, count: FloatArray, q: FloatArray, weight: FloatArray) -> None:
-    """Weigh by count the cells within `KEEP` robust standard deviations of the surface `q`, the rest not at all."""
-    off = np.empty(len(rows))
-    for r in range(len(rows)):
-        off[r] = rows[r, 6]
-        for k in range(6):
-            off[r] -= rows[r, k] * q[k]
-        off[r] = abs(off[r])
-    limit = KEEP * 1.4826 * np.median(off) + 1e-9
-    for r in range(len(rows)):
-        weight[r] = count[r] if off[r] <= limit else 0.0
+def _trim(rows: FloatArray, height: FloatArray, count: FloatArray, q: FloatArray, weight: FloatArray) -> bool:
+    """Weigh by count the cells within `KEEP` robust standard deviations of `q`, the rest not at all.
+
+    Returns whether the choice is settled: nothing changed, or the surface is clean and the first fit stands.
+    """
+    off = height.copy()
+    for k in range(6):
+        for r in range(len(off)):
+            off[r] -= q[k] * rows[k, r]
+    off = np.abs(off)
+    robust = 1.4826 * np.median(off) + 1e-9
+    changed, worst = 0, 0.0
+    for r in range(len(off)):
+        new = count[r] if off[r] <= KEEP * robust else 0.0
+        changed += new != weight[r]
+        weight[r] = new
+        worst = max(worst, off[r])
+    return bool(changed == 0 or worst < CLEAN * robust)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -132,15 +136,16 @@ def _settle(
     q: FloatArray,
 ) -> bool:  # fmt: skip
     """Fit the surface to the cells that belong to it, and move `o` and turn `f` onto it."""
-    rows = np.empty((len(cells), 7))
+    rows, height = np.empty((6, len(cells))), np.empty(len(cells))
     own = count[cells]
     weight = own.copy()
     ridge = (0.1 / (CURVATURE_PRIOR * radius)) ** 2
-    _terms(o, f, cells, radius, position, rows)
+    _terms(o, f, cells, radius, position, rows, height)
     for _ in range(_TRIMS):
-        if not _quadratic(rows, weight, ridge, q):
+        if not _quadratic(rows, height, weight, ridge, q):
             return False
-        _trim(rows, own, q, weight)
+        if _trim(rows, height, own, q, weight):
+            break
     for _ in range(_TURNS):
         for a in range(3):
             o[a] += q[0] * radius * f[a, 2]
@@ -148,9 +153,11 @@ def _settle(
         n /= np.sqrt(np.sum(n * n))
         f[0, 0], f[1, 0], f[2, 0], f[0, 1], f[1, 1], f[2, 1] = tangents(n[0], n[1], n[2])
         f[:, 2] = n
-        _terms(o, f, cells, radius, position, rows)
-        if not _quadratic(rows, weight, ridge, q):
+        _terms(o, f, cells, radius, position, rows, height)
+        if not _quadratic(rows, height, weight, ridge, q):
             return False
+        if q[1] * q[1] + q[2] * q[2] < LEVEL * LEVEL:
+            break
     for a in range(3):
         o[a] += q[0] * radius * f[a, 2]
     return True

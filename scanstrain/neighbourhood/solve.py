@@ -1,5 +1,5 @@
 # SPDX-License-Identifier: MIT
-"""Small symmetric positive systems for compiled code: Cholesky solution and inverse."""
+"""Small least-squares systems for compiled code: normal equations, Cholesky solution and inverse."""
 
 from __future__ import annotations
 
@@ -76,3 +76,22 @@ def inverse(A: FloatArray, n: int, out: FloatArray) -> bool:
         backward(L, e, n)
         out[:n, column] = e
     return True
+
+
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
+def accumulate(rows: FloatArray, rhs: FloatArray, w: FloatArray, N: FloatArray, b: FloatArray) -> None:
+    """Add the weighted normal equations of `rows` (n, m) to the lower triangle of `N` and to `b`."""
+    n, m = rows.shape
+    weighted = np.empty(m)
+    for i in range(n):
+        for r in range(m):
+            weighted[r] = w[r] * rows[i, r]
+        s = 0.0
+        for r in range(m):
+            s += weighted[r] * rhs[r]
+        b[i] += s
+        for j in range(i + 1):
+            s = 0.0
+            for r in range(m):
+                s += weighted[r] * rows[j, r]
+            N[i, j] += s

@@ -85,7 +85,7 @@ def _middle(key: int, size: float) -> tuple[float, float, float]:
 def _surroundings(
     keys: IntArray, centre: FloatArray, normal: FloatArray, weight: FloatArray, size: float
 ) -> tuple[FloatArray, FloatArray]:
-    """Points in a block and its 26 neighbours, and how far along the surface their mean lies from the voxel's middle."""
+    """Points in a block and its 26 neighbours; how far along the surface their mean lies from the voxel's middle."""
     total, offset = np.empty(len(keys)), np.empty(len(keys))
     row, layer = 1 << 20, 1 << 40
     for b in range(len(keys)):

@@ -99,7 +99,9 @@ def test_the_three_stages_are_published():
 
 def test_a_stranger_finds_the_stages_and_chains_them(arrays, annotated, tmp_path):
     assert "scanstrain" not in STRANGER
-    stored = {f"{epoch}_{k}": v for epoch, a in zip(("reference", "current"), arrays, strict=True) for k, v in a.items()}
+    stored = {
+        f"{epoch}_{k}": v for epoch, a in zip(("reference", "current"), arrays, strict=True) for k, v in a.items()
+    }
     np.savez(tmp_path / "scans.npz", **stored)
     call = [sys.executable, "-c", STRANGER, "scans.npz", "scanstrain.stages", json.dumps(OPTIONS), "points.npz"]
     done = subprocess.run(call, cwd=tmp_path, capture_output=True, text=True, timeout=300, check=False)

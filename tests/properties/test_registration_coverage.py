@@ -34,9 +34,9 @@ def standardised(make, normals, drift=0.0, **options):
 
 
 def waves(points, rng):
-    """Smooth random field of unit variance and a length of a few decimetres."""
-    k = rng.normal(0, 8.0, (3, 40))
-    return np.sqrt(2 / 40) * np.cos(points @ k + rng.uniform(0, 2 * np.pi, 40)).sum(axis=1)
+    """Smooth random field of unit variance and a correlation length of 0.07 m."""
+    k = rng.normal(0, 14.0, (3, 300))
+    return np.sqrt(2 / 300) * np.cos(points @ k + rng.uniform(0, 2 * np.pi, 300)).sum(axis=1)
 
 
 def across(points):
@@ -49,7 +49,7 @@ def across(points):
     ids=["wall", "lining", "correlated"],
 )
 def test_claimed_errors_cover_the_true_ones(make, normals, drift):
-    """Also where neighbours share a part of their error: independent blocks would then claim less than half of it."""
+    """Also where neighbours share a part of their error."""
     z = standardised(make, normals, drift, **({"spacing": 0.02} if drift else {}))
     # About three independent numbers a seed: the rms is known to 6 %, the share outside 1.96 to 2 %. Held motions blur
     # these small scenes a little, so the lower limit is wide.

@@ -35,7 +35,9 @@ def bare_wall():
         )
         for deformed in (False, True)
     )
-    field = fit_affine(reference, current, gauge_length=WALL_GAUGE, gauge_spacing=0.125, free_side=np.array([2.0, -5, 1]))
+    field = fit_affine(
+        reference, current, gauge_length=WALL_GAUGE, gauge_spacing=0.125, free_side=np.array([2.0, -5, 1])
+    )
     strain = compute_strain(field, structure="wall")
     return scene, field, strain, blend_to_points(strain, reference.points), reference, current
 

@@ -21,7 +21,18 @@ from scanstrain.synthetic import truth, truth_at
 
 MEASURES = runpy.run_path(str(Path(__file__).parent / "scene_measures.py"))
 rms, coverage, mean_and_error = MEASURES["rms"], MEASURES["coverage"], MEASURES["mean_and_error"]
-IN_PLANE = ("disp_x", "disp_y", "disp_z", "strain_1", "strain_2", "strain_xy", "strain_u", "shear_uv", "dilation", "spin")
+IN_PLANE = (
+    "disp_x",
+    "disp_y",
+    "disp_z",
+    "strain_1",
+    "strain_2",
+    "strain_xy",
+    "strain_u",
+    "shear_uv",
+    "dilation",
+    "spin",
+)
 PATCH = 0.6
 STRUCTURE, FLOOR = 6, 2
 UNMOVED_CORNERS = {"wall": (4.0, 8.0), "adit": (4.6, 8.0)}

@@ -57,9 +57,12 @@ class Patch:
         self.moved = rng.normal(0, 1e-3, (cells, 3))
         self.grey = rng.normal(0, 1.0, cells)
         self.grey_slope = (np.column_stack([rng.normal(0, 30.0, (cells, 2)), np.zeros(cells)])) @ self.frame.T
-        self.variance = np.stack(
-            [rng.uniform(1, 3, cells) * 1e-7, rng.uniform(1, 3, cells) * 1e-3] * 2, axis=1
-        ) * [1.0, 1.0, 1.3, 1.3]
+        self.variance = np.stack([rng.uniform(1, 3, cells) * 1e-7, rng.uniform(1, 3, cells) * 1e-3] * 2, axis=1) * [
+            1.0,
+            1.0,
+            1.3,
+            1.3,
+        ]
         self.count = rng.integers(1, 5, cells).astype(float)
         self.valid = rng.random(cells) > 0.05
         self.gain, self.offset, self.textured = 1.1, 0.2, textured

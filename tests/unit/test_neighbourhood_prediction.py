@@ -30,9 +30,7 @@ def test_smooth_surface_of_a_cylinder(radius):
     """Frame, foot point and curvature 1/R. The mean of a cell of width w lies w^2/(24 R) inside the arc."""
     rng = np.random.default_rng(1)
     arc, along = rng.uniform(-0.9, 0.9, 40_000), rng.uniform(-1, 1, 40_000)
-    points = np.stack(
-        [radius * np.sin(arc / radius), along, radius * (1 - np.cos(arc / radius))], axis=1
-    )
+    points = np.stack([radius * np.sin(arc / radius), along, radius * (1 - np.cos(arc / radius))], axis=1)
     cells = make_cells(points, 0.05)
     turn = np.linspace(-0.4, 0.4, 9) / radius
     places = np.stack([radius * np.sin(turn), np.linspace(-0.5, 0.5, 9), radius * (1 - np.cos(turn))], axis=1)
@@ -41,7 +39,9 @@ def test_smooth_surface_of_a_cylinder(radius):
     found = smooth_surface(places, crooked / np.linalg.norm(crooked, axis=1, keepdims=True), cells)
     normal = found.frame[:, :, 2]
     np.testing.assert_allclose(np.einsum("mi,mi->m", normal, exact), 1.0, atol=2e-6)
-    np.testing.assert_allclose(np.einsum("mji,mjk->mik", found.frame, found.frame), np.tile(np.eye(3), (9, 1, 1)), atol=1e-12)
+    np.testing.assert_allclose(
+        np.einsum("mji,mjk->mik", found.frame, found.frame), np.tile(np.eye(3), (9, 1, 1)), atol=1e-12
+    )
     k11, k12, k22 = found.curvature.T
     principal = np.linalg.eigvalsh(np.stack([k11, k12, k12, k22], axis=1).reshape(-1, 2, 2))
     np.testing.assert_allclose(principal[:, 1] if radius > 0 else principal[:, 0], 1 / radius, rtol=0.02)
@@ -115,6 +115,7 @@ def kriged():
 
 def ordinary_kriging(xy, share, values, places):
     """Prediction and its variance by the textbook system with a Lagrange multiplier (Matheron 1963)."""
+
     def covariance(a, b):
         return SILL * FAMILIES["matern52"](np.linalg.norm(a[:, None] - b, axis=2) / LENGTH)
 

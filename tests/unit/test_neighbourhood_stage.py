@@ -57,9 +57,7 @@ def with_points(epoch, points):
 
 
 def all_values(field):
-    return np.concatenate(
-        [field.displacement, field.gradient.reshape(len(field), 6), field.hessian], axis=1
-    )
+    return np.concatenate([field.displacement, field.gradient.reshape(len(field), 6), field.hessian], axis=1)
 
 
 def assert_no_number(field, where):
@@ -267,7 +265,10 @@ print(digest.hexdigest())
 
 
 def test_any_number_of_threads_gives_the_same_bytes(pair, tmp_path):
-    np.savez(tmp_path / "pair.npz", **{f"{k}{i}": v for i, e in enumerate(pair) for k, v in (("p", e.points), ("i", e.intensity))})
+    np.savez(
+        tmp_path / "pair.npz",
+        **{f"{k}{i}": v for i, e in enumerate(pair) for k, v in (("p", e.points), ("i", e.intensity))},
+    )
     digests = []
     for threads in ("1", "2"):
         done = subprocess.run(

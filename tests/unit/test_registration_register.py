@@ -1,6 +1,7 @@
 # SPDX-License-Identifier: MIT
 """The registration stage as callers see it: exactness, accuracy, weak motions, moved ground, starts, refusals."""
 
+import re
 import runpy
 import sys
 from dataclasses import replace
@@ -120,7 +121,8 @@ def test_half_moved_is_called_ambiguous_and_control_settles_it(share):
     edge = np.quantile(b[:, 0], share)
     current = epoch(b + np.where((b[:, 0] < edge)[:, None], [0, 0.02, 0], 0.0))
     result = register(epoch(a), current)
-    assert any("ambiguous" in sentence and "20." in sentence for sentence in result.warnings)
+    said = next(sentence for sentence in result.warnings if "ambiguous" in sentence)
+    assert float(re.search(r"up to ([\d.]+) mm", said)[1]) == pytest.approx(20, abs=0.5)
     control = a[:, 0] > edge + 0.1
     result = register(epoch(a), current, stable=control)
     error = (apply(result.T_ref_cur, b) - b)[b[:, 0] > edge, 1]
