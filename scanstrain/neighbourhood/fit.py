@@ -265,12 +265,13 @@ def fit_gauges(
         Places, frames and surface curvatures of the gauges.
     radius, sheet_gate : float
         Of the patch, and largest distance of a member from the smooth surface [m].
-    weak, hold : float
-        Standard deviation [m] of the prior that keeps the equations solvable, and of the one that holds tangential
-        unknowns of the linearisation at what they were.
+    weak : float
+        Standard deviation [m] of the prior that keeps the equations solvable.
     nuisance : ndarray of shape (12,)
         Standard deviations [m] of what a structure can do tangentially: bounds the damage that unobservable
         tangential unknowns do to the normal ones. Far wider than any unknown that counts as observed.
+    hold : float
+        Standard deviation [m] of the prior that holds tangential unknowns of the linearisation at what they were.
     min_cells, capacity : int
         Fewest and most cells of a gauge.
     textured : bool
@@ -279,10 +280,8 @@ def fit_gauges(
         Hash of the table's rows by voxels of width `radius`.
     table : ndarray of shape (c, 24)
         Observations, see the column constants.
-    gains : ndarray of shape (g,)
-        Present gain of intensity, updated.
-    held : ndarray of shape (g, 12)
-        Present motion at which the rows were linearised; becomes the next one.
+    gains, held : ndarray of shape (g,), (g, 12)
+        Present gain of intensity, and motion at which the rows were linearised; both become the next ones.
     values, covariance, data_sd : ndarray of shape (g, 12), (g, 12, 12), (g, 12)
         Result [m], its covariance [m^2], and standard errors from the data alone, which decide observability [m].
     info : ndarray of shape (g, 6)

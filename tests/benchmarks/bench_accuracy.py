@@ -40,11 +40,16 @@ def one(scene, options, seed, spacing, gauge):
     """Errors of every gauge and root mean square bounds by unknown."""
     reference, current = (
         sample_epoch(
-            scene, deformed=deformed, spacing=spacing, noise=NOISE, intensity_noise=GREY_NOISE, seed=2 * seed + deformed,
+            scene,
+            deformed=deformed,
+            spacing=spacing,
+            noise=NOISE,
+            intensity_noise=GREY_NOISE,
+            seed=2 * seed + deformed,
             **options,
         )
         for deformed in (False, True)
-    )  # fmt: skip
+    )
     axis = np.array([1.0, 0.0, 0.0]) if isinstance(scene.surface, Lining) else None
     start = time.perf_counter()
     field = fit_affine(reference, current, gauge_length=gauge, gauge_spacing=gauge / 4, axis=axis)

@@ -24,9 +24,8 @@ def table(head, rows):
     cells = [[str(cell) for cell in row] for row in (head, *rows)]
     widths = [max(len(row[k]) for row in cells) for k in range(len(head))]
     for number, row in enumerate(cells):
-        print(
-            "  ".join(cell.rjust(width) if k else cell.ljust(width) for k, (cell, width) in enumerate(zip(row, widths)))
-        )
+        rest = [cell.rjust(width) for cell, width in zip(row[1:], widths[1:], strict=True)]
+        print("  ".join([row[0].ljust(widths[0]), *rest]))
         if number == 0:
             print("  ".join("-" * width for width in widths))
     sys.stdout.flush()

@@ -40,7 +40,8 @@ scanstrain.write_result(result, Path(folder) / "out")
 done = time.perf_counter()
 peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
 print(json.dumps({**result.timing, "compare": compared - begin, "write": done - compared, "total": done - begin,
-                  "peak": peak, "cpu": time.process_time() - cpu, "gauges": len(result.strain), "fine": int((result.strain.status == 0).sum())}))
+                  "peak": peak, "cpu": time.process_time() - cpu,
+                  "gauges": len(result.strain), "fine": int((result.strain.status == 0).sum())}))
 """
 
 LASPY = """

@@ -121,8 +121,7 @@ def result(room, tmp_path_factory):
     )
 
 
-def test_registration_takes_the_motion_back(room, result):
-    points, _ = room
+def test_registration_takes_the_motion_back(result):
     corners = np.array([[x, y, z] for x, y in PLAN for z in (0.0, HEIGHT)])
     T = result.registration.file_matrix()
     back = carried(corners) @ T[:3, :3].T + T[:3, 3]

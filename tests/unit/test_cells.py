@@ -149,4 +149,4 @@ def test_cells_of_an_epoch_carry_its_intensity():
 
 def test_survey_coordinates_are_refused_as_local_ones():
     with pytest.raises(ValueError, match="too wide"):
-        make_cells(plane(500) + [482310.0, 5391270.0, 0.0], 0.01)
+        make_cells(plane(500) + np.array([482310.0, 5391270.0, 0.0]), 0.01)

@@ -7,7 +7,9 @@ import numpy as np
 import pytest
 
 from scanstrain.cells import group, tangents, voxel_keys
-from scanstrain.neighbourhood.fit import TUKEY, TUKEY_INFLATE, TUKEY_SHRINK, _accumulate, _inverse, fit_gauges
+from scanstrain.neighbourhood import fit
+from scanstrain.neighbourhood.fit import ROUNDS, TUKEY, TUKEY_INFLATE, TUKEY_SHRINK, fit_gauges
+from scanstrain.neighbourhood.solve import accumulate, inverse
 
 RADIUS = 0.3
 LOOSE = 1e9
@@ -19,7 +21,7 @@ def test_normal_equations_are_those_of_numpy():
     rng = np.random.default_rng(0)
     rows, rhs, w = rng.standard_normal((12, 301)), rng.standard_normal(301), rng.random(301)
     N, b = np.zeros((14, 14)), np.zeros(14)
-    _accumulate(rows, rhs, w, N, b)
+    accumulate(rows, rhs, w, N, b)
     np.testing.assert_allclose(np.tril(N)[:12, :12], np.tril((rows * w) @ rows.T), rtol=1e-11, atol=1e-11)
     np.testing.assert_allclose(b[:12], (rows * w) @ rhs, rtol=1e-11, atol=1e-11)
     assert not b[12:].any()
@@ -28,9 +30,9 @@ def test_normal_equations_are_those_of_numpy():
 def test_inverse_of_a_lower_triangle_is_the_inverse():
     half = np.random.default_rng(1).standard_normal((20, 8))
     A, out = half.T @ half, np.empty((8, 8))
-    assert _inverse(np.tril(A), 8, out)
+    assert inverse(np.tril(A), 8, out)
     np.testing.assert_allclose(out, np.linalg.inv(A), rtol=1e-9, atol=1e-12)
-    assert not _inverse(-np.eye(4), 4, np.empty((4, 4)))
+    assert not inverse(-np.eye(4), 4, np.empty((4, 4)))
 
 
 def test_constants_of_the_weight_are_its_gaussian_integrals():
@@ -90,21 +92,37 @@ class Patch:
         self.misfit = np.einsum("ci,ci->c", self.slope, short)
         self.own_grey = self.gain * (self.grey - np.einsum("ci,ci->c", self.grey_slope, short)) + self.offset
 
-    def run(self, *, rounds=3, weak_prior=LOOSE, nuisance=LOOSE, hold=LOOSE, start=None, min_points=30):
+    def table(self):
+        """The observations in the columns that the fit reads."""
+        table = np.zeros((len(self.position), fit.COLUMNS))
+        for column, values in (
+            (fit.POSITION, self.position),
+            (fit.NORMAL, np.broadcast_to(self.frame[:, 2], self.position.shape)),
+            (fit.COUNT, self.count),
+            (fit.VALID, self.valid),
+            (fit.MOVED, self.moved),
+            (fit.MISFIT, self.misfit),
+            (fit.SLOPE, self.slope),
+            (fit.GREY, self.grey),
+            (fit.GREY_SLOPE, self.grey_slope),
+            (fit.VARIANCE, self.variance),
+            (fit.OWN_GREY, self.own_grey),
+        ):
+            columns = np.reshape(values, (len(table), -1))
+            table[:, column : column + columns.shape[1]] = columns
+        return table
+
+    def run(self, *, weak_prior=LOOSE, nuisance=LOOSE, hold=LOOSE, start=None, min_cells=30):
         order, key, begin = group(voxel_keys(self.position, RADIUS))
         g = len(self.centre)
         frame = np.broadcast_to(self.frame, (g, 3, 3)).copy()
-        start = np.zeros((g, 12)) if start is None else start
-        gains = np.full(g, self.gain)
-        values, held, covariance = np.empty((g, 12)), np.empty((g, 12)), np.zeros((g, 12, 12))
+        held = np.zeros((g, 12)) if start is None else start.copy()
+        values, covariance = np.empty((g, 12)), np.zeros((g, 12, 12))
         data_sd, info = np.full((g, 12), np.inf), np.zeros((g, 6))
-        normal = np.broadcast_to(self.frame[:, 2], self.position.shape)[order]
         fit_gauges(
-            self.centre, frame, np.zeros((g, 3)), start, RADIUS, 0.1, weak_prior, np.full(12, float(nuisance)), hold,
-            rounds, min_points, 5000, TUKEY_SHRINK, TUKEY_INFLATE, key, begin, RADIUS, self.position[order],
-            np.ascontiguousarray(normal), self.count[order], self.valid[order], self.moved[order], self.misfit[order],
-            self.slope[order], self.grey[order], self.grey_slope[order], self.variance[order],
-            self.own_grey[order] if self.textured else np.empty(0), gains, values, held, covariance, data_sd, info,
+            self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(nuisance)), hold, min_cells,
+            5000, self.textured, key, begin, self.table()[order], np.full(g, self.gain), held, values, covariance,
+            data_sd, info,
         )  # fmt: skip
         return {"values": values, "held": held, "covariance": covariance, "data_sd": data_sd, "info": info}
 
@@ -147,7 +165,7 @@ def test_points_counted_are_those_of_matched_cells_in_the_disc():
 
 
 def test_too_few_cells_give_no_numbers():
-    result = Patch().run(min_points=2000)
+    result = Patch().run(min_cells=2000)
     assert np.isnan(result["values"]).all()
     assert np.isinf(result["data_sd"]).all()
 
@@ -164,7 +182,7 @@ def noisy(seed=3, **options):
     return patch
 
 
-def twin(patch, g, *, rounds, weak_prior, nuisance, hold, start):
+def twin(patch, g, *, weak_prior, nuisance, hold, start):
     """The fit of one gauge in NumPy, from its description: rows, weights, variance factors, priors, covariance."""
     local = (patch.position - patch.centre[g]) @ patch.frame
     near = (np.hypot(local[:, 0], local[:, 1]) <= RADIUS) & patch.valid
@@ -173,10 +191,11 @@ def twin(patch, g, *, rounds, weak_prior, nuisance, hold, start):
 
     def derivatives(direction, normal_part):
         s = direction @ patch.frame
-        tangential = [s[:, 0], s[:, 1], s[:, 2], s[:, 0] * x[:, 0], s[:, 0] * x[:, 1], s[:, 1] * x[:, 0], s[:, 1] * x[:, 1],
-                      s[:, 2] * x[:, 0] - s[:, 0] * x[:, 2], s[:, 2] * x[:, 1] - s[:, 1] * x[:, 2]]  # fmt: skip
+        affine = [s[:, 0], s[:, 1], s[:, 2]]
+        affine += [s[:, 0] * x[:, 0], s[:, 0] * x[:, 1], s[:, 1] * x[:, 0], s[:, 1] * x[:, 1]]
+        affine += [s[:, 2] * x[:, 0] - s[:, 0] * x[:, 2], s[:, 2] * x[:, 1] - s[:, 1] * x[:, 2]]
         bend = [s[:, 2] * x[:, 0] ** 2 / 2, s[:, 2] * x[:, 0] * x[:, 1], s[:, 2] * x[:, 1] ** 2 / 2]
-        return np.stack(tangential + (bend if normal_part else [zero] * 3), axis=1)
+        return np.stack(affine + (bend if normal_part else [zero] * 3), axis=1)
 
     slope, moved = patch.slope[near], patch.moved[near]
     A = np.column_stack([derivatives(slope, True), zero, zero])
@@ -189,7 +208,7 @@ def twin(patch, g, *, rounds, weak_prior, nuisance, hold, start):
         groups.append((B, b, patch.variance[near, 1], patch.variance[near, 3]))
     n = 14 if patch.textured else 12
     solution, scales = np.r_[start, 0.0, 0.0], [1.0] * len(groups)
-    for turn in range(rounds):
+    for turn in range(ROUNDS):
         N, y = np.zeros((14, 14)), np.zeros(14)
         for k, (M, m, variance, spread) in enumerate(groups):
             r = (m - M @ solution) / np.sqrt(spread)
@@ -213,7 +232,7 @@ def twin(patch, g, *, rounds, weak_prior, nuisance, hold, start):
 def test_the_fit_is_its_numpy_twin(textured):
     patch = noisy(textured=textured)
     start = np.random.default_rng(9).normal(0, 2e-4, (3, 12))
-    options = {"rounds": 3, "weak_prior": 10.0, "nuisance": 0.02, "hold": 0.005}
+    options = {"weak_prior": 10.0, "nuisance": 0.02, "hold": 0.005}
     result = patch.run(start=start, **options)
     for g in range(3):
         held, values, covariance, data_sd, scales = twin(patch, g, start=start[g], **options)

@@ -9,7 +9,8 @@ import pytest
 from scanstrain.cells import make_cells
 from scanstrain.neighbourhood.covariance import FAMILIES, Covariance, fit_correlation, measure_covariance
 from scanstrain.neighbourhood.predict import krige, lookup
-from scanstrain.neighbourhood.smooth import smooth_surface, solve_in_place
+from scanstrain.neighbourhood.smooth import smooth_surface, support_cells
+from scanstrain.neighbourhood.solve import solve_in_place
 from scanstrain.synthetic import RandomField, Wall, jittered_grid
 
 LENGTH, SILL, NOISE = 0.03, 4.0, 0.5
