@@ -80,9 +80,9 @@ def test_bare_wall_tells_the_user_why(bare_wall):
 @pytest.fixture(scope="module")
 def bare_ring():
     """A lining without texture that becomes an oval at constant length."""
-    scene = Scene(Lining(R, 1.6, arc=(-np.pi / 2, 1.5 * np.pi)), Ovalisation(U0))
+    scene = Scene(Lining(R, 2.4, arc=(-np.pi / 2, 1.5 * np.pi)), Ovalisation(U0))
     reference, current = (
-        sample_epoch(scene, deformed=deformed, spacing=0.018, noise=2e-4, intensity_noise=30.0, seed=50 + deformed)
+        sample_epoch(scene, deformed=deformed, spacing=0.018, noise=1e-4, intensity_noise=30.0, seed=50 + deformed)
         for deformed in (False, True)
     )
     axis = np.array([1.0, 0.0, 0.0])

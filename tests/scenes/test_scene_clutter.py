@@ -89,13 +89,13 @@ def test_strain_is_not_biased(seen, case):
 
 
 def test_nothing_is_said_in_the_middle_of_a_shadow(seen):
-    """Points of the reference more than half a gauge from anything that the current epoch shows."""
+    """Gauges end near the rim, values half a gauge behind them: the rest of the shadow is empty."""
     field, _, reference = seen["shadows"]
     points = blend_to_points(compute_strain(field), reference.points)
     q, _ = seen["scene"].surface.project(reference.points)
     u, v, radius = HOLES["current"][0]
-    deep = np.hypot(q[:, 0] - u, q[:, 1] - v) < radius - field.gauge_length / 2 - 0.05
-    assert deep.sum() > 500
+    deep = np.hypot(q[:, 0] - u, q[:, 1] - v) < radius - 0.4
+    assert deep.sum() > 200
     for name in ("disp_n", "disp_x", "strain_1", "tilt", "curv_1", "spin"):
         assert np.isnan(points[name][deep]).all(), name
     assert (points["status"][deep] > 0).all()

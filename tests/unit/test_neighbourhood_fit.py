@@ -120,9 +120,9 @@ class Patch:
         values, covariance = np.empty((g, 12)), np.zeros((g, 12, 12))
         data_sd, info = np.full((g, 12), np.inf), np.zeros((g, 6))
         fit_gauges(
-            self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(nuisance)), hold, min_cells,
-            5000, self.textured, key, begin, self.table()[order], np.full(g, self.gain), held, values, covariance,
-            data_sd, info,
+            self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(nuisance)), hold,
+            min_cells, 5000, self.textured, key, begin, self.table()[order], np.full(g, self.gain), held, values,
+            covariance, data_sd, info,
         )  # fmt: skip
         return {"values": values, "held": held, "covariance": covariance, "data_sd": data_sd, "info": info}
 

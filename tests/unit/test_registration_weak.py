@@ -131,3 +131,13 @@ def test_complement_and_floor():
     for floor in (A, B):
         assert np.linalg.eigvalsh(raised - floor)[0] > -1e-9 * np.trace(A + B)
     np.testing.assert_allclose(at_least(A, 1e-9 * np.eye(6) * np.linalg.eigvalsh(A)[0]), A, rtol=1e-9)
+
+
+@pytest.mark.parametrize(("agreed", "weak"), [(0.9, 0), (0.3, 1)])
+def test_what_the_epochs_do_not_agree_on_is_weak_however_sharp(agreed, weak):
+    """A standard error of 0.1 mm from normals that are mostly noise."""
+    full = np.eye(6) * 1e8
+    shared = full * np.r_[1, 1, 1, 1, 1, agreed]
+    metric = Metric(np.zeros(3), 1.0)
+    _, held = split(full, shared, variance=1.0, places=cylinder()[0] / 20, metric=metric, budget=0.002)
+    assert held.shape == (6, weak)
