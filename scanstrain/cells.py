@@ -345,12 +345,15 @@ def median_spacing(points: FloatArray, *, sample: int = 5000) -> float:
     """Return the median point spacing [m]: the side of the square that holds one point.
 
     From the distance r to the k-th distinct neighbour, k / (pi r^2) being the local density (k = 8). Exact
-    duplicates, frequent in merged scans, count once.
+    duplicates, frequent in merged scans, count once. The sample is drawn by a hash of the coordinates, so the
+    order of points does not matter.
     """
     from scipy.spatial import cKDTree
 
     wanted = 8
-    drawn = points[:: max(1, len(points) // sample)]
+    drawn = points[_hashes(points) % np.uint64(max(1, len(points) // sample)) == 0]
+    if len(drawn) == 0:
+        drawn = points
     distance, _ = cKDTree(points).query(drawn, k=min(4 * wanted, len(points)), workers=-1)
     fresh = np.diff(distance, axis=1, prepend=0.0) > 0
     rank = np.cumsum(fresh, axis=1)
@@ -359,3 +362,13 @@ def median_spacing(points: FloatArray, *, sample: int = 5000) -> float:
         return 0.0
     radius = distance[reached][np.arange(reached.sum()), (rank[reached] == wanted).argmax(axis=1)]
     return float(np.median(radius) * np.sqrt(np.pi / wanted))
+
+
+def _hashes(points: FloatArray) -> NDArray[np.uint64]:
+    """Mix the bits of every point's coordinates (multiplicative hashing, Knuth)."""
+    bits = np.ascontiguousarray(points, np.float64).view(np.uint64)
+    mixed = np.zeros(len(points), np.uint64)
+    for column in range(3):
+        mixed = (mixed ^ bits[:, column]) * np.uint64(0x9E3779B97F4A7C15)
+        mixed ^= mixed >> np.uint64(29)
+    return mixed

@@ -34,6 +34,9 @@ REQUIRED_TILT_SD = 5e-3
 """Metric default [rad] for tilt and spin."""
 REQUIRED_CURVATURE_SD = 0.1
 """Metric default [1/m] for changes of curvature."""
+SETTLED, SETTLED_SHARE = 0.1, 0.98
+"""The fit stands when the last comparison moved that share of gauges by less than that part of a cell: texture is
+straight over so short a way, so another comparison would change nothing."""
 MIN_COVER = 0.35
 """Share of the patch that must be covered: less is a sliver at an edge or hole."""
 SHARPEST = 0.5
@@ -130,7 +133,11 @@ def fit_affine(
     finest = make_surface(reference.points, grey_reference, width, support, max(spacing, 4 * width))
     places, normals = place_gauges(finest.cells, spacing)
     gauges, warnings = frames_at(places, normals, support_cells(finest.cells.position, radius), free_side, axis)
-    state = Estimate(np.zeros((len(places), 12)), np.ones(len(places)))
+    need = Requirements(
+        displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
+        strain=required_strain_sd or REQUIRED_STRAIN_SD,
+    )
+    state = Estimate(np.zeros((len(places), 12)), np.ones(len(places)), need.limits() / _units(radius))
 
     change = np.zeros((len(places), 3))
     widths = _pyramid(width, gauge_length)
@@ -151,13 +158,10 @@ def fit_affine(
             before = state.held[:, :3].copy()
             level.fit(state, gate=gate, min_points=min_points)
             change = np.abs(state.held[:, :3] - before)
-            if last and turn and np.nanquantile(change.max(axis=1), 0.99) < 0.05 * step:
+            seen = state.data_sd[:, :3] <= state.required[:3]
+            if last and turn and np.mean(np.where(seen, change, 0.0).max(axis=1) < SETTLED * step) > SETTLED_SHARE:
                 break
     say("fit done", 1.0)
-    need = Requirements(
-        displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
-        strain=required_strain_sd or REQUIRED_STRAIN_SD,
-    )
     status = _status(state, gauges, radius, change.max(axis=1) > 0.5 * width, min_points)
     if not (status == Status.FINE).any():
         counts = ", ".join(f"{Status(s).name.lower()} {int((status == s).sum())}" for s in np.unique(status))
@@ -174,6 +178,11 @@ def fit_affine(
 
 def _silent(_phrase: str, _share: float) -> None:
     """Report progress to nobody."""
+
+
+def _units(radius: float) -> FloatArray:
+    """Factors from the unknowns of the fit, metres at the rim, to those of the field: m, 1 and 1/m."""
+    return np.array([1.0] * 3 + [1 / radius] * 6 + [1 / radius**2] * 3)
 
 
 def _resolution(reference: Epoch, current: Epoch, gauge_length: float, resolution: float | None) -> float:
@@ -257,7 +266,7 @@ def _field(
 ) -> AffineField:
     """Scale the unknowns back to their units and blank what is not observable."""
     radius = gauge_length / 2
-    scale = np.array([1.0] * 3 + [1 / radius] * 6 + [1 / radius**2] * 3)
+    scale = _units(radius)
     values = state.values * scale
     covariance = state.covariance * scale[:, None] * scale[None, :]
     sd = state.data_sd * scale

@@ -36,6 +36,8 @@ SAMPLED = 20_000
 """About so many blocks give their pairs: enough for the local variograms of any scan that fits in memory."""
 FLOOR = 1e-6
 """Least noise variance over sill: keeps the prediction well conditioned where a scan has no noise at all."""
+_LEAST_GAMMA = 1e-6
+"""Semivariance, over the scan's own variance, below which a bin gains no more weight."""
 LEAST_NOISE = 0.3
 """Least local noise variance over the scan's median: what falls below is an error of a local variogram."""
 
@@ -218,21 +220,30 @@ def _local(
     pooled: FloatArray, column: int, family: str, length: float, structured: NDArray[np.bool_]
 ) -> tuple[FloatArray, FloatArray]:
     """Noise and sill of every region by weighted least squares; sill 0 where no structure shows."""
-    pairs = np.maximum(pooled[:, :, 0], 1e-30)
-    share, gamma, lag = pooled[:, :, 1] / pairs, pooled[:, :, column] / pairs, pooled[:, :, 4] / pairs
+    known = pooled[:, :, 0] > 0
+    pairs = np.where(known, pooled[:, :, 0], 1.0)
+    share, lag = pooled[:, :, 1] / pairs, pooled[:, :, 4] / pairs
+    some = known.any(axis=1)
+    if not some.any():
+        return np.zeros(len(pooled)), np.zeros(len(pooled))
+    # In units of the scan's own variance and lag, no weight can overflow.
+    unit = max(float(np.median(pooled[some, :, column].sum(axis=1) / pooled[some, :, 1].sum(axis=1))), 1e-30)
+    gamma = pooled[:, :, column] / pairs / unit
     rise = 1.0 - FAMILIES[family](lag / length)
-    flat = (pooled[:, :, 0] * share * gamma).sum(axis=1) / np.maximum((pooled[:, :, 0] * share**2).sum(axis=1), 1e-30)
-    weight = pooled[:, :, 0] / np.maximum(gamma, 1e-9 * flat[:, None] + 1e-100) ** 2 / np.maximum(lag, 1e-12)
+    weight = np.where(known, pairs / np.maximum(gamma, _LEAST_GAMMA) ** 2 / np.maximum(lag / lag.max(), 1e-3), 0.0)
+    square = np.where(some, (pooled[:, :, 0] * share**2).sum(axis=1), 1.0)
+    flat = (pooled[:, :, 0] * share * gamma).sum(axis=1) / square
     ss, sr, rr = (weight * share**2).sum(1), (weight * share * rise).sum(1), (weight * rise**2).sum(1)
     sg, rg = (weight * share * gamma).sum(1), (weight * rise * gamma).sum(1)
-    determinant = np.where(ss * rr - sr**2 > 1e-12 * ss * rr, ss * rr - sr**2, np.inf)
-    noise = np.where(structured, (sg * rr - rg * sr) / determinant, flat)
-    believed = noise[(noise > 0) & (pooled[:, :, 0].sum(axis=1) > 0)]
+    determinant = ss * rr - sr**2
+    use = structured & (determinant > 1e-12 * ss * rr)
+    noise = np.where(use, (sg * rr - rg * sr) / np.where(use, determinant, 1.0), flat)
+    believed = noise[(noise > 0) & some]
     least = LEAST_NOISE * float(np.median(believed)) if len(believed) else 0.0
     noise = np.maximum(noise, least)
-    sill = np.where(structured, np.maximum((rg - noise * sr) / np.maximum(rr, 1e-300), 0.0), 0.0)
+    sill = np.where(use, np.maximum((rg - noise * sr) / np.where(use, rr, 1.0), 0.0), 0.0)
     noise = np.where(sill > 0, np.maximum(noise, FLOOR * sill), np.maximum(flat, least))
-    return noise, sill
+    return noise * unit, sill * unit
 
 
 def measure_covariance(

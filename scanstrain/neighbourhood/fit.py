@@ -30,6 +30,8 @@ TUKEY = 6.0
 """Cut-off of the redescending weight in standard deviations: 98 % efficient, blind to gross errors."""
 ROUNDS = 2
 """Solutions a comparison, each with weights from the residuals of the one before."""
+SAME_SHEET = 0.8
+"""Cosine between a cell's normal and the gauge's above which the cell is on the gauge's sheet (37 degrees)."""
 COVER_BINS = 10
 """Squares across a gauge in which its cover is counted."""
 _DISC_BINS = 80.0
@@ -97,7 +99,7 @@ def members_of(
                 continue
             z -= 0.5 * k[0] * x * x + k[1] * x * y + 0.5 * k[2] * y * y
             facing = _local(table[c, NORMAL : NORMAL + 3], f)[2]
-            if abs(z) < gate and abs(facing) > 0.5 and m < len(out):
+            if abs(z) < gate and abs(facing) > SAME_SHEET and m < len(out):
                 out[m] = c
                 m += 1
     return m
@@ -170,11 +172,11 @@ def observation_rows(
 @numba.njit(cache=True, nogil=True)
 def reweight(
     rows: FloatArray, rhs: FloatArray, spread: FloatArray, variance: FloatArray, x: FloatArray, scale: float,
-    start: bool, w: FloatArray,
+    start: bool, spent: int, w: FloatArray,
 ) -> float:  # fmt: skip
     """Weigh rows by their residuals at `x`; returns the variance factor (observed over expected spread).
 
-    At the start the scale is not known and comes from the median residual.
+    At the start the scale is not known and comes from the median residual. `spent` unknowns were fitted to the rows.
     """
     n, m = rows.shape
     e = rhs.copy()
@@ -193,7 +195,7 @@ def reweight(
         w[r] = k / variance[r]
         total += k
         weighted += k * e[r] * e[r]
-    return max(weighted / max(total, 1.0) / TUKEY_SHRINK, 1e-12)
+    return max(weighted / max(total - spent, 1.0) / TUKEY_SHRINK, 1e-12)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -206,10 +208,10 @@ def _normal_equations(
     w = np.empty(m)
     N[:, :] = 0.0
     b[:] = 0.0
-    scales[0] = reweight(surface, data[0], data[4], data[2], x[:MOTION], scales[0], start, w)
+    scales[0] = reweight(surface, data[0], data[4], data[2], x[:MOTION], scales[0], start, 6, w)
     accumulate(surface, data[0], w / scales[0], N, b)
     if grey.shape[1]:
-        scales[1] = reweight(grey, data[1], data[5], data[3], x, scales[1], start, w)
+        scales[1] = reweight(grey, data[1], data[5], data[3], x, scales[1], start, 8, w)
         accumulate(grey, data[1], w / scales[1], N, b)
     for i in range(MOTION):
         N[i, i] += 1.0 / weak**2
@@ -230,16 +232,17 @@ def _held_solution(N: FloatArray, b: FloatArray, n: int, start_values: FloatArra
 
 @numba.njit(cache=True, nogil=True)
 def _final_solution(
-    N: FloatArray, b: FloatArray, n: int, nuisance: FloatArray, values: FloatArray, covariance: FloatArray,
-    data_sd: FloatArray,
+    N: FloatArray, b: FloatArray, n: int, required: FloatArray, nuisance: FloatArray, values: FloatArray,
+    covariance: FloatArray, data_sd: FloatArray,
 ) -> None:  # fmt: skip
-    """Standard errors from the data alone, then the solution with bounded tangential unknowns."""
+    """Standard errors from the data alone, then the solution with bounds on what they do not determine."""
     Q = np.zeros((UNKNOWNS, UNKNOWNS))
     if not inverse(N, n, Q):
         return
     for i in range(MOTION):
         data_sd[i] = np.sqrt(Q[i, i] * TUKEY_INFLATE)
-        N[i, i] += 1.0 / nuisance[i] ** 2
+        if not data_sd[i] <= required[i]:
+            N[i, i] += 1.0 / nuisance[i] ** 2
     if not inverse(N, n, Q):
         return
     for i in range(MOTION):
@@ -253,9 +256,9 @@ def _final_solution(
 @numba.njit(cache=True, nogil=True, parallel=True)
 def fit_gauges(
     origin: FloatArray, frame: FloatArray, shape: FloatArray, radius: float, sheet_gate: float, weak: float,
-    nuisance: FloatArray, hold: float, min_cells: int, capacity: int, textured: bool, key: IntArray, start: IntArray,
-    table: FloatArray, gains: FloatArray, held: FloatArray, values: FloatArray, covariance: FloatArray,
-    data_sd: FloatArray, info: FloatArray,
+    required: FloatArray, nuisance: FloatArray, hold: float, min_cells: int, capacity: int, textured: bool,
+    key: IntArray, start: IntArray, table: FloatArray, gains: FloatArray, held: FloatArray, values: FloatArray,
+    covariance: FloatArray, data_sd: FloatArray, info: FloatArray,
 ) -> None:  # fmt: skip
     """Fit every gauge.
 
@@ -267,9 +270,11 @@ def fit_gauges(
         Of the patch, and largest distance of a member from the smooth surface [m].
     weak : float
         Standard deviation [m] of the prior that keeps the equations solvable.
+    required : ndarray of shape (12,)
+        Largest standard errors from the data alone at which an unknown counts as observed [m].
     nuisance : ndarray of shape (12,)
-        Standard deviations [m] of what a structure can do tangentially: bounds the damage that unobservable
-        tangential unknowns do to the normal ones. Far wider than any unknown that counts as observed.
+        Standard deviations [m] of what a structure can do in the unknowns that are not observed: bounds the damage
+        that these do to the others. It does not touch what is observed.
     hold : float
         Standard deviation [m] of the prior that holds tangential unknowns of the linearisation at what they were.
     min_cells, capacity : int
@@ -309,7 +314,7 @@ def fit_gauges(
         if not solved:
             continue
         held[g] = x[:MOTION]
-        _final_solution(N, b, n, nuisance, values[g], covariance[g], data_sd[g])
+        _final_solution(N, b, n, required, nuisance, values[g], covariance[g], data_sd[g])
         info[g, SCALE_NORMAL] = scales[0]
         if textured:
             info[g, SCALE_GREY] = scales[1]

@@ -50,7 +50,9 @@ def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
     size = np.diff(start)
     mean = np.add.reduceat(cells.position[order], start[:-1]) / size[:, None]
     distance = ((cells.position[order] - np.repeat(mean, size, axis=0)) ** 2).sum(axis=1)
-    rank = np.lexsort((distance, np.repeat(np.arange(len(size)), size)))
+    # Ties are broken by place, so that the order of points does not matter.
+    near = np.round(distance / spacing**2, 9)
+    rank = np.lexsort((*cells.position[order].T, near, np.repeat(np.arange(len(size)), size)))
     chosen = order[rank[start[:-1]]]
     places = cells.position[chosen]
     pairs = cKDTree(places).query_pairs(_CROWDED * spacing, output_type="ndarray")

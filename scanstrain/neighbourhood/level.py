@@ -13,17 +13,18 @@ from scanstrain.neighbourhood import fit
 from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
 from scanstrain.neighbourhood.rows import Rows, block_density, evaluate_rows
-from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells
+from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells, typical_height
 from scanstrain.neighbourhood.warp import blend, nearest_gauges
 
 FloatArray = NDArray[np.float64]
 
 CLUTTER = 6.0
 """Cells farther than this many standard deviations from the smooth surface are not surface."""
-NUISANCE_DISPLACEMENT = 0.03
+NUISANCE_DISPLACEMENT = 0.01
 """What a structure may have slid in its own plane where nothing shows it [m], one standard deviation."""
-NUISANCE_GRADIENT = 0.02
-"""The same for in-plane gradients [1]: the limit of small strain (common practice)."""
+NUISANCE_GRADIENT = 5e-4
+"""The same for in-plane gradients [1]: strains and spins of structures in service (common practice). On a bare lining
+of radius R a hoop strain e looks like a change of curvature 2 e / R."""
 WEAK_PRIOR = 10.0
 """Standard deviation of the prior that only keeps the equations solvable [m]: far beyond any motion."""
 
@@ -46,10 +47,14 @@ class Surface:
 
 @dataclass(slots=True)
 class Estimate:
-    """The present state of all gauges; unknowns scaled to metres at the gauge's rim, as in `fit.fit_gauges`."""
+    """The present state of all gauges; unknowns scaled to metres at the gauge's rim, as in `fit.fit_gauges`.
+
+    `required`, shape (12,), holds the standard errors at which an unknown counts as observed.
+    """
 
     held: FloatArray
     gains: FloatArray
+    required: FloatArray
     values: FloatArray = field(init=False)
     covariance: FloatArray = field(init=False)
     data_sd: FloatArray = field(init=False)
@@ -67,7 +72,7 @@ def make_surface(
     """Model one epoch at one resolution [m], smooth over `support_radius` [m], noise judged over `region` [m]."""
     cells = make_cells(points, resolution, intensity=intensity)
     smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, support_radius))
-    gate = CLUTTER * float(np.median(cells.roughness)) + 0.1 * resolution
+    gate = CLUTTER * typical_height(cells, smooth) + 0.1 * resolution
     height, grey = measure_covariance(cells, smooth, gate=gate, region_width=region)
     return Surface(cells, smooth, height, grey, gate)
 
@@ -110,8 +115,8 @@ class Level:
         per_gauge = np.pi * (self.radius / cells.resolution) ** 2
         fit.fit_gauges(
             g.origin, g.frame, g.curvature, self.radius, self.reference.gate + 0.1 * self.radius, WEAK_PRIOR,
-            self.nuisance, cells.resolution, min_points, int(3 * per_gauge) + 256, self.textured, key, start,
-            self.table(self.rows(state.held, gate))[order], state.gains, state.held, state.values, state.covariance,
+            state.required, self.nuisance, cells.resolution, min_points, int(3 * per_gauge) + 256, self.textured, key,
+            start,            self.table(self.rows(state.held, gate))[order], state.gains, state.held, state.values, state.covariance,
             state.data_sd, state.info,
         )  # fmt: skip
 

@@ -31,7 +31,7 @@ _CONSTANT = 100.0
 """Prior variance of the unknown constant, relative to sill plus noise: large enough to leave it free."""
 _FILLED = 0.7
 """Share of cells that hold a point where cells are as wide as the point spacing (Poisson: 0.63)."""
-_SAME_SHEET = 0.7
+_SAME_SHEET = 0.8
 """Cosine between normals above which a neighbouring block counts as the same sheet."""
 
 

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import Cells
 from scanstrain.neighbourhood.covariance import Covariance
+from scanstrain.neighbourhood.fit import SAME_SHEET
 from scanstrain.neighbourhood.predict import Predictor, choose_block, predict_at
 
 FloatArray = NDArray[np.float64]
@@ -68,7 +69,7 @@ def _evaluate(
         dot = 0.0
         for a in range(3):
             dot += normal[c, a] * frame[b, a, 2]
-        if abs(dot) < 0.5:
+        if abs(dot) < SAME_SHEET:
             continue
         out = np.empty(8)
         near = predict_at(

@@ -207,6 +207,28 @@ def smooth_surface(places: FloatArray, normals: FloatArray, cells: Cells) -> Smo
     return SmoothSurface(*out)
 
 
+@numba.njit(cache=True, nogil=True)
+def heights(
+    position: FloatArray, block: NDArray[np.int64], origin: FloatArray, frame: FloatArray, curvature: FloatArray
+) -> FloatArray:
+    """Height of every cell over the smooth surface of its block [m]."""
+    out = np.empty(len(position))
+    for c in range(len(position)):
+        b = block[c]
+        d = position[c] - origin[b]
+        x = d[0] * frame[b, 0, 0] + d[1] * frame[b, 1, 0] + d[2] * frame[b, 2, 0]
+        y = d[0] * frame[b, 0, 1] + d[1] * frame[b, 1, 1] + d[2] * frame[b, 2, 1]
+        z = d[0] * frame[b, 0, 2] + d[1] * frame[b, 1, 2] + d[2] * frame[b, 2, 2]
+        out[c] = z - 0.5 * curvature[b, 0] * x * x - curvature[b, 1] * x * y - 0.5 * curvature[b, 2] * y * y
+    return out
+
+
+def typical_height(cells: Cells, surface: SmoothSurface) -> float:
+    """Robust standard deviation of cells about their smooth surface [m]: relief and noise, without clutter."""
+    off = heights(cells.position, cells.block, surface.origin, surface.frame, surface.curvature)
+    return float(1.4826 * np.median(np.abs(off)))
+
+
 def support_cells(position: FloatArray, radius: float) -> Cells:
     """Make the cells on which `smooth_surface` fits over a radius [m]."""
     return make_cells(position, radius / (REACH * BLOCK_WIDTH))

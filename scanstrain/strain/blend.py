@@ -58,11 +58,14 @@ class Reach(NamedTuple):
 class Columns(NamedTuple):
     """What is blended: (uu, vv, uv) and scalar columns in groups; group 0 goes with the tensor.
 
-    `present` has one bit a group for each gauge.
+    `present` has one bit a group for each gauge. Column `bowed` is the normal displacement, whose second derivatives
+    `bowing` (uu, vv, uv) the fit knows at every gauge.
     """
 
     tensor: FloatArray
     values: FloatArray
+    bowed: int
+    bowing: FloatArray
     bounded: BoolArray
     first: IntArray
     present: IntArray
@@ -245,6 +248,22 @@ def _scalars(
 
 
 @numba.njit(cache=True, nogil=True)
+def _sagitta(
+    index: IntArray, count: int, weight: FloatArray, x: FloatArray, y: FloatArray, c: FloatArray, s: FloatArray,
+    bowing: FloatArray,
+) -> float:  # fmt: skip
+    """What a blend that is exact for linear fields adds to a bowed one: half the second derivatives over its reach."""
+    total = 0.0
+    for i in range(count):
+        if weight[i] == 0.0:
+            continue
+        a, b, h = bowing[index[i], 0], bowing[index[i], 1], bowing[index[i], 2]
+        along, across = c[i] * x[i] + s[i] * y[i], c[i] * y[i] - s[i] * x[i]
+        total += 0.5 * weight[i] * (a * along * along + b * across * across + 2.0 * h * along * across)
+    return total
+
+
+@numba.njit(cache=True, nogil=True)
 def blend(
     points: FloatArray, point_normals: FloatArray, aware: bool, sheet: Sheet, reach: Reach, columns: Columns,
     out: NDArray[np.float32], nearest: IntArray,
@@ -296,4 +315,7 @@ def blend(
             elif group == 0:
                 _tensor(alone, 1, unit, unit, zero, anchor, sheet, columns.tensor, out, p)
             for column in range(start, stop):
-                out[TENSOR_ROWS + column, p] = blended[column] if linear else columns.values[anchor, column]
+                value = blended[column] if linear else columns.values[anchor, column]
+                if linear and column == columns.bowed:
+                    value -= _sagitta(index, count, weight, x, y, c, s, columns.bowing)
+                out[TENSOR_ROWS + column, p] = value

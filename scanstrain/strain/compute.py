@@ -28,7 +28,7 @@ from scanstrain.strain.uncertainty import magnitude_sd, principal_sd, worst_dire
 FloatArray = NDArray[np.float64]
 Values = dict[str, FloatArray]
 
-_UN = 2
+_UN, _H11, _H12, _H22 = 2, 9, 10, 11
 _POINTS_CAP = 65535
 
 
@@ -102,6 +102,7 @@ def compute_strain(
         },
         gauge_length=field.gauge_length,
         gauge_spacing=field.gauge_spacing,
+        bowing=np.asarray(gauges.scatter(_bowing(gauges, axes), 0.0), dtype=np.float64),
         warnings=notes + _what_is_missing(gauges),
     )
 
@@ -200,6 +201,12 @@ def _bending(gauges: Gauges, moved: Kinematics, thickness: float | None) -> Valu
     bent = seen & (thickness is not None)
     half = thickness or 0.0
     return values | _only(bent, bend_1=bending_strain(larger, half), bend_2=bending_strain(smaller, half))
+
+
+def _bowing(gauges: Gauges, axes: FloatArray) -> FloatArray:
+    """Second derivatives of the normal displacement along the structure's axes: (uu, vv, uv)."""
+    turn = np.einsum("gia,gib->gab", axes, gauges.frame[:, :, :2])
+    return components_2d(sandwich(turn, tensor_2d(gauges.parameters[:, [_H11, _H22, _H12]])))
 
 
 def _detection_limits(gauges: Gauges, moved: Kinematics) -> Values:

@@ -58,11 +58,11 @@ def blend_to_points(
     """Give every point the values of the surrounding gauges by a local linear blend.
 
     Weights `(1 - d^2 / h^2)^2` with h = 1.75 spacings; the blend reproduces fields that are linear along the surface
-    (moving least squares: Lancaster & Salkauskas 1981). Gauges without a value do not contribute; with fewer
-    than four, or outside of them, the nearest gauge serves. A component is given only where the nearest gauge has
-    it. The in-plane tensor is turned with the surface on its way, so it stays zero along the normal, and principal
-    values, shear and the components along u and v are those of the blended tensor. p-value and codes are the
-    nearest gauge's.
+    (moving least squares: Lancaster & Salkauskas 1981), and the normal displacement also where it is bowed. Gauges
+    without a value do not contribute; with fewer than four, or outside of them, the nearest gauge serves. A component
+    is given only where the nearest gauge has it. The in-plane tensor is turned with the surface on its way, so it
+    stays zero along the normal, and principal values, shear and the components along u and v are those of the blended
+    tensor. p-value and codes are the nearest gauge's.
 
     Parameters
     ----------
@@ -173,10 +173,13 @@ def _columns(strain: StrainField, rows: NDArray[np.int64]) -> Columns:
 
     column = {name: np.asarray(strain.values[name], dtype=np.float64)[rows] for group in GROUPS for name in group}
     tensor = np.stack([np.asarray(strain.values[n], np.float64)[rows] for n in ("strain_u", "strain_v", "shear_uv")], 1)
+    bowing = np.zeros((len(strain), 3)) if strain.bowing is None else strain.bowing
     present = [np.isfinite([column[n] for n in group]).all(axis=0) for group in GROUPS]
     return Columns(
         tensor=tensor,
         values=np.stack(list(column.values()), axis=1),
+        bowed=list(column).index("disp_n"),
+        bowing=np.ascontiguousarray(bowing[rows]),
         bounded=np.array([BY_NAME[name].kind in ("error", "magnitude") for name in column]),
         first=np.cumsum([0, *map(len, GROUPS)]),
         present=np.asarray(sum(has.astype(np.int64) << bit for bit, has in enumerate(present))),

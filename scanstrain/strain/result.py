@@ -32,6 +32,9 @@ class StrainField:
         Why that one.
     detection_limit : mapping of str to ndarray of shape (g,)
         Smallest value that is significant at 95 % for disp_n, tilt, spin, strain and curvature at each gauge.
+    bowing : ndarray of shape (g, 3), optional
+        Second derivatives of the normal displacement along (uu, vv, uv) [1/m], zero where not observable: what a
+        blend between gauges needs beside the values.
     """
 
     position: FloatArray
@@ -44,6 +47,7 @@ class StrainField:
     detection_limit: Mapping[str, FloatArray]
     gauge_length: float
     gauge_spacing: float
+    bowing: FloatArray | None = None
     warnings: tuple[str, ...] = ()
 
     def __len__(self) -> int:
