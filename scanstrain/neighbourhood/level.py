@@ -116,8 +116,8 @@ class Level:
         fit.fit_gauges(
             g.origin, g.frame, g.curvature, self.radius, self.reference.gate + 0.1 * self.radius, WEAK_PRIOR,
             state.required, self.nuisance, cells.resolution, min_points, int(3 * per_gauge) + 256, self.textured, key,
-            start,            self.table(self.rows(state.held, gate))[order], state.gains, state.held, state.values, state.covariance,
-            state.data_sd, state.info,
+            start, self.table(self.rows(state.held, gate))[order], state.gains, state.held, state.values,
+            state.covariance, state.data_sd, state.info,
         )  # fmt: skip
 
     def table(self, rows: Rows) -> FloatArray:

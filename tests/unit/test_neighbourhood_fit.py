@@ -112,7 +112,7 @@ class Patch:
             table[:, column : column + columns.shape[1]] = columns
         return table
 
-    def run(self, *, weak_prior=LOOSE, nuisance=LOOSE, hold=LOOSE, start=None, min_cells=30):
+    def run(self, *, weak_prior=LOOSE, required=0.0, nuisance=LOOSE, hold=LOOSE, start=None, min_cells=30):
         order, key, begin = group(voxel_keys(self.position, RADIUS))
         g = len(self.centre)
         frame = np.broadcast_to(self.frame, (g, 3, 3)).copy()
@@ -120,8 +120,8 @@ class Patch:
         values, covariance = np.empty((g, 12)), np.zeros((g, 12, 12))
         data_sd, info = np.full((g, 12), np.inf), np.zeros((g, 6))
         fit_gauges(
-            self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(nuisance)), hold,
-            min_cells, 5000, self.textured, key, begin, self.table()[order], np.full(g, self.gain), held, values,
+            self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(required)),
+            np.full(12, float(nuisance)), hold, min_cells, 5000, self.textured, key, begin, self.table()[order], np.full(g, self.gain), held, values,
             covariance, data_sd, info,
         )  # fmt: skip
         return {"values": values, "held": held, "covariance": covariance, "data_sd": data_sd, "info": info}
@@ -182,6 +182,10 @@ def noisy(seed=3, **options):
     return patch
 
 
+SPENT = (6, 8)
+"""Unknowns that each kind of row has to pay for: six normal ones; six tangential ones, gain and offset."""
+
+
 def twin(patch, g, *, weak_prior, nuisance, hold, start):
     """The fit of one gauge in NumPy, from its description: rows, weights, variance factors, priors, covariance."""
     local = (patch.position - patch.centre[g]) @ patch.frame
@@ -214,7 +218,7 @@ def twin(patch, g, *, weak_prior, nuisance, hold, start):
             r = (m - M @ solution) / np.sqrt(spread)
             scale = (1.4826 * np.median(np.abs(r))) ** 2 if turn == 0 else scales[k]
             w = np.clip(1 - r**2 / (TUKEY**2 * scale), 0, None) ** 2
-            scales[k] = (w * r * r).sum() / w.sum() / TUKEY_SHRINK
+            scales[k] = (w * r * r).sum() / (w.sum() - SPENT[k]) / TUKEY_SHRINK
             N += (M * (w / variance / scales[k])[:, None]).T @ M
             y += (M * (w / variance / scales[k])[:, None]).T @ m
         N[np.arange(12), np.arange(12)] += weak_prior**-2
@@ -241,6 +245,16 @@ def test_the_fit_is_its_numpy_twin(textured):
         np.testing.assert_allclose(result["covariance"][g], covariance, rtol=1e-7, atol=1e-18)
         np.testing.assert_allclose(result["data_sd"][g], data_sd, rtol=1e-8)
         np.testing.assert_allclose(result["info"][g, 3 : 3 + len(scales)], scales, rtol=1e-8)
+
+
+def test_what_is_observed_is_not_bounded_and_the_rest_is():
+    """Bounds apply to an unknown just where its standard error from the data alone exceeds what is required."""
+    patch = noisy()
+    free, bounded = patch.run(), patch.run(nuisance=1e-9)
+    limit = 1.5 * free["data_sd"].max()
+    np.testing.assert_array_equal(patch.run(required=limit, nuisance=1e-9)["values"], free["values"])
+    assert (np.abs(bounded["values"]) < 1e-6).all()
+    np.testing.assert_array_equal(bounded["data_sd"], free["data_sd"])
 
 
 def test_gross_errors_do_not_reach_the_result():

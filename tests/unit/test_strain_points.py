@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 import runpy
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -34,7 +35,7 @@ def plane_grid(nx=12, ny=10, jitter=0.2, seed=1):
     return np.column_stack([xy, np.zeros(len(xy))])
 
 
-def linear_plane(*, strained=True, **options):
+def linear_plane(*, strained=True, bent=1.0, **options):
     """Displacement and gradients that change linearly along the plane (each by itself, as a field of gauges)."""
     p = plane_grid()
     x, y = p[:, 0], p[:, 1]
@@ -44,7 +45,7 @@ def linear_plane(*, strained=True, **options):
     gradient[:, 0, 1] = gradient[:, 1, 0] = 2e-4 - 1e-4 * x
     gradient *= strained
     displacement = np.stack([1e-3 * x, 2e-3 - 1e-3 * y, 5e-3 + 2e-3 * x + 1e-3 * y], -1)
-    hessian = np.stack([2e-3 + 1e-3 * y, 0 * x, -1e-3 + 1e-3 * x], -1)
+    hessian = bent * np.stack([2e-3 + 1e-3 * y, 0 * x, -1e-3 + 1e-3 * x], -1)
     return affine_field(
         p, FLOOR, displacement=displacement, gradient=gradient, hessian=hessian,
         gauge_length=LENGTH, gauge_spacing=SPACING, **options,
@@ -62,7 +63,7 @@ def inner(rng, count=400):
 def test_linear_fields_come_back_exactly_inside(rng):
     points = inner(rng)
     x, y = points[:, 0], points[:, 1]
-    out = blend_to_points(strain_of(linear_plane(), thickness=0.2), points, np.tile([0.0, 0.0, 1.0], (400, 1)))
+    out = blend_to_points(strain_of(linear_plane(bent=0.0), thickness=0.2), points, np.tile([0.0, 0.0, 1.0], (400, 1)))
     expected = {
         "disp_x": 1e-3 * x,
         "disp_y": 2e-3 - 1e-3 * y,
@@ -79,6 +80,24 @@ def test_linear_fields_come_back_exactly_inside(rng):
     np.testing.assert_allclose(bent["curv_1"], 1e-3 - 1e-3 * x, rtol=2e-6, atol=3e-9)
     np.testing.assert_allclose(bent["curv_2"], -2e-3 - 1e-3 * y, rtol=2e-6, atol=3e-9)
     np.testing.assert_allclose(bent["bend_1"], 0.1 * (1e-3 - 1e-3 * x), rtol=2e-6, atol=3e-10)
+
+
+def test_a_bowed_displacement_comes_back_exactly_too(rng):
+    """Between gauges a bulge stands higher than a plane through their values; second derivatives tell how much."""
+    p, points = plane_grid(), inner(rng)
+
+    def bulge(q):
+        x, y = q[:, 0], q[:, 1]
+        return 3e-3 + 1e-3 * x - 2e-3 * y - 4e-3 * x**2 + 1.5e-3 * y**2 + 2e-3 * x * y
+
+    displacement = np.column_stack([np.zeros((len(p), 2)), bulge(p)])
+    field = affine_field(
+        p, FLOOR, displacement=displacement, hessian=[-8e-3, 2e-3, 3e-3], gauge_length=LENGTH, gauge_spacing=SPACING
+    )
+    found = blend_to_points(strain_of(field), points)["disp_n"]
+    np.testing.assert_allclose(found, bulge(points), rtol=2e-6, atol=1e-9)
+    blind = blend_to_points(replace(strain_of(field), bowing=None), points)["disp_n"]
+    assert np.abs(blind - bulge(points)).max() > 3e-5
 
 
 def test_types_and_names_are_those_of_the_table(rng):
@@ -240,6 +259,13 @@ def twin(result, points, normals):
             for n in group:
                 values = result.values[n][use]
                 out[n][k] = weight @ values
+                if n == "disp_n" and len(use) > 1:
+                    # each gauge's own second derivatives over its distance, in its own tangents
+                    for j, omega in zip(use, weight, strict=True):
+                        left, _, right = np.linalg.svd(result.axes[near].T @ result.axes[j])
+                        d = (left @ right).T @ (result.axes[near].T @ (result.position[j] - q))
+                        uu, vv, uv = result.bowing[j]
+                        out[n][k] -= omega * (uu * d[0] ** 2 + vv * d[1] ** 2 + 2 * uv * d[0] * d[1]) / 2
                 if n.endswith("_sd") or n == "tilt":
                     out[n][k] = np.clip(out[n][k], values.min(), values.max())
             if group is GROUPS[0]:
