@@ -14,10 +14,10 @@ from scanstrain.epoch import Provenance, make_epoch
 from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.registration.result import Registration, WeakDirection
 from scanstrain.result import Result
-from scanstrain.strain.calibration import GROUPS, Calibration
+from scanstrain.strain.calibration import GROUPS, KINDS, Calibration
 from scanstrain.strain.result import StrainField
 
-CALIBRATION = Calibration(dict.fromkeys(GROUPS, 1.0), "none", 0)
+CALIBRATION = Calibration({kind: dict.fromkeys(GROUPS, 1.0) for kind in KINDS}, "none", 0)
 ORIGIN = np.array([482310.0, 5391270.0, 100.0])
 IN_PLANE = [name for name in (a.name for a in ATTRIBUTES) if name.startswith(("strain", "shear", "dilation", "spin"))]
 # gauges 0..11 along the wall; gauge 11 failed, gauges 6..11 see no texture, gauges 0..2 moved

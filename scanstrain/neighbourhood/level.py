@@ -12,7 +12,7 @@ from scanstrain.cells import Cells, group, make_cells, voxel_keys
 from scanstrain.neighbourhood import fit
 from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
-from scanstrain.neighbourhood.rows import Rows, block_density, evaluate_rows
+from scanstrain.neighbourhood.rows import Comparison, Rows, block_density
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells, typical_height
 from scanstrain.neighbourhood.warp import blend, nearest_gauges
 
@@ -43,6 +43,10 @@ class Surface:
     def textured(self) -> bool:
         """Whether intensity shows structure anywhere."""
         return self.grey is not None and bool((self.grey.sill > 0).any())
+
+    def predictor(self, textured: bool) -> Predictor:
+        """Solve the prediction of this epoch, with intensity if `textured`."""
+        return build_predictor(self.cells, self.smooth, self.height, self.grey if textured else None, gate=self.gate)
 
 
 @dataclass(slots=True)
@@ -86,12 +90,10 @@ class Level:
         self.reference, self.gauges, self.radius, self.spacing = reference, gauges, radius, spacing
         textured = reference.textured and current.textured
         self.textured = textured
-        self.predictor: Predictor = build_predictor(
-            current.cells, current.smooth, current.height, current.grey if textured else None, gate=current.gate
-        )
         cells = reference.cells
-        self.normal = np.ascontiguousarray(reference.smooth.frame[cells.block][:, :, 2])
-        self.density = block_density(cells)[cells.block], block_density(current.cells)
+        density = block_density(cells)[cells.block], block_density(current.cells)
+        ours, theirs = reference.predictor(textured), current.predictor(textured)
+        self.comparison = Comparison(cells, ours, theirs, density, reference.gate)
         self.nearest = nearest_gauges(cells.position, gauges.origin)
         gradient = NUISANCE_GRADIENT * radius
         self.nuisance = np.full(12, WEAK_PRIOR)
@@ -105,8 +107,7 @@ class Level:
         moved = np.zeros((len(cells), 3))
         g = self.gauges
         blend(cells.position, self.nearest, g.origin, g.frame, held, self.radius, self.spacing, moved)
-        noise = self.reference.height, self.reference.grey if self.textured else None
-        return evaluate_rows(cells, self.normal, moved, self.predictor, noise, gate=gate, density=self.density)
+        return self.comparison.rows(moved, gate)
 
     def fit(self, state: Estimate, *, gate: float, min_points: int) -> None:
         """Improve `state` by one comparison and one fit of every gauge."""
@@ -125,10 +126,10 @@ class Level:
         cells = self.reference.cells
         table = np.empty((len(cells), fit.COLUMNS))
         for column, values in (
-            (fit.POSITION, cells.position), (fit.NORMAL, self.normal), (fit.COUNT, cells.count),
+            (fit.POSITION, cells.position), (fit.NORMAL, self.comparison.normal), (fit.COUNT, cells.count),
             (fit.VALID, rows.valid), (fit.MOVED, rows.moved), (fit.MISFIT, rows.misfit), (fit.SLOPE, rows.slope),
             (fit.GREY, rows.grey), (fit.GREY_SLOPE, rows.grey_slope), (fit.VARIANCE, rows.variance),
-            (fit.OWN_GREY, 0.0 if cells.intensity is None else cells.intensity),
+            (fit.OWN_GREY, rows.own_grey),
         ):  # fmt: skip
             wide = np.ndim(values) == 2
             table[:, column : column + (np.shape(values)[1] if wide else 1)] = (

@@ -1,16 +1,21 @@
 # SPDX-License-Identifier: MIT
-"""Observation rows: every reference cell, moved by the present estimate, against the predicted current epoch."""
+"""Observation rows: every reference cell, moved by the present estimate, against the predicted current epoch.
+
+Both epochs are predicted with the same method: the reference at its own cells, the current epoch at the moved ones.
+So what smoothing does to a surface it does to both, and it drops out of their difference; a scan compared with
+itself shows nothing at all. The noise of a single cell reaches a sum of rows through its neighbours' predictions
+much as it would by itself.
+"""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numba
 import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import Cells
-from scanstrain.neighbourhood.covariance import Covariance
 from scanstrain.neighbourhood.fit import SAME_SHEET
 from scanstrain.neighbourhood.predict import Predictor, choose_block, predict_at
 
@@ -36,6 +41,8 @@ class Rows:
         Predicted intensity at the moved cell.
     grey_slope : ndarray of shape (c, 3)
         Derivative of `grey` by the displacement [1/m].
+    own_grey : ndarray of shape (c,)
+        Intensity of the cell that `grey` is compared with.
     variance : ndarray of shape (c, 4)
         Of height and intensity: what a row adds to the error of a fit (both epochs' noise shares and unresolved
         structure), then the spread expected of single residuals: (height, intensity, height, intensity).
@@ -47,6 +54,7 @@ class Rows:
     slope: FloatArray
     grey: FloatArray
     grey_slope: FloatArray
+    own_grey: FloatArray
     variance: FloatArray
 
 
@@ -119,41 +127,72 @@ def block_density(cells: Cells) -> FloatArray:
     return np.maximum(m, 0.05) / cells.resolution**2
 
 
-def evaluate_rows(
-    cells: Cells, normal: FloatArray, moved: FloatArray, predictor: Predictor,
-    noise: tuple[Covariance, Covariance | None], *, gate: float, density: tuple[FloatArray, FloatArray],
-) -> Rows:  # fmt: skip
-    """Compare every reference cell, moved by `moved`, with the predicted current epoch.
+class Comparison:
+    """A reference epoch, predicted at its own cells once, and a current epoch that it is compared with.
 
     Parameters
     ----------
     cells : Cells
         Reference epoch.
-    normal : ndarray of shape (c, 3)
-        Surface normal at each cell, either sign.
-    moved : ndarray of shape (c, 3)
-        Present displacement of each cell [m].
-    predictor : Predictor
-        Current epoch.
-    noise : pair of Covariance
-        Of the reference epoch: height, intensity.
-    gate : float
-        Misfits beyond this are no match [m].
+    reference, current : Predictor
+        Of the two epochs.
     density : pair of ndarray
         Reference point density at each cell, and current point density at each block [1/m^2].
+    gate : float
+        Cells farther than this from the reference's own predicted surface are clutter [m].
     """
-    n = len(cells)
-    out = (
-        np.zeros(n, np.bool_), np.zeros(n), np.zeros((n, 3)), np.zeros(n), np.zeros((n, 3)), np.ones((n, 4)),
-    )  # fmt: skip
-    height, grey = noise
-    own_noise = np.stack([height.noise, (grey or height).noise], axis=1)[cells.block]
-    current = predictor.surface
-    _evaluate(
-        cells.position, moved, cells.count, normal, density[0], density[1], gate, own_noise, predictor.noise,
-        predictor.cells.key,
-        predictor.cells.block_size, current.origin, current.frame, current.curvature, predictor.start, predictor.st,
-        predictor.height, predictor.intensity, predictor.constant, predictor.variance, predictor.unresolved,
-        predictor.height_table, predictor.intensity_table, predictor.table_step, *out,
-    )  # fmt: skip
-    return Rows(out[0], moved, *out[1:])
+
+    def __init__(
+        self,
+        cells: Cells,
+        reference: Predictor,
+        current: Predictor,
+        density: tuple[FloatArray, FloatArray],
+        gate: float,
+    ) -> None:
+        self.cells, self.current, self.density = cells, current, density
+        self.normal = np.ascontiguousarray(reference.surface.frame[cells.block][:, :, 2])
+        self.noise = np.ascontiguousarray(reference.noise[cells.block])
+        at_rest = np.zeros((len(cells), 3))
+        self.own = self._evaluate(at_rest, reference, block_density(cells), 10 * gate)
+        self.own_valid = self.own.valid & (np.abs(self.own.misfit) < gate)
+        # Onto the own predicted surface, along its normal.
+        length = np.einsum("ca,ca->c", self.own.slope, self.own.slope)
+        self.to_surface = -(self.own.misfit / np.maximum(length, 1e-9))[:, None] * self.own.slope
+        # A prediction at a cell combines that cell with what its neighbours say; the less the cell weighs, the more
+        # of what they miss stays in it.
+        single = self.noise / cells.count[:, None]
+        share = single / np.maximum(single + reference.variance[cells.block], 1e-300)
+        self.missed = share**2 * reference.unresolved[cells.block]
+        self.spread = share * reference.variance[cells.block]
+        self.single = single
+
+    def rows(self, moved: FloatArray, gate: float) -> Rows:
+        """Compare at the displacement `moved` (c, 3) [m] of every cell; misfits beyond `gate` [m] are no match."""
+        rows = self._evaluate(moved, self.current, self.density[1], 10 * gate)
+        misfit = rows.misfit + np.einsum("ca,ca->c", rows.slope, self.to_surface)
+        variance = rows.variance
+        variance[:, :2] += self.missed
+        variance[:, 2:] += self.spread - self.single
+        return replace(
+            rows,
+            valid=rows.valid & self.own_valid & (np.abs(misfit) < gate),
+            misfit=misfit,
+            own_grey=self.own.grey,
+            variance=np.maximum(variance, 1e-30),
+        )
+
+    def _evaluate(self, moved: FloatArray, predictor: Predictor, density: FloatArray, gate: float) -> Rows:
+        n = len(self.cells)
+        out = (
+            np.zeros(n, np.bool_), np.zeros(n), np.zeros((n, 3)), np.zeros(n), np.zeros((n, 3)), np.ones((n, 4)),
+        )  # fmt: skip
+        surface = predictor.surface
+        _evaluate(
+            self.cells.position, moved, self.cells.count, self.normal, self.density[0], density, gate, self.noise,
+            predictor.noise, predictor.cells.key, predictor.cells.block_size, surface.origin, surface.frame,
+            surface.curvature, predictor.start, predictor.st, predictor.height, predictor.intensity,
+            predictor.constant, predictor.variance, predictor.unresolved, predictor.height_table,
+            predictor.intensity_table, predictor.table_step, *out,
+        )  # fmt: skip
+        return Rows(out[0], moved, *out[1:5], np.zeros(n), out[5])

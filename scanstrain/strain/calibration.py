@@ -29,6 +29,7 @@ GROUPS: dict[str, tuple[int, ...]] = {
 }
 """Unknowns that share a factor, by their place in `neighbourhood.result.PARAMETERS`."""
 
+KINDS = ("with relief or texture", "bare")
 ONE_SIGMA = 0.6826894921370859
 """Share of a normal distribution within one standard deviation."""
 FEWEST_PATCHES = 15
@@ -48,15 +49,16 @@ class Calibration:
 
     Parameters
     ----------
-    factors : dict of str to float
-        Factor on the standard errors of each group of unknowns [1]; 1 where it could not be judged.
+    factors : dict of str to dict of str to float
+        For each kind of surface ("with relief or texture", "bare") the factor on the standard errors of each group
+        of unknowns [1]; 1 where it could not be judged.
     ground : str
         "stable ground", "whole surface" or "none".
     gauges : int
         Gauges on that ground.
     """
 
-    factors: dict[str, float]
+    factors: dict[str, dict[str, float]]
     ground: str
     gauges: int
 
@@ -83,20 +85,26 @@ def calibrate(
     """
     established, ground = _ground(field, registration, points)
     fewest = FEWEST_PATCHES if established else FEWEST_AT_ALL
-    if _patches(field, ground) < fewest:
-        return field, Calibration(dict.fromkeys(GROUPS, 1.0), "none", 0), ()
-    values = np.concatenate([field.displacement, field.gradient.reshape(-1, 6), field.hessian], axis=1)[ground]
-    error = field.covariance[ground] + registration_covariance(
-        field.position[ground], field.frame[ground], registration
-    )
+    values = np.concatenate([field.displacement, field.gradient.reshape(-1, 6), field.hessian], axis=1)
+    error = field.covariance + registration_covariance(field.position, field.frame, registration)
     z = np.abs(values) / np.sqrt(np.einsum("gii->gi", error))
-    factors, scale = {}, np.ones(12)
-    for name, columns in GROUPS.items():
-        known = z[:, columns][np.isfinite(z[:, columns])]
-        enough = len(known) >= fewest * len(columns)
-        factors[name] = max(float(np.quantile(known, ONE_SIGMA)), 1.0) if enough else 1.0
-        scale[list(columns)] = factors[name]
-    calibrated = replace(field, covariance=field.covariance * scale[:, None] * scale[None, :])
+    scale = np.ones((len(field), 12))
+    factors = {kind: dict.fromkeys(GROUPS, 1.0) for kind in KINDS}
+    whole = _patches(field, ground)
+    # What limits the fit differs: interpolation of relief and texture on the one, noise alone on the other.
+    shows = field.observable[:, :2].all(axis=1)
+    for kind, here in zip(KINDS, (shows, ~shows), strict=True):
+        judged = ground & here if _patches(field, ground & here) >= fewest else ground
+        for name, columns in GROUPS.items() if whole >= fewest else ():
+            known = z[judged][:, columns]
+            known = known[np.isfinite(known)]
+            if len(known) >= fewest * len(columns):
+                factors[kind][name] = max(float(np.quantile(known, ONE_SIGMA)), 1.0)
+            for column in columns:
+                scale[here, column] = factors[kind][name]
+    if whole < fewest:
+        return field, Calibration(factors, "none", 0), ()
+    calibrated = replace(field, covariance=field.covariance * scale[:, :, None] * scale[:, None, :])
     where = "stable ground" if established else "whole surface"
     return calibrated, Calibration(factors, where, int(ground.sum())), _warnings(factors, established)
 
@@ -130,7 +138,7 @@ def stable_share(field: AffineField, points: FloatArray, stable: NDArray[np.bool
     return np.asarray(steady / np.maximum(total, 1))
 
 
-def _warnings(factors: dict[str, float], established: bool) -> tuple[str, ...]:
+def _warnings(factors: dict[str, dict[str, float]], established: bool) -> tuple[str, ...]:
     said = []
     if not established:
         said.append(
@@ -138,7 +146,8 @@ def _warnings(factors: dict[str, float], established: bool) -> tuple[str, ...]:
             "surface was taken as the error of the survey: only changes that stand out from it count as significant. "
             "Name stable ground, or scan control, to judge the rest."
         )
-    large = [f"{name} x {factor:.1f}" for name, factor in factors.items() if factor > 1.5]
+    worst = {name: max(each[name] for each in factors.values()) for name in GROUPS}
+    large = [f"{name} x {factor:.1f}" for name, factor in worst.items() if factor > 1.5]
     if large:
         said.append(
             "The ground that did not move scatters more than the noise of points explains; standard errors were "

@@ -62,7 +62,10 @@ def test_ctrl_c_gives_130_and_one_sentence(tmp_path):
         "print('ready', flush=True); sys.exit(main(sys.argv[1:]))"
     )
     process = subprocess.Popen(
-        [sys.executable, "-c", code, "run", str(pipe)], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True,
+        [sys.executable, "-c", code, "run", str(pipe)],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
         preexec_fn=lambda: signal.signal(signal.SIGINT, signal.default_int_handler),  # a parent may ignore it
     )
     assert process.stdout.readline() == "ready\n"

@@ -123,8 +123,6 @@ def test_gauge_table_reads_back_with_names_units_and_empty_fields(folder):
 
 
 def test_gauge_table_is_a_frame_of_numbers_for_numpy(folder):
-    numbers = np.genfromtxt(
-        folder / "gauges.csv", delimiter=",", skip_header=2, usecols=range(1, 12), encoding="utf-8"
-    )
+    numbers = np.genfromtxt(folder / "gauges.csv", delimiter=",", skip_header=2, usecols=range(1, 12), encoding="utf-8")
     assert numbers.shape == (12, 11)
     assert np.isfinite(numbers[:11]).all()

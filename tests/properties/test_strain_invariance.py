@@ -44,9 +44,7 @@ def test_a_superposed_rotation_leaves_every_surface_measure_unchanged(gradient, 
     turned = Q @ B - np.eye(3)[:, :2]
     before, after = map_surface(gradient[None]), map_surface(turned[None])
     for name in MEASURES:
-        np.testing.assert_allclose(
-            surface_strain(after, name), surface_strain(before, name), atol=1e-12, err_msg=name
-        )
+        np.testing.assert_allclose(surface_strain(after, name), surface_strain(before, name), atol=1e-12, err_msg=name)
     np.testing.assert_allclose(after.rotation, Q @ before.rotation, atol=1e-11)
     np.testing.assert_allclose(after.area, before.area, atol=1e-12)
 

@@ -109,9 +109,7 @@ def test_pure_rotation_is_false_strain_only_for_the_small_measure():
     w[:, 2] = np.radians(row["degrees"])
     R = rotation_matrix(w)
     for component in (0, 1):
-        np.testing.assert_allclose(
-            small(R)[:, component, component] / UE, row["ue"], rtol=0, atol=row["tolerance_ue"]
-        )
+        np.testing.assert_allclose(small(R)[:, component, component] / UE, row["ue"], rtol=0, atol=row["tolerance_ue"])
     for measure in (green_lagrange, almansi, hencky, biot):
         np.testing.assert_allclose(measure(R), 0.0, atol=1e-15)
 

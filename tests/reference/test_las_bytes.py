@@ -140,9 +140,7 @@ def test_minimum_and_maximum_are_true_where_the_common_library_has_them_wrong(tm
         assert (code, options) == (9, 7)
         assert struct.unpack("<d", least)[0] == float(np.float32(1e-4))
         assert struct.unpack("<d", most)[0] == float(np.float32(3e-4))
-        assert (
-            math.isnan(struct.unpack("<d", empty)[0]) if no_data is None else struct.unpack("<d", empty)[0] == -9999
-        )
+        assert math.isnan(struct.unpack("<d", empty)[0]) if no_data is None else struct.unpack("<d", empty)[0] == -9999
 
 
 def test_a_finite_no_data_value_stands_in_the_points_and_not_in_the_minimum(tmp_path):

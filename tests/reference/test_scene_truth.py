@@ -147,9 +147,7 @@ def test_simple_shear(g, degrees):
     assert exact["tilt"][0] == pytest.approx(0.0, abs=1e-15)
     assert exact["strain_1"][0] == pytest.approx(np.arcsinh(g / 2), rel=1e-9)
     if g == 1.0:
-        np.testing.assert_allclose(
-            exact["strain"][0], [[-0.21520447, 0.43040894], [0.43040894, 0.21520447]], atol=5e-9
-        )
+        np.testing.assert_allclose(exact["strain"][0], [[-0.21520447, 0.43040894], [0.43040894, 0.21520447]], atol=5e-9)
 
 
 @pytest.mark.parametrize("surface", [Wall(4.0, 4.0, bearing=0.3), Lining(3.0, 4.0, bearing=0.3)])

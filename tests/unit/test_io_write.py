@@ -187,9 +187,7 @@ def test_no_permission_is_told(tmp_path, reference, monkeypatch):
     def denied(self, *args, **kwargs):
         raise PermissionError(errno.EACCES, os.strerror(errno.EACCES))
 
-    monkeypatch.setattr(
-        Path, "touch", denied
-    )  # the superuser may write anywhere, so the mode of a folder will not do
+    monkeypatch.setattr(Path, "touch", denied)  # the superuser may write anywhere, so the mode of a folder will not do
     with pytest.raises(OutputError, match=r"strain\.las.*Permission denied.*choose a folder"):
         write_result_cloud(reference, tmp_path / "strain.las", results())
     assert left_in(tmp_path) == ["reference.las"]

@@ -117,9 +117,7 @@ def test_registration_is_in_file_coordinates_and_unbounded_errors_are_null(resul
     # the pivot (0.5, 0, 0.5) turns to (0, 0.5, 0.5) and shifts by (1, 2, 3)
     assert found["translation"] == pytest.approx([0.5, 2.5, 3.0])
     assert found["stable_fraction"] == 0.62
-    assert found["weak_directions"] == [
-        {"description": "slide up the wall", "vector": [0, 0, 0, 0, 0, 1], "sd": None}
-    ]
+    assert found["weak_directions"] == [{"description": "slide up the wall", "vector": [0, 0, 0, 0, 0, 1], "sd": None}]
     json.dumps(found, allow_nan=False)
 
 

@@ -8,10 +8,11 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from scanstrain.strain.calibration import GROUPS, calibrate
+from scanstrain.strain.calibration import GROUPS, KINDS, calibrate
 
 FIELDS = runpy.run_path(str(Path(__file__).parents[1] / "strain_fields.py"))
 SIDE, SPACING = 60, 0.15
+TEXTURED, BARE = KINDS
 CLAIMED = np.array([1e-4] * 3 + [2e-4] * 6 + [1e-3] * 3)
 
 
@@ -45,7 +46,7 @@ def test_errors_that_hold_are_left_alone(rng, points):
     field = grid_field(rng, 1.0)
     calibrated, found, said = calibrate(field, datum(points, np.ones(len(points), bool)), points)
     assert found.ground == "stable ground"
-    assert all(1.0 <= factor < 1.03 for factor in found.factors.values())
+    assert all(1.0 <= factor < 1.03 for each in found.factors.values() for factor in each.values())
     assert said == ()
     assert (np.diagonal(calibrated.covariance, axis1=1, axis2=2) >= CLAIMED**2 * (1 - 1e-12)).all()
 
@@ -55,12 +56,12 @@ def test_errors_that_are_too_small_grow_to_the_scatter_and_only_there(rng, point
     scatter[2], scatter[[7, 8]] = 3.0, 2.0
     field = grid_field(rng, scatter)
     calibrated, found, said = calibrate(field, datum(points, np.ones(len(points), bool)), points)
-    assert found.factors["normal displacement"] == pytest.approx(3.0, rel=0.04)
-    assert found.factors["tilt"] == pytest.approx(2.0, rel=0.04)
-    assert found.factors["in-plane strain and spin"] < 1.03
+    assert found.factors[TEXTURED]["normal displacement"] == pytest.approx(3.0, rel=0.04)
+    assert found.factors[TEXTURED]["tilt"] == pytest.approx(2.0, rel=0.04)
+    assert found.factors[TEXTURED]["in-plane strain and spin"] < 1.03
     sd = np.sqrt(calibrated.covariance[0].diagonal())
-    np.testing.assert_allclose(sd[2], 1e-4 * found.factors["normal displacement"], rtol=1e-12)
-    assert f"normal displacement x {found.factors['normal displacement']:.1f}" in said[0]
+    np.testing.assert_allclose(sd[2], 1e-4 * found.factors[TEXTURED]["normal displacement"], rtol=1e-12)
+    assert f"normal displacement x {found.factors[TEXTURED]['normal displacement']:.1f}" in said[0]
 
 
 def test_what_moved_does_not_count_as_error(rng, points):
@@ -68,7 +69,7 @@ def test_what_moved_does_not_count_as_error(rng, points):
     stable = points[:, 0] < SIDE * SPACING * 0.52
     _, found, _ = calibrate(field, datum(points, stable), points)
     assert found.ground == "stable ground"
-    assert found.factors["normal displacement"] < 1.05
+    assert found.factors[TEXTURED]["normal displacement"] < 1.05
     assert found.gauges < SIDE**2 * 0.52
 
 
@@ -76,7 +77,7 @@ def test_without_established_ground_the_whole_surface_is_the_background_and_that
     field = grid_field(rng, 4.0)
     _, found, said = calibrate(field, datum(points, rng.uniform(size=len(points)) < 0.2), points)
     assert found.ground == "whole surface"
-    assert found.factors["normal displacement"] == pytest.approx(4.0, rel=0.04)
+    assert found.factors[TEXTURED]["normal displacement"] == pytest.approx(4.0, rel=0.04)
     assert "Less than half of the surface" in said[0]
 
 
@@ -90,7 +91,7 @@ def test_correlations_survive_and_unknown_gauges_do_not_spoil_it(rng, points):
     calibrated, found, _ = calibrate(field, datum(points, np.ones(len(points), bool)), points)
     C = calibrated.covariance[5]
     assert C[2, 7] / np.sqrt(C[2, 2] * C[7, 7]) == pytest.approx(0.5, rel=1e-9)
-    assert set(found.factors) == set(GROUPS)
+    assert set(found.factors[TEXTURED]) == set(GROUPS)
 
 
 def test_too_little_ground_changes_nothing(rng, points):
@@ -99,3 +100,17 @@ def test_too_little_ground_changes_nothing(rng, points):
     calibrated, found, _ = calibrate(few, datum(points, np.ones(len(points), bool)), points)
     assert found.ground == "none"
     assert calibrated is few
+
+
+def test_bare_and_textured_surfaces_are_judged_apart(rng, points):
+    scatter = np.where(np.arange(SIDE**2)[:, None] % 2 == 0, 1.0, 2.5)
+    field = grid_field(rng, scatter)
+    shows = field.observable.copy()
+    shows[1::2, :2] = False
+    calibrated, found, _ = calibrate(
+        replace(field, observable=shows), datum(points, np.ones(len(points), bool)), points
+    )
+    assert found.factors[TEXTURED]["normal displacement"] < 1.06
+    assert found.factors[BARE]["normal displacement"] == pytest.approx(2.5, rel=0.06)
+    np.testing.assert_allclose(calibrated.covariance[0], field.covariance[0], rtol=0.15)
+    assert calibrated.covariance[1, 2, 2] == pytest.approx(6.25 * field.covariance[1, 2, 2], rel=0.12)

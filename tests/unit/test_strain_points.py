@@ -326,9 +326,7 @@ def test_beyond_half_a_gauge_length_there_is_nothing():
 
 def test_a_point_without_value_says_why_the_gauge_beside_it_failed():
     p = np.array([[0.0, 0, 0], [1.0, 0, 0]])
-    field = affine_field(
-        p, FLOOR, status=[Status.FINE, Status.NO_OVERLAP], gauge_length=LENGTH, gauge_spacing=SPACING
-    )
+    field = affine_field(p, FLOOR, status=[Status.FINE, Status.NO_OVERLAP], gauge_length=LENGTH, gauge_spacing=SPACING)
     out = blend_to_points(strain_of(field), np.array([[0.9, 0, 0], [0.05, 0, 0], [0.5, 0, 0]]))
     np.testing.assert_array_equal(out["status"], [Status.NO_OVERLAP, Status.FINE, Status.OUTSIDE])
     np.testing.assert_array_equal(np.isfinite(out["disp_n"]), [False, True, False])

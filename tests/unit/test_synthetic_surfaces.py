@@ -40,9 +40,9 @@ def test_frames_are_right_handed_and_follow_the_coordinates(surface, places):
         e = h * np.eye(2)[j]
         numeric = (surface.points(places + e) - surface.points(places - e)) / (2 * h)
         np.testing.assert_allclose(F[:, :, j], numeric, atol=1e-9)
-    turn = (
-        surface.frames(places + np.array([h, 0]))[:, :, 0] - surface.frames(places - np.array([h, 0]))[:, :, 0]
-    ) / (2 * h)
+    turn = (surface.frames(places + np.array([h, 0]))[:, :, 0] - surface.frames(places - np.array([h, 0]))[:, :, 0]) / (
+        2 * h
+    )
     np.testing.assert_allclose(turn, surface.curvature * F[:, :, 2], atol=1e-9)
 
 
