@@ -162,9 +162,12 @@ class Comparison:
         # A prediction at a cell combines that cell with what its neighbours say; the less the cell weighs, the more
         # of what they miss stays in it.
         single = self.noise / cells.count[:, None]
-        share = single / np.maximum(single + reference.variance[cells.block], 1e-300)
-        self.missed = share**2 * reference.unresolved[cells.block]
-        self.spread = share * reference.variance[cells.block]
+        # Blocks too empty to predict carry an infinite variance; their cells are not valid.
+        error = np.where(np.isfinite(reference.variance), reference.variance, 0.0)[cells.block]
+        missed = np.where(np.isfinite(reference.unresolved), reference.unresolved, 0.0)[cells.block]
+        share = single / np.maximum(single + error, 1e-300)
+        self.missed = share**2 * missed
+        self.spread = share * error
         self.single = single
 
     def rows(self, moved: FloatArray, gate: float) -> Rows:

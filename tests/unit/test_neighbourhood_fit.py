@@ -121,8 +121,8 @@ class Patch:
         data_sd, info = np.full((g, 12), np.inf), np.zeros((g, 6))
         fit_gauges(
             self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(required)),
-            np.full(12, float(nuisance)), hold, min_cells, 5000, self.textured, key, begin, self.table()[order], np.full(g, self.gain), held, values,
-            covariance, data_sd, info,
+            np.full(12, float(nuisance)), hold, min_cells, 5000, self.textured, key, begin, self.table()[order],
+            np.full(g, self.gain), held, values, covariance, data_sd, info,
         )  # fmt: skip
         return {"values": values, "held": held, "covariance": covariance, "data_sd": data_sd, "info": info}
 
