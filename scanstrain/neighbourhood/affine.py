@@ -243,7 +243,8 @@ def _status(
     status = np.full(len(total), Status.FINE, np.uint8)
     status[moving] = Status.NOT_CONVERGED
     spread = np.sqrt(state.info[:, SCALE_NORMAL])
-    typical = np.nanmedian(spread) if np.isfinite(spread).any() else np.inf
+    # Where a scan has less noise than its model, or none at all, what is left of it says nothing.
+    typical = max(np.nanmedian(spread), 0.5) if np.isfinite(spread).any() else np.inf
     status[spread > UNEXPLAINED * typical] = Status.JOINT
     bend = np.abs(gauges.curvature[:, [0, 2]]).max(axis=1) + np.abs(gauges.curvature[:, 1])
     status[(cover < MIN_COVER) | (bend * radius > SHARPEST)] = Status.EDGE

@@ -18,7 +18,7 @@ from scanstrain.neighbourhood.warp import blend, nearest_gauges
 
 FloatArray = NDArray[np.float64]
 
-CLUTTER = 4.5
+CLUTTER = 6.0
 """Cells farther than this many standard deviations from the smooth surface are not surface."""
 NUISANCE_DISPLACEMENT = 0.01
 """What a structure may have slid in its own plane where nothing shows it [m], one standard deviation."""
