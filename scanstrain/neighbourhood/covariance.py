@@ -34,7 +34,7 @@ _FEWEST = 6
 """Blocks that a region needs before its own variogram is believed."""
 SAMPLED = 20_000
 """About so many blocks give their pairs: enough for the local variograms of any scan that fits in memory."""
-FLOOR = 1e-6
+FLOOR = 1e-4
 """Least noise variance over sill: keeps the prediction well conditioned where a scan has no noise at all."""
 _LEAST_GAMMA = 1e-6
 """Semivariance, over the scan's own variance, below which a bin gains no more weight."""
@@ -288,7 +288,9 @@ def _model(sums: FloatArray, pooled: FloatArray, region: IntArray, neighbours: I
     if structured.any() and used.sum() >= 4:
         pairs = total[used, 0]
         lag, gamma = total[used, 4] / pairs, total[used, column] / pairs
-        weight = pairs / np.maximum(gamma, 1e-300) ** 2 / lag
+        # In units of the largest semivariance, so that a scan without noise cannot make a weight infinite.
+        gamma = gamma / max(float(gamma.max()), 1e-300)
+        weight = pairs / np.maximum(gamma, _LEAST_GAMMA) ** 2 / lag
         family, length = fit_correlation(lag, total[used, 1] / pairs, gamma, weight)
     noise, sill = _local(pooled, column, family, length, structured)
     return Covariance(family, length, noise[region], sill[region])
