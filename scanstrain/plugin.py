@@ -111,12 +111,19 @@ def strain(data: Arrays, **options: Any) -> Data:
 
 def epoch_from(arrays: Any, label: str, origin: NDArray[np.float64] | None = None) -> Epoch:
     """Make an epoch from a mapping of arrays or a structured array, as of `annotate`."""
+    if not isinstance(arrays, (Mapping, np.ndarray)):
+        raise OptionError(
+            explain(label, "a mapping of arrays or a structured array", type(arrays).__name__, "name x, y and z")
+        )
     names = arrays.dtype.names if isinstance(arrays, np.ndarray) else list(arrays)
     missing = [name for name in ("x", "y", "z") if name not in (names or ())]
     if missing:
         raise OptionError(
             explain(label, "arrays x, y and z", f"no {', '.join(missing)}", "name the coordinates x, y, z")
         )
+    lengths = {name: np.shape(arrays[name]) for name in ("x", "y", "z")}
+    if len(set(lengths.values())) > 1 or len(lengths["x"]) != 1:
+        raise OptionError(explain(label, "x, y and z of one length", f"{lengths}", "give one value a point"))
     xyz = np.stack([np.asarray(arrays[name], np.float64) for name in ("x", "y", "z")], axis=1)
     extra: dict[str, Any] = {}
     for name in names or ():

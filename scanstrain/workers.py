@@ -12,6 +12,7 @@ import multiprocessing
 import os
 import signal
 import sys
+import threading
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import BrokenExecutor, ProcessPoolExecutor, as_completed
 from contextlib import contextmanager
@@ -28,6 +29,8 @@ THREAD_VARIABLES = (
     "MKL_NUM_THREADS",
 )
 
+CLEAN_UP = 3.0
+"""Time to remove half-written files [s]."""
 GRACE = 30.0
 """Time that an interrupted process gets to clean up [s]: longer than any compiled loop runs between two looks."""
 
@@ -95,6 +98,7 @@ def _end(processes: set[BaseProcess]) -> None:
     for process in processes:
         process.join(GRACE)
         process.kill()
+        process.join()
 
 
 def _begin() -> None:
@@ -105,4 +109,8 @@ def _begin() -> None:
 
 
 def _stop(number: int, _frame: object) -> None:
+    """Unwind what runs, so that it cleans up, and end soon even if the pool's loop takes that for a failed task."""
+    end = threading.Timer(CLEAN_UP, os._exit, [128 + number])
+    end.daemon = True
+    end.start()
     sys.exit(128 + number)

@@ -195,7 +195,7 @@ def _resolution(reference: Epoch, current: Epoch, gauge_length: float, resolutio
         raise OptionError(
             explain(
                 "gauge_length",
-                f"at least 8 point spacings ({8 * spacing:.3f} m here)",
+                f"more than 8 point spacings ({8 * spacing:.4f} m here)",
                 f"{gauge_length} m",
                 "use a longer gauge",
             )

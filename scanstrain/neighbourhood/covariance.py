@@ -34,7 +34,7 @@ _FEWEST = 6
 """Blocks that a region needs before its own variogram is believed."""
 SAMPLED = 20_000
 """About so many blocks give their pairs: enough for the local variograms of any scan that fits in memory."""
-FLOOR = 1e-4
+FLOOR = 1e-6
 """Least noise variance over sill: keeps the prediction well conditioned where a scan has no noise at all."""
 _LEAST_GAMMA = 1e-6
 """Semivariance, over the scan's own variance, below which a bin gains no more weight."""

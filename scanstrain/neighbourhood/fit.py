@@ -32,6 +32,9 @@ ROUNDS = 2
 """Solutions a comparison, each with weights from the residuals of the one before."""
 SAME_SHEET = 0.8
 """Cosine between a cell's normal and the gauge's above which the cell is on the gauge's sheet (37 degrees)."""
+LEAST_SCALE = 0.1
+"""Least variance factor: where residuals fall far below the noise model, the two scans share points, and their
+agreement is no measure of error."""
 COVER_BINS = 10
 """Squares across a gauge in which its cover is counted."""
 _DISC_BINS = 80.0
@@ -195,7 +198,7 @@ def reweight(
         w[r] = k / variance[r]
         total += k
         weighted += k * e[r] * e[r]
-    return max(weighted / max(total - spent, 1.0) / TUKEY_SHRINK, 1e-12)
+    return max(weighted / max(total - spent, 1.0) / TUKEY_SHRINK, LEAST_SCALE)
 
 
 @numba.njit(cache=True, nogil=True)

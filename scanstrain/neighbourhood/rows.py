@@ -23,6 +23,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 
+LEAST_NOISE = 5e-5
+"""Noise of a single height that is assumed at least [m]: no scanner does better, rounding in the file does worse."""
+
+
 @dataclass(frozen=True, slots=True)
 class Rows:
     """One surface row and one intensity row per reference cell, linearised at the motion `moved`.
@@ -177,6 +181,7 @@ class Comparison:
         variance = rows.variance
         variance[:, :2] += self.missed
         variance[:, 2:] += self.spread - self.single
+        variance[:, 0::2] += (LEAST_NOISE**2 / self.cells.count)[:, None]
         return replace(
             rows,
             valid=rows.valid & self.own_valid & (np.abs(misfit) < gate),

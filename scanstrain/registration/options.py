@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.epoch import MIN_POINTS, Epoch
-from scanstrain.errors import OptionError, explain
+from scanstrain.errors import OptionError, OverlapError, explain
 from scanstrain.registration.rigid import is_rigid
 from scanstrain.registry import unknown_name
 
@@ -82,12 +82,12 @@ def _check_frames(reference: Epoch, current: Epoch) -> None:
     for epoch in (reference, current):
         largest = float(np.abs(epoch.points).max()) if len(epoch) else 0.0
         if not largest <= MAX_COORDINATE:
-            raise OptionError(
+            raise OverlapError(
                 explain(
                     f"registration: {epoch.label or 'epoch'}",
-                    f"local coordinates within {MAX_COORDINATE:.0f} m of the shared origin",
-                    f"{largest:.6g} m",
-                    "shift both epochs to an origin on the object",
+                    f"both scans within {MAX_COORDINATE:.0f} m of one place",
+                    f"points {largest:.6g} m from the middle of the reference",
+                    "check that both are in the same coordinate system and unit",
                 )
             )
 

@@ -144,7 +144,7 @@ def _warnings(factors: dict[str, dict[str, float]], established: bool) -> tuple[
         said.append(
             "Less than half of the surface could be established as stable ground, so the typical change of the whole "
             "surface was taken as the error of the survey: only changes that stand out from it count as significant. "
-            "Name stable ground, or scan control, to judge the rest."
+            "Include ground that is known not to have moved in both scans to judge the rest."
         )
     worst = {name: max(each[name] for each in factors.values()) for name in GROUPS}
     large = [f"{name} x {factor:.1f}" for name, factor in worst.items() if factor > 1.5]

@@ -224,7 +224,7 @@ def test_order_of_points_does_not_matter(pair, resolution):
 @pytest.mark.parametrize(
     ("options", "said"),
     [
-        ({"gauge_length": 0.03}, "at least 8 point spacings"),
+        ({"gauge_length": 0.03}, "more than 8 point spacings"),
         ({"gauge_length": 3.0}, "no more than the object"),
     ],
 )

@@ -247,5 +247,5 @@ def test_frames_must_be_shared_and_local():
     a, far = epoch(points), epoch(points + np.array([482_310, 5_391_270, 0]))
     with pytest.raises(OptionError, match="one local frame"):
         register(a, replace(a, origin=np.ones(3)))
-    with pytest.raises(OptionError, match="within 10000 m"):
+    with pytest.raises(OverlapError, match="within 10000 m"):
         register(far, far)
