@@ -33,8 +33,8 @@ ROUNDS = 2
 SAME_SHEET = 0.8
 """Cosine between a cell's normal and the gauge's above which the cell is on the gauge's sheet (37 degrees)."""
 LEAST_SCALE = 0.1
-"""Least variance factor: where residuals fall far below the noise model, the two scans share points, and their
-agreement is no measure of error."""
+"""Least variance factor that a standard error may rest on: where residuals fall farther below the noise model, the two
+scans share points, and their agreement is no measure of error."""
 COVER_BINS = 10
 """Squares across a gauge in which its cover is counted."""
 _DISC_BINS = 80.0
@@ -198,7 +198,7 @@ def reweight(
         w[r] = k / variance[r]
         total += k
         weighted += k * e[r] * e[r]
-    return max(weighted / max(total - spent, 1.0) / TUKEY_SHRINK, LEAST_SCALE)
+    return max(weighted / max(total - spent, 1.0) / TUKEY_SHRINK, 1e-12)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -235,15 +235,15 @@ def _held_solution(N: FloatArray, b: FloatArray, n: int, start_values: FloatArra
 
 @numba.njit(cache=True, nogil=True)
 def _final_solution(
-    N: FloatArray, b: FloatArray, n: int, required: FloatArray, nuisance: FloatArray, values: FloatArray,
-    covariance: FloatArray, data_sd: FloatArray,
+    N: FloatArray, b: FloatArray, n: int, inflate: float, required: FloatArray, nuisance: FloatArray,
+    values: FloatArray, covariance: FloatArray, data_sd: FloatArray,
 ) -> None:  # fmt: skip
     """Standard errors from the data alone, then the solution with bounds on what they do not determine."""
     Q = np.zeros((UNKNOWNS, UNKNOWNS))
     if not inverse(N, n, Q):
         return
     for i in range(MOTION):
-        data_sd[i] = np.sqrt(Q[i, i] * TUKEY_INFLATE)
+        data_sd[i] = np.sqrt(Q[i, i] * inflate)
         if not data_sd[i] <= required[i]:
             N[i, i] += 1.0 / nuisance[i] ** 2
     if not inverse(N, n, Q):
@@ -253,7 +253,7 @@ def _final_solution(
         for j in range(n):
             v += Q[i, j] * b[j]
         values[i] = v
-    covariance[:, :] = Q[:MOTION, :MOTION] * TUKEY_INFLATE
+    covariance[:, :] = Q[:MOTION, :MOTION] * inflate
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)
@@ -317,7 +317,8 @@ def fit_gauges(
         if not solved:
             continue
         held[g] = x[:MOTION]
-        _final_solution(N, b, n, required, nuisance, values[g], covariance[g], data_sd[g])
+        inflate = TUKEY_INFLATE * max(1.0, LEAST_SCALE / (scales.min() if textured else scales[0]))
+        _final_solution(N, b, n, inflate, required, nuisance, values[g], covariance[g], data_sd[g])
         info[g, SCALE_NORMAL] = scales[0]
         if textured:
             info[g, SCALE_GREY] = scales[1]

@@ -8,7 +8,7 @@ import pytest
 
 from scanstrain.cells import group, tangents, voxel_keys
 from scanstrain.neighbourhood import fit
-from scanstrain.neighbourhood.fit import LEAST_SCALE, ROUNDS, TUKEY, TUKEY_INFLATE, TUKEY_SHRINK, fit_gauges
+from scanstrain.neighbourhood.fit import ROUNDS, TUKEY, TUKEY_INFLATE, TUKEY_SHRINK, fit_gauges
 from scanstrain.neighbourhood.solve import accumulate, inverse
 
 RADIUS = 0.3
@@ -132,7 +132,7 @@ def test_patch_test_exact_rows_give_the_exact_motion():
     patch = Patch()
     result = patch.run()
     np.testing.assert_allclose(result["values"][0], patch.values, atol=1e-10 * RADIUS)
-    np.testing.assert_allclose(result["info"][0, 3:5], LEAST_SCALE)
+    assert (result["info"][0, 3:5] < 1e-6).all()
 
 
 def test_patch_test_holds_from_every_gauge():
