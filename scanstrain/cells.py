@@ -15,8 +15,6 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.epoch import Epoch
-
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
@@ -27,7 +25,6 @@ prediction need, narrow enough that curvature stays small inside one."""
 KEY_BITS = 20
 """Bits of one coordinate in a packed voxel index: neighbours are found by adding (i << 2 bits) + (j << bits) + k."""
 _BIAS = 1 << (KEY_BITS - 1)
-_MASK = (1 << KEY_BITS) - 1
 _KEY_LIMIT = _BIAS - 2
 
 
@@ -334,11 +331,6 @@ def make_cells(points: FloatArray, resolution: float, *, intensity: NDArray[np.f
         count=count,
         block=cell_block,
     )
-
-
-def cells_of(epoch: Epoch, resolution: float) -> Cells:
-    """Build the cells of an epoch, with its intensity where it has one."""
-    return make_cells(epoch.points, resolution, intensity=epoch.intensity)
 
 
 def median_spacing(points: FloatArray, *, sample: int = 5000) -> float:

@@ -82,7 +82,7 @@ def fit_affine(
 
     Minimises, per gauge, the weighted squares of two kinds of misfit: the height of every moved reference cell over
     the current surface, and the difference of its intensity from the predicted one up to a local gain and offset.
-    Surface and intensity of the current epoch are best linear predictions with covariances measured on the scan.
+    Surface and intensity of both epochs are best linear predictions with covariances measured on the scans.
     Displacements larger than the texture's own width are reached over a pyramid of coarser cells.
 
     Parameters

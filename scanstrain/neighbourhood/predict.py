@@ -1,8 +1,8 @@
 # SPDX-License-Identifier: MIT
-"""Best linear prediction of the current epoch's height and intensity, block by block.
+"""Best linear prediction of an epoch's height and intensity, block by block.
 
 Every block solves two small kriging systems (height over the smooth surface; intensity), with an unknown constant,
-from the cells of the block and a margin around it. The solution depends only on the current epoch, so predicting
+from the cells of the block and a margin around it. The solution depends only on its own epoch, so predicting
 at a moved point costs one pass over the block's cells, however often the fit iterates. The gradient comes from the
 same weights: being a prediction (Berkson type) and not a measurement of the slope, it does not dilute the regression
 on it (Rasmussen & Williams 2006, ch. 2 and 9.4; Carroll et al. 2006 for the error type).
@@ -251,7 +251,7 @@ def build_predictor(
     Parameters
     ----------
     cells, surface
-        The current epoch and its smooth surface at the blocks.
+        An epoch and its smooth surface at the blocks.
     height, intensity : Covariance
         Measured covariances; without `intensity` only height is predicted.
     gate : float

@@ -6,8 +6,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from scanstrain.cells import BLOCK_WIDTH, cells_of, find_block, group, make_cells, median_spacing, tangents, voxel_keys
-from scanstrain.epoch import make_epoch
+from scanstrain.cells import BLOCK_WIDTH, find_block, group, make_cells, median_spacing, tangents, voxel_keys
 
 TILTED = np.linalg.qr(np.array([[0.8, 0.1, 0.3], [-0.2, 0.9, 0.2], [0.1, -0.3, 0.9]]))[0]
 """An orthonormal frame; its last column is the normal of the test plane."""
@@ -138,13 +137,12 @@ def test_spacing_counts_duplicates_once():
     assert median_spacing(np.zeros((200, 3))) == 0.0
 
 
-def test_cells_of_an_epoch_carry_its_intensity():
+def test_cells_carry_intensity_where_there_is_one():
     points = plane(500)
-    epoch = make_epoch(points, intensity=np.full(500, 7.0, np.float32))
-    cells = cells_of(epoch, 0.1)
+    cells = make_cells(points, 0.1, intensity=np.full(500, 7.0, np.float32))
     assert cells.block_size == pytest.approx(BLOCK_WIDTH * 0.1)
     np.testing.assert_allclose(cells.intensity, 7.0)
-    assert cells_of(make_epoch(points), 0.1).intensity is None
+    assert make_cells(points, 0.1).intensity is None
 
 
 def test_survey_coordinates_are_refused_as_local_ones():
