@@ -89,6 +89,7 @@ ATTRIBUTES: tuple[Attribute, ...] = (
     Attribute("discovery", "1", "code", "1 = change survives FDR control", "uint8"),
     Attribute("observed", "1", "code", "bits n tilt curv u v strain spin", "uint8"),
     Attribute("status", "1", "code", "0 fine, else a reason code", "uint8"),
+    Attribute("stable", "1", "code", "1 = used as stable ground", "uint8"),
     Attribute("gauge_points", "1", "code", "reference points in the fit", "uint16"),
 )
 

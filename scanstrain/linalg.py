@@ -159,3 +159,47 @@ def rotation_vector(R: FloatArray) -> FloatArray:
     angle = 2.0 * np.arctan2(sine, q[..., 3])
     tiny = sine < 1e-150
     return np.asarray(q[..., :3] * np.where(tiny, 2.0, angle / np.where(tiny, 1.0, sine))[..., None])
+
+
+def at_least(covariance: FloatArray, floor: FloatArray) -> FloatArray:
+    """Raise a covariance to a floor in every direction, and leave it where it is larger.
+
+    Examples
+    --------
+    >>> at_least(np.diag([4.0, 1.0]), np.diag([2.0, 3.0])).round(12)
+    array([[4., 0.],
+           [0., 3.]])
+    """
+    values, vectors = np.linalg.eigh(floor)
+    root = vectors * np.sqrt(np.maximum(values, 1e-14 * max(values[-1], 1e-30)))
+    white = np.linalg.inv(root)
+    size, turn = np.linalg.eigh(white @ covariance @ white.T)
+    back = root @ turn
+    return np.asarray((back * np.maximum(size, 1.0)) @ back.T)
+
+
+def leave_one_out(information: FloatArray, score: FloatArray) -> FloatArray:
+    """Covariance of a least-squares estimate from what each part of the data contributes to it.
+
+    Leaving part P out changes the estimate by `(N - N_P)^-1 g_P` exactly; the sum of squares of these changes, times
+    (G - 1)/G, is the covariance, whatever the correlation inside a part (jackknife, the CR3 form of a cluster-robust
+    sandwich).
+
+    Parameters
+    ----------
+    information : ndarray of shape (G, k, k)
+        Normal matrix N_P of each part.
+    score : ndarray of shape (G, k)
+        g_P: weighted sum of rows times residuals at the estimate.
+
+    Returns
+    -------
+    ndarray of shape (k, k)
+    """
+    N = information.sum(axis=0)
+    left = N - information
+    # A part without which the rest fixes nothing cannot be left out: its own share counts as it stands.
+    alone = np.linalg.eigvalsh(left)[:, 0] < 1e-3 * np.linalg.eigvalsh(N)[0]
+    left[alone] = N
+    change = np.linalg.solve(left, score[..., None])[..., 0]
+    return np.asarray(change.T @ change * (len(score) - 1) / len(score))

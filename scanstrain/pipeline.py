@@ -14,8 +14,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.config import CompareConfig, config_from_options
+from scanstrain.datum import check_setups, datum_options
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
+from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.result import Result
 
 FloatArray = NDArray[np.float64]
@@ -106,8 +108,11 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
     options = config.neighbourhood
     gauge_length = _number(options.gauge_length) or auto_gauge_length(reference, current)
     axis = tunnel_axis(reference, gauge_length) if config.strain.structure == "tunnel" else None
+    with clock.stage("set-ups", 0.08):
+        reference, own_seams, own_doubts = check_setups(reference, align=config.registration.align_setups)
+        current, seams, more_doubts = check_setups(current, align=config.registration.align_setups)
     with clock.stage("registration", 0.1):
-        registration = register(reference, current, **config.registration.model_dump())
+        registration = register(reference, current, **datum_options(reference, config))
     with clock.stage("neighbourhood", 0.3):
         affine = fit_affine(
             reference,
@@ -133,11 +138,24 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
             thickness=config.strain.thickness,
             axis=axis,
             false_discovery_rate=config.strain.false_discovery_rate,
+            stable=calibration.steady,
         )
+        bodies = bodies_of(affine, registration, gauges_of_zones(affine, reference, config, None))
     with clock.stage("points", 0.85):
         points = blend_to_points(strain, reference.points)
+        points["stable"] = registration.stable.astype(np.uint8)
     clock.say("done", 1.0)
-    said = (*notices, *registration.warnings, *affine.warnings, *doubts, *strain.warnings)
+    targets = registration.targets.warnings if registration.targets else ()
+    said = (
+        *notices,
+        *own_doubts,
+        *more_doubts,
+        *targets,
+        *registration.warnings,
+        *affine.warnings,
+        *doubts,
+        *strain.warnings,
+    )
     return Result(
         reference,
         current,
@@ -149,6 +167,8 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         config,
         clock.seconds,
         tuple(dict.fromkeys(said)),
+        bodies=bodies,
+        seams={"reference": own_seams, "current": seams},
     )
 
 

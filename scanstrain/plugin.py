@@ -100,11 +100,13 @@ def strain(data: Arrays, **options: Any) -> Data:
     reference, _ = _epochs(data)
     datum = None
     if "registration" in data:
-        weak = tuple(WeakDirection(**w) for w in data["registration"]["weak_directions"])
-        datum = Registration(**{**data["registration"], "weak_directions": weak})
+        named = ("weak_directions", "texture_directions")
+        directions = {name: tuple(WeakDirection(**w) for w in data["registration"][name]) for name in named}
+        datum = Registration(**{**data["registration"], **directions})
     field = AffineField(**data["field"])
     if datum is not None:
-        field, _, _ = calibrate(field, datum, reference.points)
+        field, calibration, _ = calibrate(field, datum, reference.points)
+        options = {"stable": calibration.steady, **options}
     result = compute_strain(field, registration=datum, **options)
     return {**data, "gauges": dict(result.values), "points": blend_to_points(result, reference.points)}
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from dataclasses import field as default
 from typing import Any
 
 import numpy as np
@@ -13,6 +14,8 @@ from numpy.typing import NDArray
 from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.result import AffineField
 from scanstrain.registration.result import Registration
+from scanstrain.registration.seams import Seam
+from scanstrain.strain.bodies import BodyMotion
 from scanstrain.strain.calibration import Calibration
 from scanstrain.strain.result import StrainField
 
@@ -44,6 +47,10 @@ class Result:
         Seconds per stage.
     warnings : tuple of str
         Sentences for the user, in the order in which they arose.
+    bodies : tuple of BodyMotion
+        Rigid motion after registration of the whole object and of each zone.
+    seams : mapping of str to tuple of Seam
+        For "reference" and "current": how the set-ups of the epoch lie against one another.
     """
 
     reference: Epoch
@@ -56,6 +63,8 @@ class Result:
     config: Any
     timing: Mapping[str, float]
     warnings: tuple[str, ...] = ()
+    bodies: tuple[BodyMotion, ...] = ()
+    seams: Mapping[str, tuple[Seam, ...]] = default(default_factory=dict)
 
     @property
     def gauge_positions(self) -> FloatArray:

@@ -17,7 +17,7 @@ from scanstrain.result import Result
 from scanstrain.strain.calibration import GROUPS, KINDS, Calibration
 from scanstrain.strain.result import StrainField
 
-CALIBRATION = Calibration({kind: dict.fromkeys(GROUPS, 1.0) for kind in KINDS}, "none", 0)
+CALIBRATION = Calibration({kind: dict.fromkeys(GROUPS, 1.0) for kind in KINDS}, "none", 0, np.zeros(12, bool))
 ORIGIN = np.array([482310.0, 5391270.0, 100.0])
 IN_PLANE = [name for name in (a.name for a in ATTRIBUTES) if name.startswith(("strain", "shear", "dilation", "spin"))]
 # gauges 0..11 along the wall; gauge 11 failed, gauges 6..11 see no texture, gauges 0..2 moved
@@ -44,6 +44,7 @@ def _values(g):
     values["discovery"] = (np.arange(g) < 3).astype(np.uint8)
     values["observed"] = np.array([127] * 6 + [7] * 5 + [0], np.uint8)
     values["status"] = np.array([0] * 11 + [Status.EDGE], np.uint8)
+    values["stable"] = (np.arange(g) > 5).astype(np.uint8)
     values["gauge_points"] = np.full(g, 400, np.uint16)
     return values
 

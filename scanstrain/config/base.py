@@ -3,6 +3,7 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Annotated, Literal
 
 from pydantic import BaseModel, ConfigDict, Field, Strict
@@ -10,6 +11,7 @@ from pydantic import BaseModel, ConfigDict, Field, Strict
 Auto = Literal["auto"]
 Finite = Annotated[float, Field(strict=True, allow_inf_nan=False)]
 Positive = Annotated[float, Field(strict=True, gt=0, allow_inf_nan=False)]
+FilePath = Annotated[Path, Strict(False)]
 # TOML has lists only, so the containers are read leniently and their numbers strictly.
 Point = Annotated[tuple[Finite, Finite, Finite], Strict(False)]
 Limits = Annotated[tuple[Finite, Finite], Strict(False)]

@@ -12,13 +12,12 @@ from typing import Annotated, Literal
 
 from pydantic import Field, Strict, ValidationInfo, field_validator
 
-from scanstrain.config.base import Options
+from scanstrain.config.base import FilePath, Options
 from scanstrain.config.faults import Fault, contradiction, refuse, refuse_all
 from scanstrain.config.models import CompareConfig
 from scanstrain.config.output import OutputOptions
 
 LABEL = r"^\w[\w.-]*$"
-FilePath = Annotated[Path, Strict(False)]
 
 
 class EpochEntry(Options):
@@ -106,14 +105,22 @@ class BatchConfig(CompareConfig):
         """Return what a single comparison needs of this file."""
         output = OutputOptions(**self.output.model_dump(exclude={"folder"}))
         return CompareConfig(
-            registration=self.registration, neighbourhood=self.neighbourhood, strain=self.strain, output=output
+            registration=self.registration,
+            neighbourhood=self.neighbourhood,
+            strain=self.strain,
+            output=output,
+            zone=self.zone,
         )
 
     def placed(self, base: Path) -> BatchConfig:
         """Return the same batch with relative paths starting at the folder `base`."""
         epochs = tuple(entry.model_copy(update={"file": placed_at(base, entry.file)}) for entry in self.epoch)
         output = self.output.model_copy(update={"folder": placed_at(base, self.output.folder)})
-        return self.model_copy(update={"epoch": epochs, "output": output})
+        registration = self.registration
+        if registration.start_file is not None:
+            start_file = placed_at(base, registration.start_file)
+            registration = registration.model_copy(update={"start_file": start_file})
+        return self.model_copy(update={"epoch": epochs, "output": output, "registration": registration})
 
 
 def placed_at(base: Path, path: Path) -> Path:

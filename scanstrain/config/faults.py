@@ -73,11 +73,16 @@ def find_faults(model: type[BaseModel], data: Mapping[str, Any]) -> list[Fault]:
     """
     found: dict[Location, Fault] = {}
     rest = copy.deepcopy(dict(data))
-    while fresh := [fault for fault in _faults(model, rest) if fault.location not in found]:
+    while fresh := [fault for fault in _faults(model, rest) if not _known(fault.location, found)]:
         for fault in fresh:
             found.setdefault(fault.location, fault)
             _take_out(model, rest, fault.location)
     return list(found.values())
+
+
+def _known(location: Location, found: Mapping[Location, Fault]) -> bool:
+    """Whether a place was found faulty already, or holds what was: taking that out may leave too little."""
+    return any(other == location or _inside(other, location) for other in found)
 
 
 def _faults(model: type[BaseModel], data: Mapping[str, Any]) -> list[Fault]:
@@ -199,9 +204,7 @@ def _words(schema: Mapping[str, Any]) -> str:
     if kind in ("number", "integer"):
         return _number(schema)
     if kind == "array":
-        items = schema.get("prefixItems")
-        least = f"at least {schema['minItems']} tables" if "minItems" in schema else "tables"
-        return f"a list of {len(items)} numbers" if items else f"{least}, each under its own [[...]] line"
+        return _list(schema)
     if form == "date":
         return "a date without quotes, such as 2031-03-04"
     if kind == "boolean":
@@ -211,6 +214,21 @@ def _words(schema: Mapping[str, Any]) -> str:
     if kind == "string":
         return "a path in quotes" if form == "path" else "text in quotes"
     return "a table"
+
+
+def _list(schema: Mapping[str, Any]) -> str:
+    fixed = schema.get("prefixItems")
+    inner = (fixed or [schema.get("items", {})])[0]
+    kinds = {
+        "number": "numbers",
+        "integer": "whole numbers",
+        "string": "names in quotes",
+        "array": "corners in brackets",
+    }
+    least = f"at least {schema['minItems']} " if "minItems" in schema and not fixed else ""
+    if inner.get("type") in kinds:
+        return f"a list of {len(fixed) if fixed else least}{' ' if fixed else ''}{kinds[inner['type']]}"
+    return f"{least}tables, each under its own [[...]] line"
 
 
 def _number(schema: Mapping[str, Any]) -> str:

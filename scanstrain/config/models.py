@@ -3,24 +3,35 @@
 
 from __future__ import annotations
 
-from typing import ClassVar, Literal
+import difflib
+from typing import Annotated, ClassVar, Literal
 
-from pydantic import Field, ValidationInfo, field_validator
+from pydantic import Field, Strict, ValidationInfo, field_validator, model_validator
 
-from scanstrain.config.base import Auto, Options, Point, Positive
-from scanstrain.config.faults import refuse
+from scanstrain.config.base import Auto, FilePath, Options, Point, Positive
+from scanstrain.config.faults import contradiction, refuse, refuse_all
 from scanstrain.config.output import OutputOptions
+from scanstrain.config.zone import ZoneEntry, repeated_names
+from scanstrain.zones import Zone
+
+Names = Annotated[tuple[str, ...], Strict(False)]
 
 
 class RegistrationOptions(Options):
     """How the current epoch is brought into the reference frame."""
 
-    start: Literal["auto", "identity", "coarse"] = Field(
+    start: Literal["auto", "identity", "coarse", "file", "targets"] = Field(
         default="auto",
-        description="Where the alignment begins: identity takes the coordinates as they are, coarse "
-        "searches by surface features. Default auto: identity if the clouds already overlap "
-        "within the capture range, because a search can only lose what a survey frame already "
-        "gives.",
+        description="Where the alignment begins: identity takes the coordinates as they are, coarse searches by "
+        "surface features, file takes a known motion and targets fits pairs of named points, both from start_file. "
+        "Default auto: identity if the clouds already overlap within the capture range, because a search can only "
+        "lose what a survey frame already gives.",
+    )
+    start_file: FilePath | None = Field(
+        default=None,
+        examples=["targets.csv"],
+        description='For start = "file" a 4x4 matrix in a text file or a registered.json; for start = "targets" a '
+        "CSV of pairs of points. A relative path starts at this configuration file. No default: other starts need none.",
     )
     capture_range: Positive = Field(
         default=0.3,
@@ -33,6 +44,25 @@ class RegistrationOptions(Options):
         description="Ground taken as not moved: auto finds it by leaving out patches that moved, all uses "
         "everything. Default auto, because ground that moved and is used as stable hides "
         "movement.",
+    )
+    stable_zones: Names = Field(
+        default=(),
+        description="Names of zones that did not move; nothing else is then used as stable ground. No default: "
+        "only somebody who knows the site can say so.",
+    )
+    excluded_zones: Names = Field(
+        default=(),
+        description="Names of zones that are never used as stable ground. No default: all ground may be judged.",
+    )
+    datum_from_intensity: bool = Field(
+        default=True,
+        description="Let the returned intensity fix motions that the surfaces leave open, such as a slide along a "
+        "tunnel. Default true: what it cannot fix stays open and is named.",
+    )
+    align_setups: bool = Field(
+        default=False,
+        description="Bring the set-ups inside each epoch together before anything else. Default false: seams are "
+        "reported, and moving part of a delivered scan is the user's decision.",
     )
     seed: int = Field(
         default=0,
@@ -149,6 +179,47 @@ class CompareConfig(Options):
     neighbourhood: NeighbourhoodOptions = Field(default=NeighbourhoodOptions(), description="Gauges and their fit.")
     strain: StrainOptions = Field(default=StrainOptions(), description="Strain, rotation, significance.")
     output: OutputOptions = Field(default=OutputOptions(), description="Colours and missing values.")
+    zone: Annotated[tuple[ZoneEntry, ...], Strict(False)] = Field(
+        default=(), description="Named parts of the object, for stable ground and for results by zone."
+    )
+
+    @field_validator("registration")
+    @classmethod
+    def _start_and_its_file(cls, value: RegistrationOptions) -> RegistrationOptions:
+        needs = value.start in ("file", "targets")
+        if needs and value.start_file is None:
+            refuse(f'start_file, for start = "{value.start}"', "none", "name the file", key=("start",))
+        if value.start_file is not None and not needs:
+            got = f'start = "{value.start}"'
+            refuse('start = "file" or "targets", to use start_file', got, "set it", key=("start_file",))
+        if value.stable == "all" and value.stable_zones:
+            got = 'stable = "all" beside stable_zones'
+            refuse("one statement of what is stable", got, "remove one of the two", key=("stable",))
+        return value
+
+    @field_validator("zone")
+    @classmethod
+    def _different_names(cls, value: tuple[ZoneEntry, ...]) -> tuple[ZoneEntry, ...]:
+        refuse_all(list(repeated_names(value)))
+        return value
+
+    @model_validator(mode="after")
+    def _zones_that_exist(self) -> CompareConfig:
+        known = [zone.name for zone in self.zone]
+        faults = []
+        for key in ("stable_zones", "excluded_zones"):
+            for name in getattr(self.registration, key):
+                if name not in known:
+                    near = difflib.get_close_matches(name, known, n=1)
+                    remedy = f"did you mean {near[0]!r}" if near else "add a [[zone]] of that name"
+                    location = ("registration", key)
+                    faults.append(contradiction("the name of a [[zone]]", repr(name), remedy, key=location))
+        refuse_all(faults)
+        return self
+
+    def zones(self, names: tuple[str, ...] | None = None) -> tuple[Zone, ...]:
+        """Return zones by name, or all of them."""
+        return tuple(entry.zone() for entry in self.zone if names is None or entry.name in names)
 
     @field_validator("output")
     @classmethod

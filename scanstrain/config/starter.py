@@ -18,10 +18,14 @@ from pydantic.fields import FieldInfo
 
 from scanstrain.config.batch_file import BatchConfig
 from scanstrain.config.faults import required
+from scanstrain.config.zone import ZoneEntry
 from scanstrain.errors import OptionError, OutputError, explain
 
 PLACEHOLDERS = ("first_scan.laz", "second_scan.laz")
 """Files that a starter names when it is given none; a check lets them pass with a word."""
+
+LISTS = ("epoch", "comparison", "zone")
+"""Tables that may stand several times."""
 
 WIDTH = 100
 """Longest comment line [characters]."""
@@ -64,7 +68,7 @@ def starter_text(
     """
     values = {"comparisons": "first", "folder": folder, **(chosen or {})}
     epochs = epochs or [StarterEpoch("first", PLACEHOLDERS[0]), StarterEpoch("second", PLACEHOLDERS[1])]
-    tables = {name: field for name, field in BatchConfig.model_fields.items() if name not in ("epoch", "comparison")}
+    tables = {name: field for name, field in BatchConfig.model_fields.items() if name not in LISTS}
     lines = [*_comment(heading), ""]
     for name, field in tables.items():
         if _table(field) is None:
@@ -76,6 +80,7 @@ def starter_text(
             for option in model.model_fields:
                 lines += [*_option(model, option, values), ""]
             lines.pop()
+    lines += ["", *_zone()]
     return "\n".join(lines) + "\n"
 
 
@@ -143,4 +148,13 @@ def _epochs(epochs: Sequence[StarterEpoch]) -> list[str]:
         lines += [f"date = {epoch.date.isoformat()}" if epoch.date else "#date = 2031-03-04", ""]
     lines += _comment("Chosen pairs, in place of `comparisons` above:")
     lines += ["#[[comparison]]", f'#reference = "{epochs[0].label}"', f'#current = "{epochs[1].label}"']
+    return lines
+
+
+def _zone() -> list[str]:
+    lines = _comment(str(BatchConfig.model_fields["zone"].description))
+    lines += ["#[[zone]]", '#name = "abutment"']
+    for name, field in ZoneEntry.model_fields.items():
+        if field.examples:
+            lines += [*_comment(str(field.description)), f"#{name} = {json.dumps(field.examples[0])}"]
     return lines

@@ -14,8 +14,19 @@ from scanstrain.io.formats import FORMATS, format_of
 from scanstrain.io.frames import check_same_frame
 from scanstrain.io.las_result import read_result_cloud, write_result_cloud
 from scanstrain.io.stored import expand_to_file
+from scanstrain.io.targets import read_targets
+from scanstrain.io.transform import read_transform
 
-__all__ = ["FORMATS", "check_same_frame", "expand_to_file", "read_result_cloud", "read_scan", "write_result_cloud"]
+__all__ = [
+    "FORMATS",
+    "check_same_frame",
+    "expand_to_file",
+    "read_result_cloud",
+    "read_scan",
+    "read_targets",
+    "read_transform",
+    "write_result_cloud",
+]
 
 
 def read_scan(path: str | Path, *, origin: ArrayLike | None = None, label: str | None = None) -> Epoch:

@@ -18,7 +18,7 @@ from scanstrain.result import Result
 
 Numbers = NDArray[np.float64]
 STATISTICS = {"minimum": 0.0, "p05": 0.05, "median": 0.5, "p95": 0.95, "maximum": 1.0}
-_CODES = ("status", "observed", "discovery")
+_CODES = ("status", "observed", "discovery", "stable")
 
 
 def attribute_statistics(result: Result) -> dict[str, dict[str, Any]]:

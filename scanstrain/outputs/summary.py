@@ -5,6 +5,7 @@ from __future__ import annotations
 
 import platform
 import sys
+from dataclasses import fields
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
@@ -15,11 +16,13 @@ from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.result import Status
 from scanstrain.outputs.cautions import cautions
 from scanstrain.outputs.findings import verdict
+from scanstrain.outputs.motions import body_numbers, directions, seam_numbers, target_numbers
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.registered import rigid_motion
 from scanstrain.outputs.statistics import attribute_statistics
 from scanstrain.outputs.strict import plain, write_json
 from scanstrain.outputs.words import OBSERVED_WORDS, status_word
+from scanstrain.registration.result import Registration
 from scanstrain.result import Result
 
 __all__ = ["summary", "verdict", "write_summary"]
@@ -50,9 +53,9 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
     strain = result.strain
     content = {
         "registration": _registration(result),
-        # the motion of each body after registration needs zones
-        "rigid_motion": {},
+        "rigid_motion": {body.name: body_numbers(body, result.reference.origin) for body in result.bodies},
         "gauges": _gauges(result),
+        "setups": {epoch: [seam_numbers(seam) for seam in seams] for epoch, seams in result.seams.items()},
         "calibration": {
             "factors": result.calibration.factors,
             "ground": result.calibration.ground,
@@ -82,17 +85,23 @@ def _registration(result: Result) -> dict[str, Any]:
         **rigid_motion(registration),
         "rms": registration.rms,
         "stable_fraction": registration.stable_fraction,
+        "stable_ground": _ground(registration),
         "overlap": registration.overlap,
-        "weak_directions": [
-            {"description": weak.description, "vector": weak.vector, "sd": weak.sd}
-            for weak in registration.weak_directions
-        ],
+        "weak_directions": directions(registration.weak_directions),
+        "texture_directions": directions(registration.texture_directions),
+        "targets": None if registration.targets is None else target_numbers(registration.targets),
         "converged": registration.converged,
         "iterations": registration.iterations,
         "start": registration.start,
         "scale_ppm": registration.scale_ppm,
         "scale_ppm_sd": registration.scale_ppm_sd,
     }
+
+
+def _ground(registration: Registration) -> dict[str, Any] | None:
+    """What the datum stands on; the second best choice with its effect at the worst place [m]."""
+    ground = registration.ground
+    return None if ground is None else {field.name: getattr(ground, field.name) for field in fields(ground)}
 
 
 def _gauges(result: Result) -> dict[str, Any]:

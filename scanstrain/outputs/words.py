@@ -51,6 +51,7 @@ TITLES: dict[str, tuple[str, str]] = {
     "discovery": ("Places that changed", "false-discovery control over the whole map"),
     "observed": ("Observed components", "of normal and two in-plane displacements, tilt, curvature, strain, spin"),
     "status": ("Status", "why a place has no number"),
+    "stable": ("Stable ground", "places that the registration stands on"),
     "gauge_points": ("Points behind each gauge", "reference points used by the local fit"),
 }
 """Title in words and what the number means, for every attribute."""

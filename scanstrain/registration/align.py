@@ -9,24 +9,22 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.epoch import Epoch
-from scanstrain.errors import RegistrationError, explain
+from scanstrain.errors import OverlapError, RegistrationError, explain
 from scanstrain.registration.coarse import choose_start, refuse_apart, settle, to_grid
-from scanstrain.registration.fit import align, level_metric, metric_of, motion, rough, step_of, total
+from scanstrain.registration.disguise import confirm, refuse_disguise
+from scanstrain.registration.fit import align, level_metric, motion, rough, step_of, total
+from scanstrain.registration.ground import find_ground, readmit
 from scanstrain.registration.levels import check_blocks, cut_both
+from scanstrain.registration.misread import refuse_misread
 from scanstrain.registration.options import Options, check
+from scanstrain.registration.patches import patch_of_blocks
 from scanstrain.registration.report import assemble
 from scanstrain.registration.result import Registration
 from scanstrain.registration.rigid import inverse
 from scanstrain.registration.scale import determined
-from scanstrain.registration.stable import (
-    Ground,
-    Patches,
-    agreeing,
-    choose_ground,
-    make_patches,
-    patch_of_blocks,
-)
+from scanstrain.registration.start import GivenStart
 from scanstrain.registration.surfaces import Surface, make_surface, pyramid
+from scanstrain.registration.texture import settle_texture, use_texture
 from scanstrain.registration.trace import follow
 from scanstrain.registration.weak import complement, split
 from scanstrain.registration.work import Work
@@ -42,17 +40,17 @@ SETTLED = 0.1
 """Cutting again is over when it moves the result by less than this part of its standard error."""
 TAKE_BACK = 5
 """Rounds of taking back a motion: each leaves an error of second order in the one before."""
-MIN_PATCHES, MIN_SHARE = 6, 0.1
-"""Fewer stable patches, or less of the surface, are no ground to stand on."""
 
 
 def register(
     reference: Epoch,
     current: Epoch,
     *,
-    start: str | FloatArray = "auto",
+    start: str | FloatArray | GivenStart = "auto",
     stable: str | BoolArray = "auto",
+    excluded: BoolArray | None = None,
     capture_range: float = 0.3,
+    use_intensity: bool = True,
     seed: int = 0,
     max_iterations: int = 60,
     progress: Callable[[float], None] | None = None,
@@ -64,21 +62,26 @@ def register(
     (`covariance.estimate`). Six parameters: a scale would absorb uniform strain and is only reported.
 
     Motions that the surfaces do not fix (`weak.split`) are held at their start value: what the fit moved along them
-    is taken back before the last iterations, which leave them out. In the covariance each carries a standard
-    deviation of a third of `capture_range` at the place that it moves most: the capture range is taken as the
-    three-sigma limit of the start. `WeakDirection.sd` is the same number.
+    is taken back before the last iterations, which leave them out. In the covariance they carry that of the start
+    where it has one (`GivenStart`). Otherwise each carries a standard deviation of a third of `capture_range` at the
+    place that it moves most: the capture range is taken as the three-sigma limit of the start. `WeakDirection.sd` is
+    the same number. Where both epochs carry intensity, it may fix some of them (`texture.use_texture`).
 
     Parameters
     ----------
     reference, current : Epoch
         In one local frame: the same `origin`, coordinates within 10 km of it.
-    start : {"auto", "identity", "coarse"} or ndarray of shape (4, 4)
+    start : {"auto", "identity", "coarse"}, ndarray of shape (4, 4) or GivenStart
         Where to begin. "auto": the poses as given where the surfaces then fit, otherwise surface features. A matrix
         takes local current coordinates to local reference coordinates.
     stable : {"auto", "all"} or ndarray of shape (n_reference,), bool
         Reference points on stable ground, all of them, or "auto": the patches that share one motion.
+    excluded : ndarray of shape (n_reference,), bool, optional
+        Reference points that are no stable ground whatever `stable` says.
     capture_range : float
         How far apart [m] the surfaces may lie at the start; width of the first blocks.
+    use_intensity : bool
+        Whether returned intensity may fix motions that the surfaces leave open.
     seed : int
         Of the random choices in the coarse start and in the search for stable ground.
     max_iterations : int
@@ -101,14 +104,18 @@ def register(
     MissingDependencyError
         A coarse start is needed and open3d cannot be loaded.
     """
-    options = Options(start, stable, capture_range, seed, max_iterations, progress)
+    options = Options(start, stable, excluded, capture_range, seed, max_iterations, progress, use_intensity)
     check(reference, current, options)
     work, whole, started = _begin(reference, current, options)
     options.report(0.5)
-    _find_ground(work, options)
+    find_ground(work, options)
     _decide_weak(work)
     options.report(0.6)
+    _take_back(work)
+    if work.weak.shape[1] and use_intensity:
+        use_texture(work, reference, current, options)
     _finish(work, current.points, options)
+    settle_texture(work)
     options.report(0.95)
     result = assemble(work, whole, reference, options, started)
     options.report(1.0)
@@ -119,11 +126,11 @@ def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Su
     """Cut both epochs, choose a start and come down to the finest level with all of the ground."""
     whole, theirs = cut_both(reference.points, current.points, options.capture_range)
     mine = whole
-    if isinstance(options.stable, np.ndarray):
-        mine = pyramid(reference.points[options.stable], [s.width for s in whole], own_grid=False)
+    if options.candidates is not None:
+        mine = pyramid(reference.points[options.candidates], [s.width for s in whole], own_grid=False)
     check_blocks(mine[-1])
     options.report(0.2)
-    T_raw, T, started = _start(whole, theirs, reference.points, current.points, options)
+    T_raw, T, started = _start(whole, theirs, reference, current, options)
     if mine is not whole:
         T = settle(mine, theirs, T_raw)[0]
     fit = align(mine[-1], theirs[-1], T, metric=level_metric(mine[-1]), **rough(mine[-1], options.max_iterations))
@@ -135,50 +142,23 @@ def _begin(reference: Epoch, current: Epoch, options: Options) -> tuple[Work, Su
 
 
 def _start(
-    mine: list[Surface], theirs: list[Surface], reference: FloatArray, current: FloatArray, options: Options
+    mine: list[Surface], theirs: list[Surface], reference: Epoch, current: Epoch, options: Options
 ) -> tuple[FloatArray, FloatArray, str]:
     """Pose of the current grid frame to begin with, the same after a rough alignment, and where it came from."""
-    if isinstance(options.start, np.ndarray):
-        T = to_grid(options.start, theirs[-1])
-        return T, settle(mine, theirs, T)[0], "given"
-    if options.start == "auto":
-        refuse_apart(reference, current)
-    return choose_start(mine, theirs, to_grid(np.eye(4), theirs[-1]), options.start, options.seed)
-
-
-def _find_ground(work: Work, options: Options) -> None:
-    """Choose stable patches and fit them alone."""
-    if isinstance(options.stable, str) and options.stable == "auto":
-        rows = work.fit.rows
-        seen = make_patches(rows, work.patch, work.patches)
-        ground = choose_ground(seen, work.fit.strong, work.metric, rows.place, options.seed)
-        _check_ground(ground, seen)
-        work.T = step_of(ground.motion, work.metric) @ work.T
-        work.ground, work.keep = ground, ground.stable[work.patch]
-    work.take(
-        align(
-            work.reference,
-            work.current,
-            work.pose,
-            metric=work.metric,
-            keep=work.keep,
-            **rough(work.reference, options.max_iterations),
-        )
-    )
-    work.metric = metric_of(work.fit.rows.place[work.fit.weight > 0])
-
-
-def _check_ground(ground: Ground, seen: Patches) -> None:
-    if ground.stable.sum() < MIN_PATCHES or ground.share < MIN_SHARE:
-        found = f"{int(ground.stable.sum())} of {int((seen.blocks > 0).sum())} patches, {ground.share:.1%}"
-        raise RegistrationError(
-            explain(
-                "stable ground",
-                f"at least {MIN_PATCHES} patches and {MIN_SHARE:.0%} of the matched surface that share one motion",
-                found,
-                "name stable ground yourself",
-            )
-        )
+    if not isinstance(options.start, str):
+        given = options.start if isinstance(options.start, GivenStart) else GivenStart(options.start)
+        T = to_grid(given.T_ref_cur, theirs[-1])
+        settled = settle(mine, theirs, T)[0]
+        refuse_misread(mine, theirs, given.T_ref_cur, settled, reference.origin)
+        return confirm(mine, theirs, reference, current, (T, settled, given.source), searching=False, seed=options.seed)
+    try:
+        if options.start == "auto":
+            refuse_apart(reference.points, current.points)
+        found = choose_start(mine, theirs, to_grid(np.eye(4), theirs[-1]), options.start, options.seed)
+    except OverlapError:
+        refuse_disguise(mine, theirs, reference, current, best=0.0, seed=options.seed)
+        raise
+    return confirm(mine, theirs, reference, current, found, searching=options.start == "auto", seed=options.seed)
 
 
 def _decide_weak(work: Work) -> None:
@@ -198,13 +178,14 @@ def _decide_weak(work: Work) -> None:
     full, shared, _ = total(fit.rows, fit.weight)
     used = fit.weight > 0
     noise = float(np.median(work.reference.cells.roughness[fit.rows.block[used]]))
+    work.budget = max(noise, LEAST_BUDGET)
     work.strong, work.weak = split(
         full[:6, :6],
         shared[:6, :6],
         variance=fit.variance(),
         places=fit.rows.place[used],
         metric=at,
-        budget=max(noise, LEAST_BUDGET),
+        budget=work.budget,
     )
     if not work.strong.shape[1]:
         raise RegistrationError(
@@ -241,7 +222,7 @@ def _finish(work: Work, points: FloatArray, options: Options) -> None:
                 keep=work.keep,
             )
         )
-        changed = cut < 2 and _readmit(work)
+        changed = cut < 2 and readmit(work)
         step = motion(work.fit.T_ref_grid, work.metric)
         moved = float(np.linalg.norm(step[:3]) + np.linalg.norm(step[3:]))
         if not changed and moved < SETTLED * work.fit.standard_error():
@@ -256,12 +237,3 @@ def _finish(work: Work, points: FloatArray, options: Options) -> None:
                 "raise max_iterations or name stable ground",
             )
         )
-
-
-def _readmit(work: Work) -> bool:
-    """Let stable patches leave and others return, by their residuals now; say whether any did."""
-    if work.ground is None:
-        return False
-    seen = make_patches(work.fit.rows, work.patch, work.patches)
-    before, work.keep = work.keep, agreeing(seen, work.ground.scale)[work.patch]
-    return before is None or not np.array_equal(before, work.keep)

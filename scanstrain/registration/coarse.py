@@ -32,7 +32,7 @@ CLOSE = 0.25
 """A match is close within this part of a block width (or three standard deviations)."""
 
 
-def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) -> float:
+def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray, *, close: float = CLOSE) -> float:
     """Robust share of the smaller surface that lies close to the other with like normals.
 
     The mean over the three facings that a surface may have, so that a wrong pose which keeps the floor on the floor
@@ -43,6 +43,8 @@ def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) ->
     reference, current : Surface
     T_ref_grid : ndarray of shape (4, 4)
         Takes the current surface's grid frame to the reference frame.
+    close : float
+        What is close, in block widths; three standard deviations always are.
 
     Returns
     -------
@@ -54,13 +56,13 @@ def share_close(reference: Surface, current: Surface, T_ref_grid: FloatArray) ->
     if not len(pairs) or not current.flat():
         return 0.0
     rows = observe(reference, current, pairs, T_ref_grid, Metric(np.zeros(3), 1.0))
-    limit = np.maximum(CLOSE * reference.width, 3 * rows.sd)
+    limit = np.maximum(close * reference.width, 3 * rows.sd)
     facing = np.abs(reference.cells.normal).argmax(axis=1)
     blocks = np.bincount(facing[flat], minlength=3).astype(float)
-    close = np.bincount(facing[rows.block], biweight(rows.residual / limit), minlength=3)
+    met = np.bincount(facing[rows.block], biweight(rows.residual / limit), minlength=3)
     counts = blocks >= FACING * blocks.sum()
     smaller = min(1.0, current.flat() / blocks.sum())
-    return float(min((close[counts] / blocks[counts]).mean() / smaller, 1.0))
+    return float(min((met[counts] / blocks[counts]).mean() / smaller, 1.0))
 
 
 def settle(reference: list[Surface], current: list[Surface], T_ref_grid: FloatArray) -> tuple[FloatArray, float]:

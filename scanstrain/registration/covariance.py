@@ -6,6 +6,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from scanstrain.linalg import at_least, leave_one_out
 from scanstrain.registration.fit import TUKEY, Fit, sums
 from scanstrain.registration.match import Metric
 
@@ -19,11 +20,9 @@ RESOLUTION = 1e-9
 def estimate(fit: Fit, patch: IntArray, count: int, basis: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Solve for unknowns about the fitted motion and estimate their covariance.
 
-    Leave-one-patch-out (jackknife, the CR3 form of a cluster-robust sandwich): dropping patch P changes the estimate
-    by (N - N_P)^-1 g_P exactly, and the sum of squares of these changes, times (G - 1)/G, is the covariance, whatever
-    the correlation inside a patch. Rows are weighted robustly, so both are divided by the square of the mean slope of
-    the score over the mean weight (Huber 1981; formula from memory). The covariance of independent blocks, from the
-    same residuals, is a lower limit in every direction.
+    Leave-one-patch-out (`linalg.leave_one_out`), whatever the correlation inside a patch. Rows are weighted robustly,
+    so it is divided by the square of the mean slope of the score over the mean weight (Huber 1981; formula from
+    memory). The covariance of independent blocks, from the same residuals, is a lower limit in every direction.
 
     Parameters
     ----------
@@ -53,13 +52,8 @@ def estimate(fit: Fit, patch: IntArray, count: int, basis: FloatArray) -> tuple[
     step = np.linalg.solve(N, g_P.sum(axis=0))
     g_P = g_P - N_P @ step
     present = np.unique(group[used])
-    left = N - N_P[present]
-    # A patch without which the rest fixes nothing cannot be left out: its own share counts as it stands.
-    alone = np.linalg.eigvalsh(left)[:, 0] < 1e-3 * np.linalg.eigvalsh(N)[0]
-    left[alone] = N
-    change = np.linalg.solve(left, g_P[present][..., None])[..., 0]
-    G, k = len(present), len(N)
-    clustered = change.T @ change * (G - 1) / G
+    clustered = leave_one_out(N_P[present], g_P[present])
+    k = len(N)
 
     a = rows.row[used] @ basis
     e = fit.weight[used] * (rows.residual[used] - a @ step)
@@ -78,23 +72,6 @@ def _score_ratio(fit: Fit) -> float:
     return float(max(slope.sum() / fit.weight[used].sum(), 0.5))
 
 
-def at_least(covariance: FloatArray, floor: FloatArray) -> FloatArray:
-    """Raise a covariance to a floor in every direction, and leave it where it is larger.
-
-    Examples
-    --------
-    >>> at_least(np.diag([4.0, 1.0]), np.diag([2.0, 3.0])).round(12)
-    array([[4., 0.],
-           [0., 3.]])
-    """
-    values, vectors = np.linalg.eigh(floor)
-    root = vectors * np.sqrt(np.maximum(values, 1e-14 * max(values[-1], 1e-30)))
-    white = np.linalg.inv(root)
-    size, turn = np.linalg.eigh(white @ covariance @ white.T)
-    back = root @ turn
-    return np.asarray((back * np.maximum(size, 1.0)) @ back.T)
-
-
 def physical(covariance: FloatArray, metric: Metric) -> FloatArray:
     """Turn a 6x6 covariance of metric unknowns into one of (rotation [rad], translation [m]) at the pivot."""
     scale = np.r_[np.full(3, 1 / metric.arm), np.ones(3)]
@@ -102,7 +79,7 @@ def physical(covariance: FloatArray, metric: Metric) -> FloatArray:
     return np.asarray((out + out.T) / 2)
 
 
-def full_covariance(solved: FloatArray, strong: FloatArray, weak: FloatArray, weak_sd: FloatArray) -> FloatArray:
+def full_covariance(solved: FloatArray, strong: FloatArray, weak: FloatArray, held: FloatArray) -> FloatArray:
     """Put the 6x6 covariance together: estimated where solved for, the start's uncertainty where held.
 
     Parameters
@@ -111,7 +88,7 @@ def full_covariance(solved: FloatArray, strong: FloatArray, weak: FloatArray, we
         Covariance in the strong directions [m^2].
     strong, weak : ndarray of shape (6, r), (6, k)
         Orthonormal bases of the two parts.
-    weak_sd : ndarray of shape (k,)
-        Standard deviation of the start along each weak direction [m].
+    held : ndarray of shape (k, k)
+        Covariance of the start in the weak directions [m^2].
     """
-    return np.asarray(strong @ solved @ strong.T + (weak * weak_sd**2) @ weak.T)
+    return np.asarray(strong @ solved @ strong.T + weak @ held @ weak.T)

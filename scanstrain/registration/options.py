@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 
 from scanstrain.epoch import MIN_POINTS, Epoch
 from scanstrain.errors import OptionError, OverlapError, explain
-from scanstrain.registration.rigid import is_rigid
+from scanstrain.registration.disguise import far_words, refuse_other_unit
+from scanstrain.registration.start import GivenStart, check_start
 from scanstrain.registry import unknown_name
 
 FloatArray = NDArray[np.float64]
@@ -27,12 +28,21 @@ MAX_COORDINATE = 1e4
 class Options:
     """What `register` was called with."""
 
-    start: str | FloatArray
+    start: str | FloatArray | GivenStart
     stable: str | BoolArray
+    excluded: BoolArray | None
     capture_range: float
     seed: int
     max_iterations: int
     progress: Callable[[float], None] | None
+    use_intensity: bool = True
+
+    @property
+    def candidates(self) -> BoolArray | None:
+        """Reference points that may serve as stable ground; None for all of them."""
+        if not isinstance(self.stable, np.ndarray):
+            return None if self.excluded is None else ~self.excluded
+        return self.stable if self.excluded is None else self.stable & ~self.excluded
 
     def report(self, done: float) -> None:
         """Pass on the finished share."""
@@ -50,17 +60,14 @@ def check(reference: Epoch, current: Epoch, options: Options) -> None:
     _check_frames(reference, current)
     _check_choice("start", options.start, STARTS)
     _check_choice("stable", options.stable, GROUNDS)
-    if isinstance(options.start, np.ndarray) and not is_rigid(options.start):
-        raise OptionError(
-            explain(
-                "start",
-                "a 4x4 matrix of a rotation and a translation",
-                "a matrix that scales, mirrors, shears or is not finite",
-                "give a rigid motion, local current to local reference coordinates",
-            )
-        )
-    if isinstance(options.stable, np.ndarray):
-        _check_mask(options.stable, len(reference))
+    if not isinstance(options.start, str):
+        check_start(options.start)
+    for name, mask in (("stable", options.stable), ("excluded", options.excluded)):
+        if isinstance(mask, np.ndarray):
+            _check_mask(name, mask, len(reference))
+    if options.candidates is not None and options.candidates.sum() < MIN_POINTS:
+        left = f"{int(options.candidates.sum())}"
+        raise OptionError(explain("stable ground", f"at least {MIN_POINTS} points", left, "name a larger stable area"))
     if not (np.isfinite(options.capture_range) and options.capture_range > 0):
         raise OptionError(
             explain("capture_range", "a length in metres above 0", f"{options.capture_range}", "give 0.3")
@@ -79,6 +86,7 @@ def _check_frames(reference: Epoch, current: Epoch) -> None:
                 "shift one with Epoch.shifted",
             )
         )
+    refuse_other_unit(reference, current)
     for epoch in (reference, current):
         largest = float(np.abs(epoch.points).max()) if len(epoch) else 0.0
         if not largest <= MAX_COORDINATE:
@@ -86,30 +94,27 @@ def _check_frames(reference: Epoch, current: Epoch) -> None:
                 explain(
                     f"registration: {epoch.label or 'epoch'}",
                     f"both scans within {MAX_COORDINATE:.0f} m of one place",
-                    f"points {largest:.6g} m from the middle of the reference",
+                    f"points {largest:.6g} m from the middle of the reference"
+                    + (f": {words}" if (words := far_words(reference, current)) else ""),
                     "check that both are in the same coordinate system and unit",
                 )
             )
 
 
-def _check_choice(name: str, value: str | FloatArray | BoolArray, known: tuple[str, ...]) -> None:
-    if isinstance(value, np.ndarray):
+def _check_choice(name: str, value: object, known: tuple[str, ...]) -> None:
+    if isinstance(value, np.ndarray | GivenStart):
         return
     if value not in known:
         raise OptionError(unknown_name(name, str(value), list(known)))
 
 
-def _check_mask(mask: BoolArray, points: int) -> None:
+def _check_mask(name: str, mask: BoolArray, points: int) -> None:
     if mask.shape != (points,) or mask.dtype != np.bool_:
         raise OptionError(
             explain(
-                "stable",
+                name,
                 f"one bool a reference point, shape ({points},)",
                 f"{mask.dtype} of shape {mask.shape}",
                 "make a mask of the reference points",
             )
-        )
-    if mask.sum() < MIN_POINTS:
-        raise OptionError(
-            explain("stable", f"at least {MIN_POINTS} points", f"{int(mask.sum())}", "name a larger stable area")
         )

@@ -12,22 +12,18 @@ from scanstrain.epoch import Epoch
 from scanstrain.registration.covariance import estimate, full_covariance, physical
 from scanstrain.registration.match import nearest
 from scanstrain.registration.options import Options
-from scanstrain.registration.result import Registration, WeakDirection
+from scanstrain.registration.result import Registration, StableGround
 from scanstrain.registration.scale import scale_ppm
-from scanstrain.registration.stable import CLEAR_SHARE, Ground
+from scanstrain.registration.stable import Ground
+from scanstrain.registration.start import GivenStart, held_covariance
 from scanstrain.registration.surfaces import UNUSABLE, USABLE, Surface
+from scanstrain.registration.texture_report import name_textured, texture_words, with_texture
 from scanstrain.registration.weak import name_directions, reach, separate
+from scanstrain.registration.words import doubts
 from scanstrain.registration.work import Work
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
-
-START_SIGMAS = 3.0
-"""The capture range is taken as the three-sigma limit of the start along directions that stay at the start."""
-RIVAL = 0.45
-"""A second group of this part of the first one's area could as well be the stable one."""
-LOW_OVERLAP = 0.3
-"""Share of the reference surface below which the overlap is worth a warning."""
 
 
 def assemble(work: Work, whole: Surface, reference: Epoch, options: Options, started: str) -> Registration:
@@ -52,15 +48,18 @@ def assemble(work: Work, whole: Surface, reference: Epoch, options: Options, sta
     _, solved, _ = estimate(fit, work.patch, work.patches, basis)
     used = fit.weight > 0
     weak = separate(work.weak)
-    held_sd = options.capture_range / START_SIGMAS
-    weak_sd = held_sd / reach(weak, fit.rows.place[used], work.metric)
-    covariance = full_covariance(solved, work.strong, weak, weak_sd)
-    sd = np.full(weak.shape[1], held_sd)
-    directions = name_directions(weak, fit.rows, used, sd)
+    far = reach(weak, fit.rows.place[used], work.metric)
+    held = held_covariance(options.start, weak, far, work.metric, options.capture_range)
+    covariance = full_covariance(solved, work.strong, weak, held)
+    directions = name_directions(weak, fit.rows, used, far * np.sqrt(np.diag(held)))
+    named = ((), ()) if work.texture is None else name_textured(work.texture, fit.rows, used, work.metric)
+    if work.texture is not None:
+        covariance = with_texture(work.texture, solved, work.strong, weak, held)
     scale, scale_sd = (
         scale_ppm(fit, work.patch, work.patches, work.metric, work.strong) if work.scale_known else (np.nan, np.nan)
     )
     overlap = _overlap(whole, work.current, fit.T_ref_grid)
+    ground = _stable_ground(work.ground, options)
     return Registration(
         T_ref_cur=work.T,
         origin=np.array(reference.origin, dtype=np.float64),
@@ -72,10 +71,13 @@ def assemble(work: Work, whole: Surface, reference: Epoch, options: Options, sta
         scale_ppm=scale,
         scale_ppm_sd=scale_sd,
         weak_directions=directions,
+        texture_directions=named[0],
         converged=fit.converged,
         iterations=work.iterations,
         start=started,
-        warnings=tuple(_warnings(work.ground, directions, overlap)),
+        targets=options.start.targets if isinstance(options.start, GivenStart) else None,
+        ground=ground,
+        warnings=(*doubts(ground, directions, overlap), *texture_words(*named)),
     )
 
 
@@ -125,27 +127,13 @@ def _stable_points(work: Work, points: FloatArray, options: Options) -> BoolArra
     good[rows.block] = work.fit.weight > 0
     block = _block_of_points(points, surface.cells.key, surface.width)
     stable = (block >= 0) & good[block]
-    if isinstance(options.stable, np.ndarray):
-        stable &= options.stable
+    if options.candidates is not None:
+        stable &= options.candidates
     return np.asarray(stable)
 
 
-def _warnings(ground: Ground | None, weak: tuple[WeakDirection, ...], overlap: float) -> list[str]:
-    said = []
-    if ground is not None and ground.second_share > RIVAL * ground.share:
-        said.append(
-            f"stable ground is ambiguous: {ground.share:.0%} of the matched surface shares one motion and "
-            f"{ground.second_share:.0%} shares another; if the second group were the stable one, displacements would "
-            f"change by up to {ground.second_shift * 1e3:.1f} mm: name stable ground to be sure"
-        )
-    elif ground is not None and ground.share < CLEAR_SHARE:
-        said.append(
-            f"only {ground.share:.0%} of the matched surface shares one rigid motion; with about half of it moved "
-            "nothing but named stable ground can tell which half: check the stable area"
-        )
-    if weak:
-        names = "; ".join(direction.description for direction in weak)
-        said.append(f"the surfaces do not fix these motions, which were held at the start value: {names}")
-    if overlap < LOW_OVERLAP:
-        said.append(f"the current epoch shows only {overlap:.0%} of the reference surface")
-    return said
+def _stable_ground(ground: Ground | None, options: Options) -> StableGround | None:
+    if ground is None:
+        return None
+    chosen_by = options.stable if isinstance(options.stable, str) else "given"
+    return StableGround(chosen_by, ground.share, ground.second_share, ground.second_shift, ground.by_strength)

@@ -8,6 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from scanstrain.registration.targets import TargetFit
+
 FloatArray = NDArray[np.float64]
 
 
@@ -31,6 +33,31 @@ class WeakDirection:
 
 
 @dataclass(frozen=True, slots=True)
+class StableGround:
+    """What the datum stands on, and what else could be true.
+
+    Parameters
+    ----------
+    chosen_by : str
+        "auto": the program found a group of patches that share one motion; "given" or "all": the user said so.
+    share : float
+        Part of the matched surface (of the given ground, where it was given) that shares the stable motion.
+    second_share : float
+        Part that shares the next best motion; 0 where there is none.
+    second_shift : float
+        Largest change of any displacement, were that second motion the stable one [m].
+    by_strength : bool
+        Whether a group was taken because it fixes the motion better, although another is larger.
+    """
+
+    chosen_by: str
+    share: float
+    second_share: float
+    second_shift: float
+    by_strength: bool
+
+
+@dataclass(frozen=True, slots=True)
 class Registration:
     """The rigid motion from the current epoch into the reference frame, and how well it is known.
 
@@ -48,14 +75,20 @@ class Registration:
         Weighted root mean square of the normal residuals on stable ground [m].
     stable : ndarray of shape (n_reference,), bool
         Reference points on ground that was used as stable.
+    ground : StableGround or None
+        How that ground was chosen and what the next best choice would change.
     overlap : float
         Share of the reference surface that the current epoch also shows.
     scale_ppm, scale_ppm_sd : float
         Scale of current over reference minus one, a diagnostic in parts per million; never applied.
     weak_directions : tuple of WeakDirection
         Motions that are not fixed by the data; they were held at the start value.
+    texture_directions : tuple of WeakDirection
+        Motions that the surfaces leave open and returned intensity fixes, with the standard error that it reaches.
     start : str
-        "identity" or "coarse": where the fine fit began.
+        Where the fine fit began: "identity", "coarse", "file", "targets" or "given".
+    targets : TargetFit or None
+        The targets that the start comes from, in file coordinates.
     """
 
     T_ref_cur: FloatArray
@@ -71,6 +104,9 @@ class Registration:
     converged: bool
     iterations: int
     start: str
+    ground: StableGround | None = None
+    targets: TargetFit | None = None
+    texture_directions: tuple[WeakDirection, ...] = ()
     warnings: tuple[str, ...] = ()
 
     @property

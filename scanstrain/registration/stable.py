@@ -3,18 +3,18 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.registration.fit import MIN_SCALE, TUKEY, biweight, robust_scale
-from scanstrain.registration.match import Metric, Rows
-from scanstrain.registration.surfaces import Surface
+from scanstrain.registration.fit import TUKEY, biweight, robust_scale
+from scanstrain.registration.match import Metric
+from scanstrain.registration.patches import Patches
 from scanstrain.registration.weak import reach
 
 FloatArray = NDArray[np.float64]
-IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
 DRAWS = 600
@@ -24,38 +24,31 @@ CORE, CORE_QUANTILE = 0.35, 0.4538
 within which that share of the errors lies."""
 AGREES = 3.0
 """A patch agrees with a motion within this many robust standard deviations."""
-MIN_PATCH, MAX_PATCH = 0.5, 1.0
-"""Patch width [m]: longer than the usual correlation of scan errors, shorter than the usual moved area."""
-WANTED_PATCHES = 40
-"""Smaller objects are cut into smaller patches, so that at least about so many are left."""
 CLEAR_SHARE = 0.65
 """Below this share of agreeing surface, what moved and what stood still is a matter of opinion."""
-SCATTER_ROUNDS = 3
-"""Rounds of weighting down odd blocks inside the patches."""
 SAMPLE = 1000
 """Patches that random starts are scored on."""
+RIVAL = 0.45
+"""A second group of this part of the first one's area could as well be the stable one."""
+STRONGER = 1.5
+"""A rival that fixes the motion this many times better takes the place of a larger group: ground on two ends of an
+object is a datum, a bulge between them is none."""
 
 
 @dataclass(frozen=True, slots=True)
-class Patches:
-    """One mean observation per patch.
+class Hypothesis:
+    """A pose that could be the right one, and what the patches say about it.
 
     Parameters
     ----------
-    row : ndarray of shape (g, 6)
-        Weighted mean row in metric unknowns.
-    residual : ndarray of shape (g,)
-        Weighted mean residual [m].
-    sd : ndarray of shape (g,)
-        Its standard deviation from the scatter inside the patches [m].
-    blocks : ndarray of shape (g,)
-        Matched blocks, a measure of area; 0 for patches without one and for those that are torn.
+    motion : ndarray of shape (6,)
+        From the present pose, metric unknowns [m].
+    patches : Patches
+        Of the matches at that pose.
     """
 
-    row: FloatArray
-    residual: FloatArray
-    sd: FloatArray
-    blocks: FloatArray
+    motion: FloatArray
+    patches: Patches
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,6 +69,8 @@ class Ground:
         Share of the largest group of the others that moved as one.
     second_shift : float
         What the result would change at the worst place, were that group the stable one [m].
+    by_strength : bool
+        Whether a smaller group was chosen because it fixes the motion much better than the largest one.
     """
 
     stable: BoolArray
@@ -84,110 +79,42 @@ class Ground:
     share: float
     second_share: float = 0.0
     second_shift: float = 0.0
+    by_strength: bool = False
+
+    @property
+    def has_rival(self) -> bool:
+        """Whether another group could as well be the stable one."""
+        return self.second_share > RIVAL * self.share
 
 
-def patch_of_blocks(surface: Surface) -> tuple[IntArray, int]:
-    """Number the patch of every block: a square column along the axis that the normal follows, cut at gaps.
+def choose_ground(
+    hypotheses: Sequence[Hypothesis],
+    strong: FloatArray,
+    metric: Metric,
+    places: FloatArray,
+    *,
+    limit: float,
+    seed: int,
+) -> Ground:
+    """Find the patches that stood still: a group that shares one rigid motion.
 
-    Returns
-    -------
-    index : ndarray of shape (b,), int64
-    count : int
-    """
-    width = patch_width(surface)
-    centre, facing = surface.cells.centre, np.abs(surface.cells.normal).argmax(axis=1)
-    along = centre[np.arange(len(centre)), facing]
-    column = np.floor(centre / width).astype(np.int64)
-    column[np.arange(len(centre)), facing] = 0
-    order = np.lexsort((along, *column.T, facing))
-    same = (np.diff(column[order], axis=0) == 0).all(axis=1) & (np.diff(facing[order]) == 0)
-    # Cut along the normal only where there is a gap: a fixed cut would sort blocks by the sign of their noise.
-    new = np.r_[False, ~same | (np.diff(along[order]) > width / 2)]
-    index = np.empty(len(centre), np.int64)
-    index[order] = np.cumsum(new)
-    return index, int(index.max()) + 1
-
-
-def patch_width(surface: Surface) -> float:
-    """Choose the patch width [m] from the area of the surface and its blocks."""
-    area = surface.flat() * surface.width**2
-    wanted = min(max(MIN_PATCH, np.sqrt(area / 200)), MAX_PATCH)
-    return float(max(min(wanted, np.sqrt(area / WANTED_PATCHES)), 2 * surface.width))
-
-
-def make_patches(rows: Rows, index: IntArray, count: int) -> Patches:
-    """Average the rows of each patch, with single odd blocks in a patch weighted down.
+    Each hypothesis is refined from the plain fit of all its patches, from its own pose and from random small sets of
+    patches (least quantile of squares, Rousseeuw 1984, as a start only), by least trimmed squares, then by
+    redescending weights under a scale that only falls. The one with the largest supporting area wins. Then the
+    patches that disagree are searched for a second group. Of two groups that rival in size, the one that fixes the
+    motion better is taken; otherwise the larger one.
 
     Parameters
     ----------
-    rows : Rows
-        Of all matches.
-    index : ndarray of shape (b,), int64
-        Patch of every reference block.
-    count : int
-        Number of patches.
-    """
-    mine = index[rows.block]
-    blocks = np.bincount(mine, minlength=count).astype(float)
-    spare = np.maximum(blocks - 3, 0)[mine]
-    judge = spare > 0
-    weight = 1 / rows.sd**2
-    scale = np.inf
-    for _ in range(SCATTER_ROUNDS):
-        inside = (rows.residual - _trend(rows, mine, weight, count)) / rows.sd
-        z = inside[judge] * np.sqrt(blocks[mine] / np.maximum(spare, 1))[judge]
-        scale = max(min(scale, robust_scale(z)), MIN_SCALE) if len(z) else 1.0
-        weight = np.where(judge, biweight(inside / (TUKEY * scale)), 1.0) / rows.sd**2
-    summed = np.maximum(np.bincount(mine, weight, minlength=count), 1e-300)
-    row = np.stack([np.bincount(mine, weight * rows.row[:, a], minlength=count) for a in range(6)], axis=1)
-    return Patches(
-        row=row / summed[:, None],
-        residual=np.bincount(mine, weight * rows.residual, minlength=count) / summed,
-        sd=scale / np.sqrt(summed),
-        blocks=np.where(_even(rows, mine, weight, blocks), blocks, 0.0),
-    )
-
-
-def _even(rows: Rows, patch: IntArray, weight: FloatArray, blocks: FloatArray) -> BoolArray:
-    """Patches that are mostly of one piece: one that a moved part only half covers belongs to neither side."""
-    kept = np.bincount(patch, weight * rows.sd**2, minlength=len(blocks))
-    return np.asarray(kept >= blocks / 2)
-
-
-def _trend(rows: Rows, patch: IntArray, weight: FloatArray, count: int) -> FloatArray:
-    """Plane through the residuals of every patch, at the blocks [m].
-
-    A patch that is tilted, by a wrong pose or by deformation, is not a noisy patch.
-    """
-    summed = np.maximum(np.bincount(patch, weight, minlength=count), 1e-300)
-    middle = np.stack([np.bincount(patch, weight * rows.place[:, a], minlength=count) for a in range(3)], axis=1)
-    x = np.concatenate([rows.place - (middle / summed[:, None])[patch], np.ones((len(patch), 1))], axis=1)
-    N, right = np.empty((count, 4, 4)), np.empty((count, 4))
-    for a in range(4):
-        right[:, a] = np.bincount(patch, weight * x[:, a] * rows.residual, minlength=count)
-        for b in range(4):
-            N[:, a, b] = np.bincount(patch, weight * x[:, a] * x[:, b], minlength=count)
-    # The ridge stands for the third dimension, in which a patch has no extent.
-    ridge = 1e-6 * np.trace(N, axis1=1, axis2=2) + 1e-300
-    solved = np.linalg.solve(N + ridge[:, None, None] * np.eye(4), right[..., None])[..., 0]
-    return np.asarray((x * solved[patch]).sum(axis=1))
-
-
-def choose_ground(patches: Patches, strong: FloatArray, metric: Metric, places: FloatArray, seed: int) -> Ground:
-    """Find the patches that stood still, as the largest group that shares one rigid motion.
-
-    Starts from the plain fit of all, from the present motion and from random small sets of patches (least quantile of
-    squares, Rousseeuw 1984, as a start only). Each is refined by least trimmed squares, then by redescending weights
-    under a scale that only falls. Then the patches that disagree are searched for a second group.
-
-    Parameters
-    ----------
-    patches : Patches
+    hypotheses : sequence of Hypothesis
+        At least one.
     strong : ndarray of shape (6, r)
         Motions to consider.
     metric : Metric
     places : ndarray of shape (m, 3)
         Matched places, to say what a second group would change [m].
+    limit : float
+        Longest step [m] from the pose of a hypothesis: its matches show nothing beyond the width of a block.
     seed : int
         Of the random starts.
 
@@ -196,33 +123,77 @@ def choose_ground(patches: Patches, strong: FloatArray, metric: Metric, places: 
     Ground
     """
     rng = np.random.default_rng(seed)
-    present = patches.blocks > 0
-    first, scale = _search(patches, present, strong, rng)
-    off = np.abs(_misfit(patches, strong, first)) / scale
-    stable = present & (off < AGREES)
-    area = patches.blocks.sum()
-    ground = Ground(
-        stable=stable,
-        motion=strong @ first,
-        scale=scale,
-        share=float(patches.blocks[stable].sum() / area),
-    )
-    rest = present & (off > 1.5 * AGREES)
-    if rest.sum() < 2 * strong.shape[1] + 2:
+    first = _best(hypotheses, [h.patches.blocks > 0 for h in hypotheses], strong, limit, rng)
+    total = max(float(h.patches.blocks.sum()) for h in hypotheses)
+    stable = first.agrees(AGREES)
+    ground = Ground(stable, first.motion, first.scale, share=float(first.area[stable].sum()) / total)
+    rest = ~first.agrees(1.5 * AGREES)
+    left = [(h.patches.blocks > 0) & rest for h in hypotheses]
+    if max(each.sum() for each in left) < 2 * strong.shape[1] + 2:
         return ground
-    second, _ = _search(patches, rest, strong, rng)
-    agrees = present & ~stable & (np.abs(_misfit(patches, strong, second)) / scale < AGREES)
-    change = strong @ (second - first)
+    second = _best(hypotheses, left, strong, limit, rng, scale=first.scale)
+    others = second.agrees(AGREES) & ~stable
+    change = second.motion - first.motion
     size = float(np.linalg.norm(change))
     shift = size * float(reach((change / max(size, 1e-300))[:, None], places, metric)[0])
-    return Ground(
-        stable=stable,
-        motion=ground.motion,
-        scale=scale,
-        share=ground.share,
-        second_share=float(patches.blocks[agrees].sum() / area),
-        second_shift=shift,
-    )
+    share = float(second.area[others].sum()) / total
+    ground = replace(ground, second_share=share, second_shift=shift)
+    loose = [
+        _looseness(fit.patches, group, strong, metric, places) for fit, group in ((first, stable), (second, others))
+    ]
+    if not (ground.has_rival and loose[0] > STRONGER * loose[1]):
+        return ground
+    taken = second.agrees(AGREES)
+    share = float(second.area[taken].sum()) / total
+    return Ground(taken, second.motion, second.scale, share, ground.share, shift, by_strength=True)
+
+
+@dataclass(frozen=True, slots=True)
+class _Candidate:
+    """A refined hypothesis: its patches, motion (6,), standardised misfits (g,) and robust scale."""
+
+    patches: Patches
+    motion: FloatArray
+    misfit: FloatArray
+    scale: float
+
+    @property
+    def area(self) -> FloatArray:
+        return self.patches.blocks
+
+    def agrees(self, limit: float) -> BoolArray:
+        return np.asarray((self.area > 0) & (np.abs(self.misfit) < limit * self.scale))
+
+
+def _best(
+    hypotheses: Sequence[Hypothesis],
+    among: Sequence[BoolArray],
+    strong: FloatArray,
+    limit: float,
+    rng: np.random.Generator,
+    scale: float | None = None,
+) -> _Candidate:
+    """Refine every hypothesis on some of its patches and return the one with the largest supporting area."""
+    found = []
+    for hypothesis, use in zip(hypotheses, among, strict=True):
+        if use.sum() <= strong.shape[1]:
+            continue
+        patches = hypothesis.patches
+        y, spread = _search(patches, use, strong, limit, rng)
+        misfit = (patches.residual - patches.row @ (strong @ y)) / patches.sd
+        found.append((use, _Candidate(patches, hypothesis.motion + strong @ y, misfit, scale or spread)))
+    # One yardstick for all: a hypothesis that is loose everywhere must not win by its own wide scale.
+    yardstick = AGREES * min(candidate.scale for _, candidate in found)
+    support = [float((c.area * biweight(c.misfit / yardstick))[use].sum()) for use, c in found]
+    return found[int(np.argmax(support))][1]
+
+
+def _looseness(patches: Patches, group: BoolArray, strong: FloatArray, metric: Metric, places: FloatArray) -> float:
+    """Largest standard error [m] at any matched place of the motion that a group fixes, per unit of patch noise."""
+    A = (patches.row[group] @ strong) / patches.sd[group, None]
+    values, vectors = np.linalg.eigh(A.T @ A)
+    far = reach(strong @ vectors, places, metric)
+    return float((far / np.sqrt(np.maximum(values, 1e-300))).max())
 
 
 def agreeing(patches: Patches, scale: float) -> BoolArray:
@@ -230,19 +201,17 @@ def agreeing(patches: Patches, scale: float) -> BoolArray:
     return np.asarray((patches.blocks > 0) & (np.abs(patches.residual) < AGREES * scale * patches.sd))
 
 
-def _misfit(patches: Patches, strong: FloatArray, y: FloatArray) -> FloatArray:
-    return np.asarray((patches.residual - patches.row @ (strong @ y)) / patches.sd)
-
-
 def _search(
-    patches: Patches, among: BoolArray, strong: FloatArray, rng: np.random.Generator
+    patches: Patches, among: BoolArray, strong: FloatArray, limit: float, rng: np.random.Generator
 ) -> tuple[FloatArray, float]:
-    """Return the motion (r,) that most of the patches agree on, and the scale of their agreement."""
+    """Return the step (r,) that most of the patches agree on, and the scale of their agreement."""
     A = (patches.row[among] @ strong) / patches.sd[among, None]
     b = patches.residual[among] / patches.sd[among]
     area = patches.blocks[among]
     starts = [np.zeros(A.shape[1]), _solve(A, b, np.ones(len(b))), *_random_starts(A, b, rng)]
     refined = [_refine(A, b, start) for start in starts]
+    near = [(y, scale) for y, scale in refined if np.linalg.norm(y[:3]) + np.linalg.norm(y[3:]) <= limit]
+    refined = near or [(np.zeros(A.shape[1]), max(1.0, robust_scale(b)))]
     # One yardstick for all: a hypothesis that is loose everywhere must not win by its own wide scale.
     yardstick = min(scale for _, scale in refined)
     support = [float((area * biweight((b - A @ y) / (AGREES * yardstick))).sum()) for y, _ in refined]
@@ -268,7 +237,7 @@ def _random_starts(A: FloatArray, b: FloatArray, rng: np.random.Generator, best:
 
 def _refine(A: FloatArray, b: FloatArray, y: FloatArray) -> tuple[FloatArray, float]:
     """Least trimmed squares steps, then redescending weights under a falling scale not below the patch noise."""
-    core = min(int(CORE * len(b)) + A.shape[1] + 1, len(b))
+    core = min(max(int(CORE * len(b)), A.shape[1] + 2), len(b))
     for _ in range(10):
         nearest = np.argsort(np.abs(b - A @ y), kind="stable")[:core]
         weight = np.zeros(len(b))

@@ -13,6 +13,7 @@ from scanstrain.registration.match import Metric
 from scanstrain.registration.rigid import inverse
 from scanstrain.registration.stable import Ground
 from scanstrain.registration.surfaces import Surface
+from scanstrain.registration.texture_fit import Texture
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -38,11 +39,15 @@ class Work:
     keep : ndarray of shape (b,), bool, or None
         Stable reference blocks; None for all.
     ground : Ground or None
-        How stable ground was chosen; None where it was given.
+        Groups of patches that share one motion, found at the start.
     strong, weak : ndarray of shape (6, r), (6, k)
         Motions that are solved for, and held.
     scale_known : bool
         Whether the surfaces fix a scale.
+    budget : float
+        Largest standard error of a motion that counts as fixed, at the place moved most [m].
+    texture : Texture or None
+        What intensity says about motions that the surfaces leave open.
     """
 
     reference: Surface
@@ -58,6 +63,8 @@ class Work:
     strong: FloatArray = field(default_factory=lambda: np.eye(6))
     weak: FloatArray = field(default_factory=lambda: np.empty((6, 0)))
     scale_known: bool = False
+    budget: float = np.inf
+    texture: Texture | None = None
     iterations: int = 0
 
     @property

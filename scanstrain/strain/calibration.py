@@ -56,11 +56,14 @@ class Calibration:
         "stable ground", "whole surface" or "none".
     gauges : int
         Gauges on that ground.
+    steady : ndarray of shape (g,), bool
+        Gauges whose whole patch was used as stable ground by the registration.
     """
 
     factors: dict[str, dict[str, float]]
     ground: str
     gauges: int
+    steady: NDArray[np.bool_]
 
 
 def calibrate(
@@ -83,7 +86,8 @@ def calibrate(
     calibration : Calibration
     warnings : tuple of str
     """
-    established, ground = _ground(field, registration, points)
+    steady = share_around(field, points, registration.stable) >= WHOLLY_STABLE
+    established, ground = _ground(field, registration, steady)
     fewest = FEWEST_PATCHES if established else FEWEST_AT_ALL
     values = np.concatenate([field.displacement, field.gradient.reshape(-1, 6), field.hessian], axis=1)
     error = field.covariance + registration_covariance(field.position, field.frame, registration)
@@ -103,21 +107,22 @@ def calibrate(
             for column in columns:
                 scale[here, column] = factors[kind][name]
     if whole < fewest:
-        return field, Calibration(factors, "none", 0), ()
+        return field, Calibration(factors, "none", 0, steady), ()
     calibrated = replace(field, covariance=field.covariance * scale[:, :, None] * scale[:, None, :])
     where = "stable ground" if established else "whole surface"
-    return calibrated, Calibration(factors, where, int(ground.sum())), _warnings(factors, established)
+    return calibrated, Calibration(factors, where, int(ground.sum()), steady), _warnings(factors, established)
 
 
-def _ground(field: AffineField, registration: Registration, points: FloatArray) -> tuple[bool, NDArray[np.bool_]]:
-    """Whether stable ground is established, and the gauges on it, or else all fitted ones."""
+def _ground(
+    field: AffineField, registration: Registration, steady: NDArray[np.bool_]
+) -> tuple[bool, NDArray[np.bool_]]:
+    """Whether stable ground is established, and the fitted gauges on it, or else all fitted ones."""
     fine = field.status == Status.FINE
     if registration.stable_fraction < ESTABLISHED * registration.overlap:
         return False, fine
-    steady = fine & (stable_share(field, points, registration.stable) >= WHOLLY_STABLE)
-    if _patches(field, steady) < FEWEST_PATCHES and registration.stable_fraction < ESTABLISHED:
+    if _patches(field, fine & steady) < FEWEST_PATCHES and registration.stable_fraction < ESTABLISHED:
         return False, fine
-    return True, steady
+    return True, fine & steady
 
 
 def _patches(field: AffineField, gauges: NDArray[np.bool_]) -> float:
@@ -125,12 +130,25 @@ def _patches(field: AffineField, gauges: NDArray[np.bool_]) -> float:
     return float(gauges.sum() * (field.gauge_spacing / field.gauge_length) ** 2)
 
 
-def stable_share(field: AffineField, points: FloatArray, stable: NDArray[np.bool_]) -> FloatArray:
-    """Share of stable points within a gauge radius of every gauge, from an even sample of some hundred a gauge."""
+def share_around(field: AffineField, points: FloatArray, belongs: NDArray[np.bool_]) -> FloatArray:
+    """Share of the points within a gauge radius that belong to something, from an even sample of some hundred a gauge.
+
+    Parameters
+    ----------
+    field : AffineField
+    points : ndarray of shape (n, 3)
+        Local coordinates [m].
+    belongs : ndarray of shape (n,), bool
+
+    Returns
+    -------
+    ndarray of shape (g,)
+        [1]; 0 for a gauge without points.
+    """
     from scipy.spatial import cKDTree
 
     step = max(1, int(np.median(field.points[field.status == Status.FINE])) // 200)
-    sample, known = points[::step], stable[::step]
+    sample, known = points[::step], belongs[::step]
     tree, gauges = cKDTree(sample), cKDTree(field.position)
     pairs = gauges.sparse_distance_matrix(tree, field.gauge_length / 2, output_type="ndarray")
     total = np.bincount(pairs["i"], minlength=len(field))

@@ -41,6 +41,7 @@ def compute_strain(
     thickness: float | None = None,
     axis: ArrayLike | None = None,
     false_discovery_rate: float = 0.05,
+    stable: NDArray[np.bool_] | None = None,
 ) -> StrainField:
     """Turn local affine maps into strain, rotation and change of curvature with standard errors.
 
@@ -62,6 +63,8 @@ def compute_strain(
         Direction of a tunnel's axis; found from the normals where not given.
     false_discovery_rate : float
         Accepted share of false ones among the discoveries.
+    stable : ndarray of shape (g,), bool, optional
+        Gauges on stable ground, for the attribute of that name. Default: none.
 
     Returns
     -------
@@ -93,7 +96,7 @@ def compute_strain(
         position=field.position,
         normal=np.asarray(field.frame[:, :, 2]),
         axes=np.asarray(gauges.scatter(axes, np.nan), dtype=np.float64),
-        values=_table(field, gauges, values, gauges.observed_bits(axes), false_discovery_rate),
+        values=_table(field, gauges, values, gauges.observed_bits(axes), false_discovery_rate, stable),
         status=np.asarray(field.status, dtype=np.uint8),
         measure=measure,
         measure_reason=reason,
@@ -226,13 +229,19 @@ def _detection_limits(gauges: Gauges, moved: Kinematics) -> Values:
 
 
 def _table(
-    field: AffineField, gauges: Gauges, values: Values, bits: NDArray[np.uint8], rate: float
+    field: AffineField,
+    gauges: Gauges,
+    values: Values,
+    bits: NDArray[np.uint8],
+    rate: float,
+    stable: NDArray[np.bool_] | None,
 ) -> Mapping[str, NDArray[np.generic]]:
     """Every attribute over all gauges: NaN, or the reason code, where there is no fit."""
     codes: dict[str, NDArray[np.generic]] = {
         "discovery": gauges.scatter(benjamini_hochberg(values["significance"], rate).astype(np.uint8), 0),
         "observed": gauges.scatter(bits, 0),
         "status": np.asarray(field.status, dtype=np.uint8),
+        "stable": np.asarray(np.zeros(len(field)) if stable is None else stable, dtype=np.uint8),
         "gauge_points": np.clip(field.points, 0, _POINTS_CAP).astype(np.uint16),
     }
     return {a.name: codes[a.name] if a.name in codes else gauges.scatter(values[a.name], np.nan) for a in ATTRIBUTES}

@@ -48,7 +48,7 @@ TENSOR_NAMES = (
     "strain_1", "strain_2", "shear_max", "strain_u", "strain_v", "shear_uv",
 )  # fmt: skip
 
-FROM_NEAREST = ("significance", "discovery", "observed", "gauge_points")
+FROM_NEAREST = ("significance", "discovery", "observed", "stable", "gauge_points")
 """Not linear fields: taken from the nearest gauge, so that the p-value and the verdict on it agree."""
 
 

@@ -20,13 +20,15 @@ LAYERS = (
     ("errors", "attributes", "progress", "workers"),
     ("registry",),
     ("linalg", "epoch"),
-    ("cells",),
+    ("zones", "cells"),
+    ("structures",),
     ("registration",),
     ("neighbourhood",),
     ("strain",),
     ("result", "synthetic", "io"),
     ("outputs",),
     ("config", "inspection"),
+    ("datum", "parts"),
     ("pipeline",),
     ("batch", "plugin"),
     ("screens", "terminal"),
@@ -41,7 +43,7 @@ STAGES = ("registration", "neighbourhood", "strain")
 RESULTS = {"strain": {"registration.result", "neighbourhood.result"}, "neighbourhood": {"registration.result"}}
 """What a stage may know of the stages before it: the type that they hand on."""
 
-NUMERICS = ("linalg", "epoch", "cells", *STAGES)
+NUMERICS = ("linalg", "epoch", "zones", "cells", "structures", *STAGES)
 FILES = {"pathlib", "os", "io", "shutil", "tempfile", "json", "csv", "tomllib", "laspy", "lazrs", "pye57", "plyfile"}
 SHOWN = {"click", "rich", "matplotlib", "pydantic", "jinja2", "logging"}
 

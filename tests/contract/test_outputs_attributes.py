@@ -43,6 +43,7 @@ PUBLISHED = [
     ("discovery", "1", "uint8"),
     ("observed", "1", "uint8"),
     ("status", "1", "uint8"),
+    ("stable", "1", "uint8"),
     ("gauge_points", "1", "uint16"),
 ]
 

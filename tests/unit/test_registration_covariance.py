@@ -60,7 +60,7 @@ def test_without_common_errors_the_textbook_covariance_is_reached():
 def test_held_motions_keep_the_uncertainty_of_the_start():
     basis = np.linalg.qr(np.random.default_rng(3).normal(size=(6, 6)))[0]
     strong, weak = basis[:, :4], basis[:, 4:]
-    whole = full_covariance(np.diag([1.0, 2, 3, 4]) * 1e-10, strong, weak, np.array([0.1, 0.05]))
+    whole = full_covariance(np.diag([1.0, 2, 3, 4]) * 1e-10, strong, weak, np.diag([0.01, 0.0025]))
     np.testing.assert_allclose(weak.T @ whole @ weak, np.diag([0.01, 0.0025]), atol=1e-12)
     np.testing.assert_allclose(strong.T @ whole @ strong, np.diag([1.0, 2, 3, 4]) * 1e-10, atol=1e-14)
 

@@ -8,12 +8,18 @@ import numpy as np
 import pytest
 
 from scanstrain.registration.match import Metric
-from scanstrain.registration.stable import Patches, choose_ground, patch_of_blocks
+from scanstrain.registration.patches import Patches, patch_of_blocks
+from scanstrain.registration.stable import Hypothesis
+from scanstrain.registration.stable import choose_ground as choose
 from scanstrain.registration.surfaces import make_surface
 
 SCENES = runpy.run_path(str(Path(__file__).parents[1] / "registration_scenes.py"))
 METRIC = Metric(np.zeros(3), 4.0)
 SD = 1e-4
+
+
+def choose_ground(seen, strong, metric, places, seed):
+    return choose([Hypothesis(np.zeros(6), seen)], strong, metric, places, limit=np.inf, seed=seed)
 
 
 def patches(rng, moved_share, sigmas, count=120):
@@ -79,3 +85,19 @@ def test_patches_are_not_cut_by_the_sign_of_the_noise():
     assert np.mean(both) > 0.9
     assert index.min() == 0
     assert count == index.max() + 1
+
+
+def test_ground_on_both_ends_wins_over_a_larger_part_between_them_and_says_so():
+    """A plane wall 12 m long: its middle 55 % moved; the two ends fix tilt and shift 2-3 times better."""
+    rng = np.random.default_rng(7)
+    x = np.c_[rng.uniform(-6, 6, 240), np.zeros(240), rng.uniform(-1, 1, 240)]
+    row = np.c_[np.cross(x / METRIC.arm, [0, 1, 0]), np.tile([0.0, 1.0, 0.0], (240, 1))]
+    middle = np.abs(x[:, 0]) < 3.3
+    seen = Patches(row, rng.normal(0, SD, 240) + 30 * SD * middle, np.full(240, SD), np.full(240, 10.0))
+    strong = np.eye(6)[:, [0, 2, 4]]
+    ground = choose_ground(seen, strong, METRIC, x, 0)
+    assert ground.by_strength
+    assert ground.stable[~middle].mean() > 0.95
+    assert ground.stable[middle].mean() < 0.05
+    assert ground.second_share > ground.share
+    assert ground.second_shift == pytest.approx(30 * SD, rel=0.3)

@@ -4,7 +4,7 @@
 import numpy as np
 import pytest
 
-from scanstrain.registration.covariance import at_least
+from scanstrain.linalg import at_least
 from scanstrain.registration.match import Metric, Rows
 from scanstrain.registration.weak import complement, name_directions, reach, separate, split
 

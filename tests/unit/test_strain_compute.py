@@ -18,7 +18,7 @@ from scanstrain.strain import compute_strain
 FIELDS = runpy.run_path(str(Path(__file__).parents[1] / "strain_fields.py"))
 affine_field = FIELDS["affine_field"]
 WALL = np.stack([[1.0, 0, 0], [0, 0, 1], [0, -1, 0]], axis=-1)  # a1 = x, a2 = up, n = -y towards the viewer
-CODES = ("discovery", "observed", "status", "gauge_points")
+CODES = ("discovery", "observed", "status", "stable", "gauge_points")
 
 
 @pytest.fixture
