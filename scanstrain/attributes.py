@@ -11,14 +11,14 @@ from typing import Literal
 
 import numpy as np
 
-Kind = Literal["signed", "magnitude", "error", "probability", "code"]
+Kind = Literal["signed", "magnitude", "error", "probability", "code", "place"]
 
 
 @dataclass(frozen=True, slots=True)
 class Attribute:
     """One written quantity.
 
-    `kind` says how it is coloured: signed about zero, magnitude from zero, standard error, probability, or code.
+    `kind` says how it is coloured: signed about zero, magnitude from zero, standard error, probability, code, or place on the object.
     `person` is the unit for text that a person reads and `factor` what the stored value is multiplied by for it.
     """
 
@@ -91,6 +91,22 @@ ATTRIBUTES: tuple[Attribute, ...] = (
     Attribute("status", "1", "code", "0 fine, else a reason code", "uint8"),
     Attribute("stable", "1", "code", "1 = used as stable ground", "uint8"),
     Attribute("gauge_points", "1", "code", "reference points in the fit", "uint16"),
+    Attribute("chainage", "m", "place", "m along the tunnel axis", person="m"),
+    Attribute("clock", "rad", "place", "rad from the crown, clockwise", person="rad"),
 )
 
 BY_NAME = {attribute.name: attribute for attribute in ATTRIBUTES}
+
+JUDGED = (
+    "disp_x", "disp_y", "disp_z", "disp_n", "strain_1", "strain_2", "shear_max", "dilation", "strain_u", "strain_v",
+    "shear_uv", "tilt", "spin", "curv_1", "curv_2", "bend_1", "bend_2",
+)  # fmt: skip
+"""Attributes whose error is known at every gauge, so that they can be averaged and held against limits."""
+
+OF_BODIES = {
+    "shift": ("m", "movement along the mean normal of a part, positive to its free side"),
+    "lean": ("rad", "rotation about the horizontal in the plane of a part, positive where its top came forward"),
+    "yaw": ("rad", "rotation of a part about the vertical, anticlockwise seen from above"),
+    "mean_disp_n": ("m", "mean normal displacement of a part"),
+}
+"""Unit and meaning of what the object or a zone has as a whole."""

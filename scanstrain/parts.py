@@ -13,6 +13,7 @@ from scanstrain.config import CompareConfig
 from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.registration.result import Registration
+from scanstrain.result import WHOLE
 from scanstrain.zones import Unrolled, mask_of
 
 if TYPE_CHECKING:
@@ -20,8 +21,6 @@ if TYPE_CHECKING:
 
 BoolArray = NDArray[np.bool_]
 
-WHOLE = "whole object"
-"""Name of the body that all gauges belong to."""
 MOSTLY = 0.5
 """A gauge belongs to a zone if at least this share of the points about it do."""
 

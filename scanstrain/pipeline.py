@@ -8,7 +8,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,6 +19,13 @@ from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
 from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.result import Result
+from scanstrain.shape import Shape, places_on, sections_of, shape_of
+
+if TYPE_CHECKING:  # the stages compile when they are loaded
+    from scanstrain.neighbourhood.result import AffineField
+    from scanstrain.registration.result import Registration
+    from scanstrain.strain.calibration import Calibration
+    from scanstrain.strain.result import StrainField
 
 FloatArray = NDArray[np.float64]
 Progress = Callable[[str, float], None]
@@ -101,61 +108,34 @@ def compare_epochs(
 
 
 def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...]) -> Result:
-    from scanstrain.neighbourhood import fit_affine
     from scanstrain.registration import register
-    from scanstrain.strain import blend_to_points, calibrate, compute_strain
+    from scanstrain.strain import blend_to_points, calibrate
 
-    options = config.neighbourhood
-    gauge_length = _number(options.gauge_length) or auto_gauge_length(reference, current)
-    axis = tunnel_axis(reference, gauge_length) if config.strain.structure == "tunnel" else None
-    with clock.stage("set-ups", 0.08):
-        reference, own_seams, own_doubts = check_setups(reference, align=config.registration.align_setups)
-        current, seams, more_doubts = check_setups(current, align=config.registration.align_setups)
+    align = config.registration.align_setups
+    with clock.stage("set-ups", 0.06):
+        reference, own_seams, own_doubts = check_setups(reference, align=align)
+        current, seams, more_doubts = check_setups(current, align=align)
+    with clock.stage("structure", 0.08):
+        shape = shape_of(reference, config)
+        unrolled = shape.unroll(reference.points)
     with clock.stage("registration", 0.1):
-        registration = register(reference, current, **datum_options(reference, config))
+        registration = register(reference, current, **datum_options(reference, config, unrolled))
+        moved = current.moved(registration.T_ref_cur)
     with clock.stage("neighbourhood", 0.3):
-        affine = fit_affine(
-            reference,
-            current.moved(registration.T_ref_cur),
-            gauge_length=gauge_length,
-            gauge_spacing=_number(options.gauge_spacing),
-            resolution=_number(options.resolution),
-            use_intensity=options.use_intensity,
-            min_points=options.min_points,
-            required_displacement_sd=_number(options.required_displacement_sd),
-            required_strain_sd=_number(options.required_strain_sd),
-            free_side=None if config.strain.free_side is None else np.array(config.strain.free_side) - reference.origin,
-            axis=axis,
-            progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
-        )
+        affine = _fit(reference, moved, shape, config, clock)
     with clock.stage("strain", 0.8):
         affine, calibration, doubts = calibrate(affine, registration, reference.points)
-        strain = compute_strain(
-            affine,
-            registration=registration,
-            measure=config.strain.measure,
-            structure=config.strain.structure,
-            thickness=config.strain.thickness,
-            axis=axis,
-            false_discovery_rate=config.strain.false_discovery_rate,
-            stable=calibration.steady,
-        )
-        bodies = bodies_of(affine, registration, gauges_of_zones(affine, reference, config, None))
+        strain = _strain(affine, registration, calibration, shape, config)
+        zones = gauges_of_zones(affine, reference, config, unrolled)
+        bodies = bodies_of(affine, registration, zones)
+    with clock.stage("sections", 0.83):
+        sections = sections_of(shape, reference, moved, registration, config)
     with clock.stage("points", 0.85):
         points = blend_to_points(strain, reference.points)
-        points["stable"] = registration.stable.astype(np.uint8)
+        points |= {"stable": registration.stable.astype(np.uint8), **places_on(unrolled)}
     clock.say("done", 1.0)
     targets = registration.targets.warnings if registration.targets else ()
-    said = (
-        *notices,
-        *own_doubts,
-        *more_doubts,
-        *targets,
-        *registration.warnings,
-        *affine.warnings,
-        *doubts,
-        *strain.warnings,
-    )
+    said = (*notices, *own_doubts, *more_doubts, *targets, *registration.warnings, *affine.warnings, *doubts)
     return Result(
         reference,
         current,
@@ -166,9 +146,52 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         points,
         config,
         clock.seconds,
-        tuple(dict.fromkeys(said)),
+        tuple(dict.fromkeys((*said, *strain.warnings))),
         bodies=bodies,
+        zones=zones,
         seams={"reference": own_seams, "current": seams},
+        axis=shape.axis,
+        sections=sections,
+    )
+
+
+def _fit(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, clock: Clock) -> AffineField:
+    """Run the neighbourhood stage with its options."""
+    from scanstrain.neighbourhood import fit_affine
+
+    options, free_side = config.neighbourhood, config.strain.free_side
+    return fit_affine(
+        reference,
+        moved,
+        gauge_length=_number(options.gauge_length) or auto_gauge_length(reference, moved),
+        gauge_spacing=_number(options.gauge_spacing),
+        resolution=_number(options.resolution),
+        use_intensity=options.use_intensity,
+        min_points=options.min_points,
+        required_displacement_sd=_number(options.required_displacement_sd),
+        required_strain_sd=_number(options.required_strain_sd),
+        free_side=None if free_side is None else np.array(free_side) - reference.origin,
+        axis=shape.guide(),
+        progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
+    )
+
+
+def _strain(
+    affine: AffineField, registration: Registration, calibration: Calibration, shape: Shape, config: CompareConfig
+) -> StrainField:
+    """Run the strain stage with its options."""
+    from scanstrain.strain import compute_strain
+
+    options = config.strain
+    return compute_strain(
+        affine,
+        registration=registration,
+        measure=options.measure,
+        structure=options.structure,
+        thickness=options.thickness,
+        axis=shape.directions(affine.position),
+        false_discovery_rate=options.false_discovery_rate,
+        known={"stable": calibration.steady, **places_on(shape.unroll(affine.position))},
     )
 
 
@@ -181,15 +204,6 @@ def auto_gauge_length(reference: Epoch, current: Epoch) -> float:
     if not length > 0:
         raise OptionError(explain("gauge_length", "scans with distinct points", "coincident ones", "export them again"))
     return float(f"{length:.2g}")
-
-
-def tunnel_axis(reference: Epoch, gauge_length: float) -> FloatArray | None:
-    """Direction of a tunnel, from the normals of the reference surface; None where they do not show one."""
-    from scanstrain.cells import make_cells
-    from scanstrain.strain.axes import axis_of_normals
-
-    cells = make_cells(reference.points, gauge_length / 16)
-    return axis_of_normals(cells.normal[cells.planarity < 0.1])
 
 
 def _number(value: float | str) -> float | None:

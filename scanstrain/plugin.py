@@ -106,7 +106,7 @@ def strain(data: Arrays, **options: Any) -> Data:
     field = AffineField(**data["field"])
     if datum is not None:
         field, calibration, _ = calibrate(field, datum, reference.points)
-        options = {"stable": calibration.steady, **options}
+        options = {"known": {"stable": calibration.steady}, **options}
     result = compute_strain(field, registration=datum, **options)
     return {**data, "gauges": dict(result.values), "points": blend_to_points(result, reference.points)}
 

@@ -18,8 +18,12 @@ from scanstrain.registration.seams import Seam
 from scanstrain.strain.bodies import BodyMotion
 from scanstrain.strain.calibration import Calibration
 from scanstrain.strain.result import StrainField
+from scanstrain.structures import Axis, Section
 
 FloatArray = NDArray[np.float64]
+
+WHOLE = "whole object"
+"""Name of the part that all gauges belong to."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,15 +46,21 @@ class Result:
         Every attribute of `scanstrain.attributes.ATTRIBUTES` at the n points of `reference`, in their order and in
         the attribute's type; NaN where the data do not support a value.
     config : pydantic model
-        The resolved configuration; anything with `model_dump(mode="json")`.
+        The resolved configuration; anything with `model_dump(mode="json")` and the tables that outputs ask for.
     timing : mapping of str to float
         Seconds per stage.
     warnings : tuple of str
         Sentences for the user, in the order in which they arose.
     bodies : tuple of BodyMotion
         Rigid motion after registration of the whole object and of each zone.
+    zones : mapping of str to ndarray of shape (g,), bool
+        Gauges of each zone by its name.
     seams : mapping of str to tuple of Seam
         For "reference" and "current": how the set-ups of the epoch lie against one another.
+    axis : Axis or None
+        Of a tunnel, found on the reference epoch or given.
+    sections : tuple of Section
+        Square to that axis.
     """
 
     reference: Epoch
@@ -64,7 +74,10 @@ class Result:
     timing: Mapping[str, float]
     warnings: tuple[str, ...] = ()
     bodies: tuple[BodyMotion, ...] = ()
+    zones: Mapping[str, NDArray[np.bool_]] = default(default_factory=dict)
     seams: Mapping[str, tuple[Seam, ...]] = default(default_factory=dict)
+    axis: Axis | None = None
+    sections: tuple[Section, ...] = ()
 
     @property
     def gauge_positions(self) -> FloatArray:

@@ -10,12 +10,14 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Annotated, Literal
 
-from pydantic import Field, Strict, ValidationInfo, field_validator
+from pydantic import Field, Strict, ValidationInfo, field_validator, model_validator
 
+from scanstrain.config.assessment import SeriesOptions
 from scanstrain.config.base import FilePath, Options
 from scanstrain.config.faults import Fault, contradiction, refuse, refuse_all
 from scanstrain.config.models import CompareConfig
 from scanstrain.config.output import OutputOptions
+from scanstrain.errors import OptionError
 
 LABEL = r"^\w[\w.-]*$"
 
@@ -69,6 +71,9 @@ class BatchConfig(CompareConfig):
         description="Compare every epoch with the first one, or with the one before it; instead of "
         '[[comparison]] tables. No default in the file; if neither is given, "first".',
     )
+    series: SeriesOptions = Field(
+        default=SeriesOptions(), description="Rates, where three dated epochs or more are compared with the first."
+    )
     output: BatchOutputOptions = Field(description="Result folder, colours and missing values.")
     epoch: Annotated[tuple[EpochEntry, ...], Strict(False)] = Field(
         min_length=2, description="The epochs, in order of date."
@@ -92,6 +97,18 @@ class BatchConfig(CompareConfig):
             refuse_all(list(_impossible_pairs(value, {entry.label: entry for entry in info.data["epoch"]})))
         return value
 
+    @model_validator(mode="after")
+    def _dates_that_show_a_season(self) -> BatchConfig:
+        if self.series.season:
+            refuse_all(list(_no_season(self.followed())))
+        return self
+
+    def followed(self) -> tuple[EpochEntry, ...]:
+        """Return the epochs of the series: the first one, and those with a date that are compared with it."""
+        first = self.epoch[0]
+        later = [current for reference, current in self.pairs() if reference is first and current.date is not None]
+        return (first, *later) if first.date is not None else ()
+
     def pairs(self) -> list[tuple[EpochEntry, EpochEntry]]:
         """Return the (reference, current) epochs of every comparison, in the order of the file."""
         if self.comparison:
@@ -108,8 +125,11 @@ class BatchConfig(CompareConfig):
             registration=self.registration,
             neighbourhood=self.neighbourhood,
             strain=self.strain,
+            tunnel=self.tunnel,
+            budget=self.budget,
             output=output,
             zone=self.zone,
+            trigger=self.trigger,
         )
 
     def placed(self, base: Path) -> BatchConfig:
@@ -151,6 +171,17 @@ def _unordered_dates(epochs: tuple[EpochEntry, ...]) -> Iterator[Fault]:
             got = f"{entry.date} after {latest.date} of {latest.label!r}"
             yield contradiction("epochs in order of date", got, "put the older epoch first", key=(position, "date"))
         latest = entry if entry.date else latest
+
+
+def _no_season(epochs: tuple[EpochEntry, ...]) -> Iterator[Fault]:
+    """What keeps an annual wave from being fitted to a series."""
+    from scanstrain.series import check_dates
+
+    try:
+        check_dates([epoch.date for epoch in epochs if epoch.date is not None], season=True)
+    except OptionError as error:
+        _, _, said = str(error).rstrip(".").partition(": ")
+        yield Fault(("series", "season"), said)
 
 
 def _impossible_pairs(pairs: tuple[ComparisonEntry, ...], epochs: dict[str, EpochEntry]) -> Iterator[Fault]:

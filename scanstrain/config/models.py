@@ -8,13 +8,18 @@ from typing import Annotated, ClassVar, Literal
 
 from pydantic import Field, Strict, ValidationInfo, field_validator, model_validator
 
+from scanstrain.config.assessment import BudgetOptions, faults_of_triggers
 from scanstrain.config.base import Auto, FilePath, Options, Point, Positive
 from scanstrain.config.faults import contradiction, refuse, refuse_all
 from scanstrain.config.output import OutputOptions
+from scanstrain.config.trigger import TriggerEntry
 from scanstrain.config.zone import ZoneEntry, repeated_names
 from scanstrain.zones import Zone
 
 Names = Annotated[tuple[str, ...], Strict(False)]
+Places = Annotated[tuple[Point, ...], Strict(False), Field(min_length=2)]
+Hour = Annotated[float, Field(ge=0, le=12)]
+Chords = Annotated[tuple[Annotated[tuple[Hour, Hour], Strict(False)], ...], Strict(False)]
 
 
 class RegistrationOptions(Options):
@@ -31,7 +36,8 @@ class RegistrationOptions(Options):
         default=None,
         examples=["targets.csv"],
         description='For start = "file" a 4x4 matrix in a text file or a registered.json; for start = "targets" a '
-        "CSV of pairs of points. A relative path starts at this configuration file. No default: other starts need none.",
+        "CSV of pairs of points. A relative path starts at this configuration file. No default: other starts need "
+        "none.",
     )
     capture_range: Positive = Field(
         default=0.3,
@@ -172,15 +178,46 @@ class StrainOptions(Options):
     )
 
 
+class TunnelOptions(Options):
+    """The axis of a tunnel and the sections that are cut square to it."""
+
+    axis: Places | None = Field(
+        default=None,
+        examples=[[[0.0, 0.0, 1.5], [10.0, 0.0, 1.6]]],
+        description="Points [x, y, z] along the axis in file coordinates [m], in the direction of rising chainage. No "
+        "default: the axis is found on the reference scan.",
+    )
+    section_spacing: Positive | Auto = Field(
+        default="auto",
+        description="Distance between sections [m]. Default auto: about the radius of the lining, which shows every "
+        "ring or two.",
+    )
+    section_thickness: Positive | Auto = Field(
+        default="auto",
+        description="Length of tunnel that goes into one section [m]. Default auto: 0.01 m, which is too thin to blur a "
+        "step between rings, or more where points are sparse.",
+    )
+    chords: Chords = Field(
+        default=(),
+        description="Chords [from, to] by the clock hours of their ends, 12 at the crown [1]. No default: horizontal "
+        "and vertical diameter are always measured.",
+    )
+
+
 class CompareConfig(Options):
     """Everything that one comparison needs to know."""
 
     registration: RegistrationOptions = Field(default=RegistrationOptions(), description="Alignment of the two epochs.")
     neighbourhood: NeighbourhoodOptions = Field(default=NeighbourhoodOptions(), description="Gauges and their fit.")
     strain: StrainOptions = Field(default=StrainOptions(), description="Strain, rotation, significance.")
+    tunnel: TunnelOptions = Field(default=TunnelOptions(), description="Axis and sections of a tunnel.")
+    budget: BudgetOptions = Field(default=BudgetOptions(), description="Even strain from temperature, for comparison.")
     output: OutputOptions = Field(default=OutputOptions(), description="Colours and missing values.")
     zone: Annotated[tuple[ZoneEntry, ...], Strict(False)] = Field(
         default=(), description="Named parts of the object, for stable ground and for results by zone."
+    )
+    trigger: Annotated[tuple[TriggerEntry, ...], Strict(False)] = Field(
+        default=(), description="Your own limits on quantities of the results, in the whole object or in a zone."
     )
 
     @field_validator("registration")
@@ -214,6 +251,8 @@ class CompareConfig(Options):
                     remedy = f"did you mean {near[0]!r}" if near else "add a [[zone]] of that name"
                     location = ("registration", key)
                     faults.append(contradiction("the name of a [[zone]]", repr(name), remedy, key=location))
+        if self.trigger:
+            faults += faults_of_triggers(self)
         refuse_all(faults)
         return self
 

@@ -18,13 +18,14 @@ from pydantic.fields import FieldInfo
 
 from scanstrain.config.batch_file import BatchConfig
 from scanstrain.config.faults import required
+from scanstrain.config.trigger import TriggerEntry
 from scanstrain.config.zone import ZoneEntry
 from scanstrain.errors import OptionError, OutputError, explain
 
 PLACEHOLDERS = ("first_scan.laz", "second_scan.laz")
 """Files that a starter names when it is given none; a check lets them pass with a word."""
 
-LISTS = ("epoch", "comparison", "zone")
+LISTS = ("epoch", "comparison", "zone", "trigger")
 """Tables that may stand several times."""
 
 WIDTH = 100
@@ -80,7 +81,7 @@ def starter_text(
             for option in model.model_fields:
                 lines += [*_option(model, option, values), ""]
             lines.pop()
-    lines += ["", *_zone()]
+    lines += ["", *_list_entry("zone", ZoneEntry, "abutment"), "", *_list_entry("trigger", TriggerEntry, "movement")]
     return "\n".join(lines) + "\n"
 
 
@@ -151,10 +152,11 @@ def _epochs(epochs: Sequence[StarterEpoch]) -> list[str]:
     return lines
 
 
-def _zone() -> list[str]:
-    lines = _comment(str(BatchConfig.model_fields["zone"].description))
-    lines += ["#[[zone]]", '#name = "abutment"']
-    for name, field in ZoneEntry.model_fields.items():
+def _list_entry(table: str, model: type[BaseModel], example: str) -> list[str]:
+    """One table of a list, all of it behind a `#`: nothing of the kind is there until somebody writes it."""
+    lines = _comment(str(BatchConfig.model_fields[table].description))
+    lines += [f"#[[{table}]]", f'#name = "{example}"']
+    for name, field in model.model_fields.items():
         if field.examples:
             lines += [*_comment(str(field.description)), f"#{name} = {json.dumps(field.examples[0])}"]
     return lines

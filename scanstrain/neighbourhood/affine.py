@@ -4,7 +4,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,8 +12,9 @@ from numpy.typing import NDArray
 from scanstrain.cells import median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import FitError, OptionError, explain
+from scanstrain.neighbourhood.correlation import count_correlation
 from scanstrain.neighbourhood.fit import CELLS, COVER, MATCHED, POINTS, SCALE_GREY, SCALE_NORMAL
-from scanstrain.neighbourhood.gauges import frames_at, place_gauges
+from scanstrain.neighbourhood.gauges import Guide, frames_at, place_gauges, straight_guide
 from scanstrain.neighbourhood.intensity import comparable_intensity
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
 from scanstrain.neighbourhood.result import AffineField, Status
@@ -75,7 +76,7 @@ def fit_affine(
     required_displacement_sd: float | None = None,
     required_strain_sd: float | None = None,
     free_side: FloatArray | None = None,
-    axis: FloatArray | None = None,
+    axis: FloatArray | Guide | None = None,
     progress: Progress | None = None,
 ) -> AffineField:
     """Fit a local affine map of the reference surface onto the current one at every gauge.
@@ -104,8 +105,9 @@ def fit_affine(
         Standard errors above which in-plane displacement [m] and strain [1] are given as not observable.
     free_side : ndarray of shape (3,), optional
         A local point on the free side of the surface [m]: fixes the sign of normals.
-    axis : ndarray of shape (3,), optional
-        Unit direction of a tunnel: gauge frames get a2 along it, otherwise a2 points upward.
+    axis : ndarray of shape (3,) or callable, optional
+        Unit direction of a straight tunnel, or for any tunnel the nearest places on its axis and the directions
+        there, each (n, 3), from places (n, 3): normals look to the axis and a2 runs along it, otherwise a2 is upward.
     progress : callable, optional
         Called with a phrase and the share done.
 
@@ -132,7 +134,8 @@ def fit_affine(
     say("surface model", 0.0)
     finest = make_surface(reference.points, grey_reference, width, support, max(spacing, 4 * width))
     places, normals = place_gauges(finest.cells, spacing)
-    gauges, warnings = frames_at(places, normals, support_cells(finest.cells.position, radius), free_side, axis)
+    guide = straight_guide(axis, places) if isinstance(axis, np.ndarray) else axis
+    gauges, warnings = frames_at(places, normals, support_cells(finest.cells.position, radius), free_side, guide)
     need = Requirements(
         displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
         strain=required_strain_sd or REQUIRED_STRAIN_SD,
@@ -156,7 +159,7 @@ def fit_affine(
         gate = max(ours.gate, 4 * step) if not last else ours.gate + step
         for turn in range(3 if last else 1):
             before = state.held[:, :3].copy()
-            level.fit(state, gate=gate, min_points=min_points)
+            table = level.fit(state, gate=gate, min_points=min_points)
             change = np.abs(state.held[:, :3] - before)
             seen = state.data_sd[:, :3] <= state.required[:3]
             if last and turn and np.mean(np.where(seen, change, 0.0).max(axis=1) < SETTLED * step) > SETTLED_SHARE:
@@ -173,7 +176,10 @@ def fit_affine(
                 "use a longer gauge_length or denser scans",
             )
         )
-    return _field(state, gauges, status, need, gauge_length, spacing, warnings)
+    say("shared noise", 1.0)
+    correlation = count_correlation(level, state, table, np.flatnonzero(status == Status.FINE))
+    field = _field(state, gauges, status, need, gauge_length, spacing, warnings)
+    return replace(field, correlation=correlation)
 
 
 def _silent(_phrase: str, _share: float) -> None:

@@ -74,7 +74,7 @@ TUKEY_SHRINK, TUKEY_INFLATE = _tukey_moments(TUKEY)
 
 
 @numba.njit(cache=True, nogil=True)
-def _local(v: FloatArray, f: FloatArray) -> tuple[float, float, float]:
+def in_frame(v: FloatArray, f: FloatArray) -> tuple[float, float, float]:
     """Components of a vector in the columns of `f`."""
     return (
         v[0] * f[0, 0] + v[1] * f[1, 0] + v[2] * f[2, 0],
@@ -97,11 +97,11 @@ def members_of(
         if b < 0:
             continue
         for c in range(start[b], start[b + 1]):
-            x, y, z = _local(table[c, POSITION : POSITION + 3] - o, f)
+            x, y, z = in_frame(table[c, POSITION : POSITION + 3] - o, f)
             if x * x + y * y > radius * radius:
                 continue
             z -= 0.5 * k[0] * x * x + k[1] * x * y + 0.5 * k[2] * y * y
-            facing = _local(table[c, NORMAL : NORMAL + 3], f)[2]
+            facing = in_frame(table[c, NORMAL : NORMAL + 3], f)[2]
             if abs(z) < gate and abs(facing) > SAME_SHEET and m < len(out):
                 out[m] = c
                 m += 1
@@ -123,7 +123,7 @@ def _keep_matched(
         members[m] = c
         m += 1
         points += table[c, COUNT]
-        x, y, _ = _local(table[c, POSITION : POSITION + 3] - o, f)
+        x, y, _ = in_frame(table[c, POSITION : POSITION + 3] - o, f)
         half = 0.4999 * COVER_BINS
         cover[int((x / radius + 1.0) * half), int((y / radius + 1.0) * half)] = True
     info[CELLS], info[MATCHED], info[POINTS], info[COVER] = total, m, points, cover.sum() / _DISC_BINS
@@ -157,14 +157,14 @@ def observation_rows(
         mean += table[members[r], GREY] / m
     for r in range(m):
         c = members[r]
-        x = _local(table[c, POSITION : POSITION + 3] - o, f)
+        x = in_frame(table[c, POSITION : POSITION + 3] - o, f)
         s, moved = table[c, SLOPE : SLOPE + 3], table[c, MOVED : MOVED + 3]
-        _design(_local(s, f), x, radius, surface, r)
+        _design(in_frame(s, f), x, radius, surface, r)
         data[0, r] = s[0] * moved[0] + s[1] * moved[1] + s[2] * moved[2] - table[c, MISFIT]
         data[2, r], data[4, r] = table[c, VARIANCE], table[c, VARIANCE + 2]
         if textured:
             g = gain * table[c, GREY_SLOPE : GREY_SLOPE + 3]
-            _design(_local(g, f), x, radius, grey, r)
+            _design(in_frame(g, f), x, radius, grey, r)
             grey[9, r] = grey[10, r] = grey[11, r] = 0.0
             grey[12, r], grey[13, r] = table[c, GREY] - mean, 1.0
             along = g[0] * moved[0] + g[1] * moved[1] + g[2] * moved[2]

@@ -3,6 +3,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numba
 import numpy as np
 from numpy.typing import NDArray
@@ -11,6 +13,8 @@ from scanstrain.cells import Cells, group, voxel_keys
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface
 
 FloatArray = NDArray[np.float64]
+Guide = Callable[[FloatArray], tuple[FloatArray, FloatArray]]
+"""From places (g, 3) to the nearest places of a tunnel's axis (g, 3) [m] and its directions there (g, 3)."""
 IntArray = NDArray[np.int64]
 
 _CROWDED = 0.85
@@ -61,14 +65,25 @@ def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
     return places[kept], cells.normal[cells.block[chosen[kept]]]
 
 
+def straight_guide(direction: FloatArray, places: FloatArray) -> Guide:
+    """Return the guide of a straight axis through the middle of the bounding box of places (g, 3)."""
+    middle = (places.min(axis=0) + places.max(axis=0)) / 2
+
+    def guide(at: FloatArray) -> tuple[FloatArray, FloatArray]:
+        foot = middle + ((at - middle) @ direction)[:, None] * direction
+        return foot, np.broadcast_to(direction, at.shape)
+
+    return guide
+
+
 def free_side_signs(
-    places: FloatArray, normals: FloatArray, free_side: FloatArray | None, axis: FloatArray | None
+    places: FloatArray, normals: FloatArray, free_side: FloatArray | None, axis: Guide | None
 ) -> tuple[NDArray[np.float64], tuple[str, ...]]:
     """Signs that turn normals to the free side.
 
-    With a `free_side` point every normal looks towards it; with a tunnel `axis` (a direction) towards the line of
-    that direction through the middle of the places; with neither, towards the middle of their bounding box, or, for
-    a near-plane where the middle says nothing, all to one side, with a warning.
+    With a `free_side` point every normal looks towards it; with a tunnel axis towards that; with neither, towards the
+    middle of the bounding box of the places, or, for a near-plane where the middle says nothing, all to one side,
+    with a warning.
 
     Returns
     -------
@@ -77,9 +92,10 @@ def free_side_signs(
     warnings : tuple of str
     """
     middle = (places.min(axis=0) + places.max(axis=0)) / 2
-    look = (middle if free_side is None else free_side) - places
-    if axis is not None:
-        look = look - (look @ axis)[:, None] * axis
+    if free_side is not None:
+        look = free_side - places
+    else:
+        look = (middle if axis is None else axis(places)[0]) - places
     signs = np.where((normals * look).sum(axis=1) < 0, -1.0, 1.0)
     if free_side is not None or axis is not None:
         return signs, ()
@@ -97,8 +113,8 @@ def free_side_signs(
     return signs, ()
 
 
-def turn_frames(frame: FloatArray, signs: NDArray[np.float64], axis: FloatArray | None) -> FloatArray:
-    """Turn tangent frames to the structure: n to the free side, a2 along `axis`, or else a1 level and a2 upward.
+def turn_frames(frame: FloatArray, signs: NDArray[np.float64], along: FloatArray | None) -> FloatArray:
+    """Turn tangent frames to the structure: n to the free side, a2 along a tunnel, or else a1 level and a2 upward.
 
     Parameters
     ----------
@@ -106,8 +122,8 @@ def turn_frames(frame: FloatArray, signs: NDArray[np.float64], axis: FloatArray 
         Columns two tangents and a normal of either sign.
     signs : ndarray of shape (g,)
         +1 or -1 for each normal.
-    axis : ndarray of shape (3,) or None
-        Direction of a tunnel; a surface square to it keeps a level a1.
+    along : ndarray of shape (g, 3) or None
+        Directions of a tunnel's axis; a surface square to it keeps a level a1.
 
     Returns
     -------
@@ -115,10 +131,10 @@ def turn_frames(frame: FloatArray, signs: NDArray[np.float64], axis: FloatArray 
         Right-handed frames (a1, a2, n).
     """
     n = frame[:, :, 2] * signs[:, None]
-    up = np.array([0.0, 0.0, 1.0]) if axis is None else axis
-    second = up - (n @ up)[:, None] * n
+    up = np.broadcast_to([0.0, 0.0, 1.0], n.shape) if along is None else along
+    second = up - np.einsum("gi,gi->g", n, up)[:, None] * n
     flat = np.linalg.norm(second, axis=1) < 0.1
-    spare = np.array([0.0, 1.0, 0.0]) if axis is None else np.array([0.0, 0.0, 1.0])
+    spare = np.array([0.0, 1.0, 0.0]) if along is None else np.array([0.0, 0.0, 1.0])
     second[flat] = (spare - (n @ spare)[:, None] * n)[flat]
     second /= np.linalg.norm(second, axis=1, keepdims=True)
     first = np.cross(second, n)
@@ -126,7 +142,7 @@ def turn_frames(frame: FloatArray, signs: NDArray[np.float64], axis: FloatArray 
 
 
 def frames_at(
-    places: FloatArray, normals: FloatArray, support: Cells, free_side: FloatArray | None, axis: FloatArray | None
+    places: FloatArray, normals: FloatArray, support: Cells, free_side: FloatArray | None, axis: Guide | None
 ) -> tuple[SmoothSurface, tuple[str, ...]]:
     """Fit the smooth surface at the gauges and turn its frames to the structure.
 
@@ -138,7 +154,7 @@ def frames_at(
     """
     fitted = smooth_surface(places, normals, support)
     signs, warnings = free_side_signs(fitted.origin, fitted.frame[:, :, 2], free_side, axis)
-    frame = turn_frames(fitted.frame, signs, axis)
+    frame = turn_frames(fitted.frame, signs, None if axis is None else axis(fitted.origin)[1])
     turn = np.einsum("gai,gaj->gij", fitted.frame[:, :, :2], frame[:, :, :2])
     k11, k12, k22 = fitted.curvature.T
     old = np.stack([k11, k12, k12, k22], axis=1).reshape(-1, 2, 2)

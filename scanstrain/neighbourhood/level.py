@@ -100,6 +100,9 @@ class Level:
         self.nuisance[[0, 1]], self.nuisance[[3, 4, 5, 6]] = NUISANCE_DISPLACEMENT, gradient
         # Members are gathered through a coarse hash of their own, as wide as a gauge radius.
         self.hash = group(voxel_keys(cells.position, radius))
+        self.weak = WEAK_PRIOR
+        self.sheet_gate = reference.gate + 0.1 * radius
+        self.capacity = int(3 * np.pi * (radius / cells.resolution) ** 2) + 256
 
     def rows(self, held: FloatArray, gate: float) -> Rows:
         """Compare the moved reference cells with the current epoch."""
@@ -109,17 +112,17 @@ class Level:
         blend(cells.position, self.nearest, g.origin, g.frame, held, self.radius, self.spacing, moved)
         return self.comparison.rows(moved, gate)
 
-    def fit(self, state: Estimate, *, gate: float, min_points: int) -> None:
-        """Improve `state` by one comparison and one fit of every gauge."""
-        cells, g = self.reference.cells, self.gauges
+    def fit(self, state: Estimate, *, gate: float, min_points: int) -> FloatArray:
+        """Improve `state` by one comparison and one fit of every gauge; returns the table of observations."""
+        g = self.gauges
         order, key, start = self.hash
-        per_gauge = np.pi * (self.radius / cells.resolution) ** 2
+        table = self.table(self.rows(state.held, gate))
         fit.fit_gauges(
-            g.origin, g.frame, g.curvature, self.radius, self.reference.gate + 0.1 * self.radius, WEAK_PRIOR,
-            state.required, self.nuisance, cells.resolution, min_points, int(3 * per_gauge) + 256, self.textured, key,
-            start, self.table(self.rows(state.held, gate))[order], state.gains, state.held, state.values,
-            state.covariance, state.data_sd, state.info,
+            g.origin, g.frame, g.curvature, self.radius, self.sheet_gate, self.weak, state.required, self.nuisance,
+            self.reference.cells.resolution, min_points, self.capacity, self.textured, key, start, table[order],
+            state.gains, state.held, state.values, state.covariance, state.data_sd, state.info,
         )  # fmt: skip
+        return table
 
     def table(self, rows: Rows) -> FloatArray:
         """Put everything that the fit needs of a cell beside each other, columns as in `fit`."""

@@ -57,6 +57,39 @@ class Observed(IntEnum):
 
 
 @dataclass(frozen=True, slots=True)
+class SharedNoise:
+    """Noise that neighbouring points share.
+
+    Parameters
+    ----------
+    share : float
+        Its part of the noise variance of a single point [1]; 0 where none shows.
+    length : float
+        Lag at which its correlation is 1/e [m]; 0 where there is none.
+    """
+
+    share: float
+    length: float
+
+
+@dataclass(frozen=True, slots=True)
+class Correlation:
+    """What the scans themselves show of noise that neighbouring points share.
+
+    Parameters
+    ----------
+    height, intensity : SharedNoise
+        Of the two kinds of observations; intensity is None where it is not used.
+    factor : tuple of float
+        Typical factor that it puts on the standard error of each unknown, in the order of `PARAMETERS` [1].
+    """
+
+    height: SharedNoise
+    intensity: SharedNoise | None
+    factor: tuple[float, ...]
+
+
+@dataclass(frozen=True, slots=True)
 class AffineField:
     """Local affine maps from the reference to the current surface, one per gauge.
 
@@ -90,6 +123,10 @@ class AffineField:
         Root mean square of standardised residuals of the two kinds of rows [1]; near 1 where the noise model holds.
     gauge_length, gauge_spacing : float
         Patch diameter and distance between gauges [m].
+    warnings : tuple of str
+        Sentences for the user.
+    correlation : Correlation, optional
+        Noise that neighbouring points share, counted in `covariance`; None where too few gauges tell.
     """
 
     position: FloatArray
@@ -107,6 +144,7 @@ class AffineField:
     gauge_length: float
     gauge_spacing: float
     warnings: tuple[str, ...] = ()
+    correlation: Correlation | None = None
 
     def __len__(self) -> int:
         return len(self.position)

@@ -154,11 +154,13 @@ class Comparison:
         density: tuple[FloatArray, FloatArray],
         gate: float,
     ) -> None:
-        self.cells, self.current, self.density = cells, current, density
+        self.cells, self.reference, self.current, self.density = cells, reference, current, density
         self.normal = np.ascontiguousarray(reference.surface.frame[cells.block][:, :, 2])
         self.noise = np.ascontiguousarray(reference.noise[cells.block])
         at_rest = np.zeros((len(cells), 3))
-        self.own = self._evaluate(at_rest, reference, block_density(cells), 10 * gate)
+        self.own = _against(
+            reference, cells, self.normal, self.noise, at_rest, density[0], block_density(cells), 10 * gate
+        )
         self.own_valid = self.own.valid & (np.abs(self.own.misfit) < gate)
         # Onto the own predicted surface, along its normal.
         length = np.einsum("ca,ca->c", self.own.slope, self.own.slope)
@@ -176,7 +178,9 @@ class Comparison:
 
     def rows(self, moved: FloatArray, gate: float) -> Rows:
         """Compare at the displacement `moved` (c, 3) [m] of every cell; misfits beyond `gate` [m] are no match."""
-        rows = self._evaluate(moved, self.current, self.density[1], 10 * gate)
+        rows = _against(
+            self.current, self.cells, self.normal, self.noise, moved, self.density[0], self.density[1], 10 * gate
+        )
         misfit = rows.misfit + np.einsum("ca,ca->c", rows.slope, self.to_surface)
         variance = rows.variance
         variance[:, :2] += self.missed
@@ -190,17 +194,50 @@ class Comparison:
             variance=np.maximum(variance, 1e-30),
         )
 
-    def _evaluate(self, moved: FloatArray, predictor: Predictor, density: FloatArray, gate: float) -> Rows:
-        n = len(self.cells)
-        out = (
-            np.zeros(n, np.bool_), np.zeros(n), np.zeros((n, 3)), np.zeros(n), np.zeros((n, 3)), np.ones((n, 4)),
-        )  # fmt: skip
-        surface = predictor.surface
-        _evaluate(
-            self.cells.position, moved, self.cells.count, self.normal, self.density[0], density, gate, self.noise,
-            predictor.noise, predictor.cells.key, predictor.cells.block_size, surface.origin, surface.frame,
-            surface.curvature, predictor.start, predictor.st, predictor.height, predictor.intensity,
-            predictor.constant, predictor.variance, predictor.unresolved, predictor.height_table,
-            predictor.intensity_table, predictor.table_step, *out,
-        )  # fmt: skip
-        return Rows(out[0], moved, *out[1:5], np.zeros(n), out[5])
+    def back(self, chosen: IntArray, moved: FloatArray, gate: float) -> Back:
+        """Compare the current cells `chosen`, moved back by `moved` (c, 3) [m], with the predicted reference."""
+        cells = self.current.cells
+        block = cells.block[chosen]
+        normal = np.ascontiguousarray(self.current.surface.frame[block][:, :, 2])
+        noise = np.ascontiguousarray(self.current.noise[block])
+        part = replace(cells, position=cells.position[chosen], count=cells.count[chosen])
+        density = self.density[1][block], block_density(self.cells)
+        rows = _against(self.reference, part, normal, noise, -moved, *density, gate)
+        return Back(rows.valid, rows.misfit, rows.slope, rows.grey, normal, noise)
+
+
+@dataclass(frozen=True, slots=True)
+class Back:
+    """Current cells against the predicted reference: as of `Rows`, with the cells' normals and noise variances."""
+
+    valid: NDArray[np.bool_]
+    misfit: FloatArray
+    slope: FloatArray
+    grey: FloatArray
+    normal: FloatArray
+    noise: FloatArray
+
+
+def _against(
+    predictor: Predictor,
+    cells: Cells,
+    normal: FloatArray,
+    noise: FloatArray,
+    moved: FloatArray,
+    own_density: FloatArray,
+    density: FloatArray,
+    gate: float,
+) -> Rows:
+    """Compare moved cells with a predicted epoch, whose point density is given by block."""
+    n = len(cells)
+    out = (
+        np.zeros(n, np.bool_), np.zeros(n), np.zeros((n, 3)), np.zeros(n), np.zeros((n, 3)), np.ones((n, 4)),
+    )  # fmt: skip
+    surface = predictor.surface
+    _evaluate(
+        cells.position, moved, cells.count, normal, own_density, density, gate, noise, predictor.noise,
+        predictor.cells.key, predictor.cells.block_size, surface.origin, surface.frame, surface.curvature,
+        predictor.start, predictor.st, predictor.height, predictor.intensity, predictor.constant, predictor.variance,
+        predictor.unresolved, predictor.height_table, predictor.intensity_table, predictor.table_step, *out,
+    )  # fmt: skip
+    return Rows(out[0], moved, *out[1:5], np.zeros(n), out[5])

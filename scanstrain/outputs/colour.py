@@ -33,7 +33,14 @@ QUANTILE = 0.99
 SMALLEST_P = 1e-4
 """Lower end of the scale of p-values: smaller ones call for the same attention."""
 
-_MAPS = {"signed": "vik", "magnitude": "lajolla_r", "error": "imola", "probability": "acton", "code": "batlow_r"}
+_MAPS = {
+    "signed": "vik",
+    "magnitude": "lajolla_r",
+    "error": "imola",
+    "probability": "acton",
+    "code": "batlow_r",
+    "place": "batlow",
+}
 
 
 @dataclass(frozen=True, slots=True)
@@ -115,6 +122,9 @@ def choose_scale(attribute: Attribute, values: NDArray[np.generic], *, limits: L
     if attribute.kind == "probability":
         low, high = (SMALLEST_P, 1.0) if limits is None else _checked(attribute, limits)
         return Scale(attribute, low, high, table, "log", given=limits is not None)
+    if attribute.kind == "place":
+        low, high = _span(attribute, values) if limits is None else _checked(attribute, limits)
+        return Scale(attribute, low, high, _place_table(attribute), given=limits is not None)
     if limits is None:
         end = _robust_end(attribute, values)
         return Scale(attribute, -end if attribute.kind == "signed" else 0.0, end, table)
@@ -176,6 +186,20 @@ def _robust_end(attribute: Attribute, values: NDArray[np.generic]) -> float:
     return (round_up(end) if end > 0 else 1.0) / attribute.factor
 
 
+def _span(attribute: Attribute, values: NDArray[np.generic]) -> tuple[float, float]:
+    """Ends of a scale of places: the whole turn, or all that there is."""
+    if attribute.unit == "rad":
+        return -math.pi, math.pi
+    finite = np.asarray(values, dtype=np.float64)
+    finite = finite[np.isfinite(finite)]
+    return (0.0, 1.0) if not len(finite) or not np.ptp(finite) > 0 else (float(finite.min()), float(finite.max()))
+
+
+def _place_table(attribute: Attribute) -> RGB8:
+    """Angles go round, so their colours do as well."""
+    return colour_table("romaO" if attribute.unit == "rad" else _MAPS["place"])
+
+
 def _checked(attribute: Attribute, limits: Limits) -> tuple[float, float]:
     signed, probability = attribute.kind == "signed", attribute.kind == "probability"
     if isinstance(limits, (int, float)):
@@ -201,13 +225,15 @@ def _steps(attribute: Attribute) -> tuple[str, ...] | None:
         return tuple(status_word(code) for code in Status)
     if attribute.name == "discovery":
         return ("no change beyond the false-discovery control", "changed")
+    if attribute.name == "stable":
+        return ("not used as stable ground", "stable ground")
     if attribute.name == "observed":
         return ("none", *(f"{count} of 7" for count in range(1, 7)), "all 7")
     return None
 
 
 def _step_table(attribute: Attribute, count: int) -> RGB8:
-    if attribute.name == "discovery":
+    if attribute.name in ("discovery", "stable"):
         return np.array([NOT_SIGNIFICANT, colour_table("vik")[200]], dtype=np.uint8)
     if attribute.name == "observed":
         return np.vstack([np.array([NOT_OBSERVABLE], np.uint8), colour_table("imola", count - 1)])

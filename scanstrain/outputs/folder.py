@@ -18,7 +18,7 @@ from pathlib import Path
 from scanstrain.attributes import BY_NAME
 from scanstrain.errors import OutputError, ScanstrainError, explain
 
-FIXED_NAMES = frozenset({"strain.laz", "strain.las", "gauges.csv", "summary.json", "registered.json", "report.html"})
+FIXED_NAMES = frozenset({"strain.laz", "strain.las", "gauges.csv", "sections.csv", "summary.json", "registered.json", "report.html"})
 
 
 def is_ours(name: str) -> bool:

@@ -19,11 +19,13 @@ from scanstrain.outputs.findings import verdict
 from scanstrain.outputs.motions import body_numbers, directions, seam_numbers, target_numbers
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.registered import rigid_motion
+from scanstrain.outputs.section_table import section_data
 from scanstrain.outputs.statistics import attribute_statistics
 from scanstrain.outputs.strict import plain, write_json
 from scanstrain.outputs.words import OBSERVED_WORDS, status_word
 from scanstrain.registration.result import Registration
 from scanstrain.result import Result
+from scanstrain.structures import section_units
 
 __all__ = ["summary", "verdict", "write_summary"]
 
@@ -55,6 +57,7 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         "registration": _registration(result),
         "rigid_motion": {body.name: body_numbers(body, result.reference.origin) for body in result.bodies},
         "gauges": _gauges(result),
+        "sections": {"definitions": _section_words(result), "rows": section_data(result)} if result.sections else None,
         "setups": {epoch: [seam_numbers(seam) for seam in seams] for epoch, seams in result.seams.items()},
         "calibration": {
             "factors": result.calibration.factors,
@@ -102,6 +105,12 @@ def _ground(registration: Registration) -> dict[str, Any] | None:
     """What the datum stands on; the second best choice with its effect at the worst place [m]."""
     ground = registration.ground
     return None if ground is None else {field.name: getattr(ground, field.name) for field in fields(ground)}
+
+
+def _section_words(result: Result) -> dict[str, str]:
+    """Unit and meaning of what is measured in a section."""
+    units = section_units(result.config.tunnel.chords)
+    return {name: f"{meaning} [{unit}]" for name, (unit, meaning) in units.items() if not name.endswith("_sd")}
 
 
 def _gauges(result: Result) -> dict[str, Any]:

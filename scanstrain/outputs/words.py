@@ -53,6 +53,8 @@ TITLES: dict[str, tuple[str, str]] = {
     "status": ("Status", "why a place has no number"),
     "stable": ("Stable ground", "places that the registration stands on"),
     "gauge_points": ("Points behind each gauge", "reference points used by the local fit"),
+    "chainage": ("Chainage", "along the axis of the tunnel"),
+    "clock": ("Clock angle", "from the crown, clockwise for somebody who looks along the axis"),
 }
 """Title in words and what the number means, for every attribute."""
 

@@ -13,19 +13,22 @@ from scanstrain.outputs.folder import check_folder, finished_only, is_ours
 from scanstrain.outputs.key import write_colour_key
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.registered import write_registered
+from scanstrain.outputs.section_table import write_section_table
 from scanstrain.outputs.summary import write_summary
 from scanstrain.outputs.table import write_gauge_table
 from scanstrain.outputs.words import attribute_of
 from scanstrain.registry import Registry
 from scanstrain.result import Result
 
-Writer = Callable[[Result, Path, OutputOptions], Path]
+Writer = Callable[[Result, Path, OutputOptions], Path | None]
+"""Writes one file into a folder and returns it, or None where the result has nothing for it."""
 
 OUTPUTS: Registry[Writer] = Registry("output")
 OUTPUTS.add("strain cloud", write_strain_cloud)
 OUTPUTS.add("coloured cloud", write_coloured_cloud)
 OUTPUTS.add("colour key", write_colour_key)
 OUTPUTS.add("gauge table", write_gauge_table)
+OUTPUTS.add("section table", write_section_table)
 OUTPUTS.add("registered", write_registered)
 OUTPUTS.add("summary", write_summary)
 
@@ -76,5 +79,5 @@ def write_result(
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]
     target = check_folder(folder, inputs=[source for source in sources if source])
     with finished_only(target, retire=is_ours) as work:
-        written = [OUTPUTS[name](result, work, options).name for name in OUTPUTS]
-    return [target / name for name in written]
+        written = [OUTPUTS[name](result, work, options) for name in OUTPUTS]
+    return [target / path.name for path in written if path is not None]

@@ -304,8 +304,8 @@ def seam_warnings(seams: tuple[Seam, ...], label: str) -> tuple[str, ...]:
     alone = sorted({number for seam in seams for number in (seam.first, seam.second)} - checked)
     if alone:
         names = ", ".join(map(str, alone))
+        plural, they = ("s", "they share") if len(alone) > 1 else ("", "it shares")
         said.append(
-            f"{label}: set-up{'s' if len(alone) > 1 else ''} {names} could not be checked against the others: "
-            "too little overlap"
+            f"{label}: set-up{plural} {names} could not be checked: {they} too little of the surface with any other"
         )
     return tuple(said)

@@ -290,7 +290,8 @@ def _patch_weights(
         return np.where(present, 1 / np.maximum(z, 1.0), 0.0), 1.0
     u = z / PATCH_CUT
     weights = np.where(present, biweight(u), 0.0)
-    slope = np.where(u < 1, (1 - u**2) * (1 - 5 * u**2), 0.0)
+    # Along the pull of a patch the score bends; across it, it grows with the weight alone.
+    slope = (np.where(u < 1, (1 - u**2) * (1 - 5 * u**2), 0.0) + (k - 1) * weights) / k
     return weights, float((slope * size).sum() / max((weights * size).sum(), 1e-300))
 
 

@@ -56,8 +56,8 @@ def structure_axes(
     frame : ndarray of shape (g, 3, 3)
         Columns a1, a2, n.
     structure : {"tunnel", "wall", "free"}
-    axis : ndarray of shape (3,), optional
-        Direction of the tunnel axis; found from the normals where not given.
+    axis : ndarray of shape (3,) or (g, 3), optional
+        Direction of the tunnel axis, one for all or one a gauge; found from the normals where not given.
 
     Returns
     -------
@@ -67,7 +67,7 @@ def structure_axes(
     normals = frame[..., 2]
     guide, notes = UP, tuple[str, ...]()
     if structure == "tunnel":
-        found = axis_of_normals(normals) if axis is None else np.asarray(axis, float) / np.linalg.norm(axis)
+        found = axis_of_normals(normals) if axis is None else axis / np.linalg.norm(axis, axis=-1, keepdims=True)
         if found is None:
             notes = (
                 "The normals do not show a tunnel axis: strain_u and strain_v are horizontal and upward here; "
@@ -75,7 +75,8 @@ def structure_axes(
             )
         else:
             guide = found
-    v = guide - (normals @ guide)[:, None] * normals
+    guide = np.broadcast_to(guide, normals.shape)
+    v = guide - np.einsum("gi,gi->g", normals, guide)[:, None] * normals
     sine = np.linalg.norm(v, axis=1)
     usable = sine > MIN_SINE
     v = np.where(usable[:, None], v / np.where(usable, sine, 1.0)[:, None], frame[..., 1])

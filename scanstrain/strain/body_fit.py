@@ -135,15 +135,22 @@ def thinned(sights: Sights, gauge_length: float) -> Sights:
     Overlapping gauges repeat one another's noise, to a degree that depends on the local fit. Of gauges that only touch
     each is an observation of its own, and together they still cover most of the surface.
     """
+    return sights.only(apart(sights.position, gauge_length, first=np.argsort(-sights.seen.sum(axis=1), kind="stable")))
+
+
+def apart(position: FloatArray, gauge_length: float, *, first: NDArray[np.int64] | None = None) -> NDArray[np.int64]:
+    """Choose places (g, 3) of which none is nearer to another than a gauge length, in the order `first`."""
     from scipy.spatial import cKDTree
 
-    tree = cKDTree(sights.position)
-    free, chosen = np.ones(len(sights), bool), list[int]()
-    for gauge in np.argsort(-sights.seen.sum(axis=1), kind="stable"):
+    if not len(position):
+        return np.empty(0, np.int64)
+    tree = cKDTree(position)
+    free, chosen = np.ones(len(position), bool), list[int]()
+    for gauge in range(len(position)) if first is None else first:
         if free[gauge]:
             chosen.append(int(gauge))
-            free[tree.query_ball_point(sights.position[gauge], APART * gauge_length)] = False
-    return sights.only(np.sort(np.array(chosen, np.int64)))
+            free[tree.query_ball_point(position[gauge], APART * gauge_length)] = False
+    return np.sort(np.array(chosen, np.int64))
 
 
 def fit_rigid(sights: Sights, *, error_dof: float = np.inf) -> RigidFit | None:

@@ -8,7 +8,7 @@ from collections.abc import Mapping
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from scanstrain.attributes import ATTRIBUTES
+from scanstrain.attributes import ATTRIBUTES, BY_NAME
 from scanstrain.errors import OptionError, explain
 from scanstrain.linalg import components_2d, sandwich, tensor_2d
 from scanstrain.neighbourhood.result import AffineField, Observed
@@ -16,6 +16,7 @@ from scanstrain.registration.result import Registration
 from scanstrain.registry import unknown_name
 from scanstrain.strain.axes import STRUCTURES, structure_axes
 from scanstrain.strain.bending import bending_strain
+from scanstrain.strain.errors import certainties
 from scanstrain.strain.gauges import Gauges, fitted_gauges
 from scanstrain.strain.kinematics import Kinematics, choose_measure, kinematics
 from scanstrain.strain.measures import MEASURES
@@ -41,7 +42,7 @@ def compute_strain(
     thickness: float | None = None,
     axis: ArrayLike | None = None,
     false_discovery_rate: float = 0.05,
-    stable: NDArray[np.bool_] | None = None,
+    known: Mapping[str, NDArray[np.generic]] | None = None,
 ) -> StrainField:
     """Turn local affine maps into strain, rotation and change of curvature with standard errors.
 
@@ -59,12 +60,12 @@ def compute_strain(
         Meaning of the axes u and v: hoop and axial, or horizontal and upward.
     thickness : float, optional
         Thickness of the wall or lining [m]; gives `bend_1` and `bend_2`.
-    axis : array_like of shape (3,), optional
-        Direction of a tunnel's axis; found from the normals where not given.
+    axis : array_like of shape (3,) or (g, 3), optional
+        Direction of a tunnel's axis, one for all or one a gauge; found from the normals where not given.
     false_discovery_rate : float
         Accepted share of false ones among the discoveries.
-    stable : ndarray of shape (g,), bool, optional
-        Gauges on stable ground, for the attribute of that name. Default: none.
+    known : mapping of str to ndarray of shape (g,), optional
+        Attributes that come from elsewhere: `stable`, `chainage`, `clock`.
 
     Returns
     -------
@@ -75,11 +76,14 @@ def compute_strain(
     OptionError
         An option is unknown, out of range or contradicts another.
     """
-    _check(measure, structure, thickness, axis, false_discovery_rate)
+    _check(measure, structure, thickness, false_discovery_rate)
+    if axis is not None:
+        _check_axis(np.asarray(axis, dtype=np.float64), structure, len(field))
     gauges = fitted_gauges(field, registration)
-    axes, notes = structure_axes(
-        gauges.frame, structure=structure, axis=None if axis is None else np.asarray(axis, dtype=np.float64)
-    )
+    along = None if axis is None else np.asarray(axis, dtype=np.float64)
+    if along is not None and along.ndim == 2:
+        along = along[gauges.fine]
+    axes, notes = structure_axes(gauges.frame, structure=structure, axis=along)
     reason = "Set by the caller."
     if measure == "auto":
         measure, reason = choose_measure(gauges, rate=false_discovery_rate)
@@ -96,7 +100,7 @@ def compute_strain(
         position=field.position,
         normal=np.asarray(field.frame[:, :, 2]),
         axes=np.asarray(gauges.scatter(axes, np.nan), dtype=np.float64),
-        values=_table(field, gauges, values, gauges.observed_bits(axes), false_discovery_rate, stable),
+        values=_table(field, gauges, values, gauges.observed_bits(axes), false_discovery_rate, known or {}),
         status=np.asarray(field.status, dtype=np.uint8),
         measure=measure,
         measure_reason=reason,
@@ -107,12 +111,11 @@ def compute_strain(
         gauge_spacing=field.gauge_spacing,
         bowing=np.asarray(gauges.scatter(_bowing(gauges, axes), 0.0), dtype=np.float64),
         warnings=notes + _what_is_missing(gauges),
+        certainty=certainties(gauges, moved, axes, thickness, values),
     )
 
 
-def _check(
-    measure: str, structure: str, thickness: float | None, axis: ArrayLike | None, false_discovery_rate: float
-) -> None:
+def _check(measure: str, structure: str, thickness: float | None, false_discovery_rate: float) -> None:
     if measure != "auto" and measure not in MEASURES:
         raise OptionError(unknown_name("measure", measure, ["auto", *MEASURES]))
     if structure not in STRUCTURES:
@@ -127,19 +130,22 @@ def _check(
                 "false_discovery_rate", "a share between 0 and 1", f"{false_discovery_rate}", "give for example 0.05"
             )
         )
-    if axis is None:
-        return
+
+
+def _check_axis(axis: FloatArray, structure: str, gauges: int) -> None:
     if structure != "tunnel":
         raise OptionError(
             explain(
                 "axis", 'structure "tunnel"', f'structure "{structure}"', "leave the axis out or change the structure"
             )
         )
-    direction = np.asarray(axis, dtype=np.float64)
-    if direction.shape != (3,) or not np.isfinite(direction).all() or not direction.any():
+    if axis.shape not in ((3,), (gauges, 3)) or not np.isfinite(axis).all() or not axis.any(axis=-1).all():
         raise OptionError(
-            explain("axis", "three numbers that are not all zero", f"{axis}", "give for example [0, 1, 0]")
-        )
+            explain(
+                "axis", "three numbers that are not all zero, or so for each gauge", f"{axis.tolist()}"[:80],
+                "give for example [0, 1, 0]",
+            )
+        )  # fmt: skip
 
 
 def _only(where: NDArray[np.bool_], **values: FloatArray) -> Values:
@@ -234,16 +240,18 @@ def _table(
     values: Values,
     bits: NDArray[np.uint8],
     rate: float,
-    stable: NDArray[np.bool_] | None,
+    known: Mapping[str, NDArray[np.generic]],
 ) -> Mapping[str, NDArray[np.generic]]:
     """Every attribute over all gauges: NaN, or the reason code, where there is no fit."""
     codes: dict[str, NDArray[np.generic]] = {
         "discovery": gauges.scatter(benjamini_hochberg(values["significance"], rate).astype(np.uint8), 0),
         "observed": gauges.scatter(bits, 0),
         "status": np.asarray(field.status, dtype=np.uint8),
-        "stable": np.asarray(np.zeros(len(field)) if stable is None else stable, dtype=np.uint8),
+        "stable": np.zeros(len(field), dtype=np.uint8),
         "gauge_points": np.clip(field.points, 0, _POINTS_CAP).astype(np.uint16),
     }
+    codes |= {"chainage": np.full(len(field), np.nan), "clock": np.full(len(field), np.nan)}
+    codes |= {name: column.astype(BY_NAME[name].numpy_dtype) for name, column in known.items()}
     return {a.name: codes[a.name] if a.name in codes else gauges.scatter(values[a.name], np.nan) for a in ATTRIBUTES}
 
 

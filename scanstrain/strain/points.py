@@ -48,7 +48,7 @@ TENSOR_NAMES = (
     "strain_1", "strain_2", "shear_max", "strain_u", "strain_v", "shear_uv",
 )  # fmt: skip
 
-FROM_NEAREST = ("significance", "discovery", "observed", "stable", "gauge_points")
+FROM_NEAREST = ("significance", "discovery", "observed", "stable", "gauge_points", "chainage", "clock")
 """Not linear fields: taken from the nearest gauge, so that the p-value and the verdict on it agree."""
 
 
@@ -198,7 +198,7 @@ def _collect(
     served = nearest >= 0
     for attribute in ATTRIBUTES:
         if attribute.name in FROM_NEAREST:
-            empty = np.nan if attribute.name == "significance" else 0
+            empty = np.nan if attribute.dtype.startswith("float") else 0
             values = np.full(len(points), empty, dtype=attribute.numpy_dtype)
             values[served] = strain.values[attribute.name][nearest[served]]
             result[attribute.name] = values

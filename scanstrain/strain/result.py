@@ -5,11 +5,31 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from dataclasses import field as default
 
 import numpy as np
 from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Certainty:
+    """How certain one quantity is at each gauge, in its unit; NaN where it is not observable.
+
+    Parameters
+    ----------
+    sd : ndarray of shape (g,)
+        Root mean square error, registration included where the quantity depends on it.
+    datum_sd : ndarray of shape (g,)
+        The part of it that comes from the registration, which all gauges share; zero where there is none.
+    noise_bias : ndarray of shape (g,)
+        What noise adds on average at most, with its sign: for lengths and principal values, which it drives apart.
+    """
+
+    sd: FloatArray
+    datum_sd: FloatArray
+    noise_bias: FloatArray
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,6 +52,8 @@ class StrainField:
         Why that one.
     detection_limit : mapping of str to ndarray of shape (g,)
         Smallest value that is significant at 95 % for disp_n, tilt, spin, strain and curvature at each gauge.
+    certainty : mapping of str to Certainty
+        Errors of every quantity that can be held against a limit.
     bowing : ndarray of shape (g, 3), optional
         Second derivatives of the normal displacement along (uu, vv, uv) [1/m], zero where not observable: what a
         blend between gauges needs beside the values.
@@ -49,6 +71,7 @@ class StrainField:
     gauge_spacing: float
     bowing: FloatArray | None = None
     warnings: tuple[str, ...] = ()
+    certainty: Mapping[str, Certainty] = default(default_factory=dict)
 
     def __len__(self) -> int:
         return len(self.position)

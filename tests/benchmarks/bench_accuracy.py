@@ -29,7 +29,9 @@ SCENES = {
     "wall": lambda seed: MEASURES["textured"](Wall(3.0, 3.0), HOMOGENEOUS, seed=seed),
     "lining": lambda seed: MEASURES["textured"](Lining(2.0, 2.0), Sum((Ovalisation(2e-3),)), seed=seed),
 }
-CORRELATIONS = {"white": {}, "20 % over 50 mm": {"correlated_share": 0.2, "correlation_length": 0.05}}
+CORRELATIONS = {"white": {}} | {
+    f"20 % over {mm} mm": {"correlated_share": 0.2, "correlation_length": mm / 1000} for mm in (30, 50, 100)
+}
 ROWS = {"un": 0, "gn1": 1, "gn2": 2}
 IN_PLANE = ("u1", "u2", "g11", "g12", "g21", "g22")
 PROBES = 25

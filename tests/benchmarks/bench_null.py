@@ -30,7 +30,9 @@ SCENES = {
     "textured lining": MEASURES["textured"](Lining(2.0, 1.5), Still()),
     "bare lining": Scene(Lining(2.0, 1.5)),
 }
-NOISES = {"white": {}, "20 % over 50 mm": {"correlated_share": 0.2, "correlation_length": 0.05}}
+NOISES = {"white": {}} | {
+    f"20 % over {mm} mm": {"correlated_share": 0.2, "correlation_length": mm / 1000} for mm in (30, 50, 100)
+}
 SAMPLES = {"wall_2031-09-13": "wall", "adit_2031-09-12": "tunnel"}
 
 
@@ -43,7 +45,13 @@ def drawn(scene, options, seed, spacing, gauge):
     field = fit_affine(*pair, gauge_length=gauge, gauge_spacing=gauge / 2, required_strain_sd=0.02)
     inside = MEASURES["errors_of"](scene, field).inside
     values = compute_strain(field).values
-    return values["significance"][inside], values["discovery"][inside]
+    return values["significance"][inside], values["discovery"][inside], said(field)
+
+
+def said(field):
+    """What the field says of shared noise in height: share in per cent and length in millimetres."""
+    shared = field.correlation.height
+    return f"{100 * shared.share:.0f} over {1e3 * shared.length:.0f}"
 
 
 def scanned(name, structure, seed):
@@ -56,7 +64,7 @@ def scanned(name, structure, seed):
     result = scanstrain.compare_epochs(reference, current, config)
     inside = MEASURES["errors_of"](sample.scene, result.field).inside
     values = result.strain.values
-    return values["significance"][inside], values["discovery"][inside]
+    return values["significance"][inside], values["discovery"][inside], said(result.field)
 
 
 def row(name, noise, runs):
@@ -66,7 +74,7 @@ def row(name, noise, runs):
     p = p[np.isfinite(p)]
     return (
         name, noise, len(runs), len(p), f"{100 * np.mean(p < 0.05):.1f}", f"{100 * np.mean(p < 0.01):.2f}",
-        int(sum(f.sum() for f in found)), f"{sum(f.any() for f in found)}",
+        int(sum(f.sum() for f in found)), f"{sum(f.any() for f in found)}", "; ".join(run[2] for run in runs),
     )  # fmt: skip
 
 
@@ -85,7 +93,17 @@ def main():
             rows.append(row(name, noise, runs))
     for name, structure in SAMPLES.items():
         rows.append(row(name, "scanner", [scanned(name, structure, 500 + k) for k in range(max(1, given.pairs // 3))]))
-    head = ("scene", "noise", "pairs", "gauges", "p<0.05 %", "p<0.01 %", "discoveries", "pairs with any")
+    head = (
+        "scene",
+        "noise",
+        "pairs",
+        "gauges",
+        "p<0.05 %",
+        "p<0.01 %",
+        "discoveries",
+        "pairs with any",
+        "shared %, mm",
+    )
     MACHINE["table"](head, rows)
 
 

@@ -20,7 +20,7 @@ LAYERS = (
     ("errors", "attributes", "progress", "workers"),
     ("registry",),
     ("linalg", "epoch"),
-    ("zones", "cells"),
+    ("zones", "cells", "series", "limits", "damage", "budget"),
     ("structures",),
     ("registration",),
     ("neighbourhood",),
@@ -28,7 +28,7 @@ LAYERS = (
     ("result", "synthetic", "io"),
     ("outputs",),
     ("config", "inspection"),
-    ("datum", "parts"),
+    ("datum", "parts", "shape"),
     ("pipeline",),
     ("batch", "plugin"),
     ("screens", "terminal"),
@@ -43,7 +43,7 @@ STAGES = ("registration", "neighbourhood", "strain")
 RESULTS = {"strain": {"registration.result", "neighbourhood.result"}, "neighbourhood": {"registration.result"}}
 """What a stage may know of the stages before it: the type that they hand on."""
 
-NUMERICS = ("linalg", "epoch", "zones", "cells", "structures", *STAGES)
+NUMERICS = ("linalg", "epoch", "zones", "cells", "structures", "series", "limits", "damage", "budget", *STAGES)
 FILES = {"pathlib", "os", "io", "shutil", "tempfile", "json", "csv", "tomllib", "laspy", "lazrs", "pye57", "plyfile"}
 SHOWN = {"click", "rich", "matplotlib", "pydantic", "jinja2", "logging"}
 

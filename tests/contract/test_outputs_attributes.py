@@ -45,6 +45,8 @@ PUBLISHED = [
     ("status", "1", "uint8"),
     ("stable", "1", "uint8"),
     ("gauge_points", "1", "uint16"),
+    ("chainage", "m", "float32"),
+    ("clock", "rad", "float32"),
 ]
 
 

@@ -1,0 +1,44 @@
+# SPDX-License-Identifier: MIT
+"""The table of sections: one row each, names and units in the first two rows as in the table of gauges."""
+
+from __future__ import annotations
+
+import csv
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from scanstrain.outputs.options import OutputOptions
+from scanstrain.result import Result
+from scanstrain.structures import section_rows, section_units
+
+AXIS = ("axis_x", "axis_y", "axis_z")
+
+
+def write_section_table(result: Result, folder: Path, options: OutputOptions) -> Path | None:  # noqa: ARG001
+    """Write `sections.csv` in SI units and file coordinates; nothing where there are no sections."""
+    if not result.sections:
+        return None
+    rows = section_data(result)
+    units = section_units(result.config.tunnel.chords)
+    target = folder / "sections.csv"
+    with target.open("w", encoding="utf-8", newline="") as stream:
+        writer = csv.writer(stream, lineterminator="\n")
+        writer.writerow(units)
+        writer.writerow(unit for unit, _ in units.values())
+        writer.writerows([_cell(row[name]) for name in units] for row in rows)
+    return target
+
+
+def section_data(result: Result) -> list[dict[str, Any]]:
+    """Return one mapping a section, places in file coordinates, SI units."""
+    rows = section_rows(result.sections)
+    for row in rows:
+        for name, shift in zip(AXIS, result.reference.origin, strict=True):
+            row[name] += float(shift)
+    return rows
+
+
+def _cell(value: float) -> str:
+    return f"{value:.10g}" if np.isfinite(value) else ""

@@ -1,0 +1,121 @@
+# SPDX-License-Identifier: MIT
+"""The scanned object as a whole: found once on the reference epoch, used for gauges, zones and sections."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scanstrain.config import CompareConfig
+from scanstrain.epoch import Epoch
+from scanstrain.registration.result import Registration
+from scanstrain.zones import Unrolled
+
+if TYPE_CHECKING:
+    from scanstrain.structures import Axis, Section
+
+FloatArray = NDArray[np.float64]
+Guide = Callable[[FloatArray], tuple[FloatArray, FloatArray]]
+
+AUTO_SECTIONS = 1.0
+"""Distance between sections by default, in radii of the lining, to a whole part or multiple of a metre."""
+
+
+@dataclass(frozen=True, slots=True)
+class Shape:
+    """What is known of the object besides its surface.
+
+    Parameters
+    ----------
+    structure : {"tunnel", "wall", "free"}
+    axis : Axis or None
+        Of a tunnel.
+    """
+
+    structure: str
+    axis: Axis | None = None
+
+    def unroll(self, points: FloatArray) -> Unrolled | None:
+        """Return places (n, 3) on the surface laid flat; None for an object of no known structure."""
+        return None if self.axis is None else self.axis.unroll(points)
+
+    def guide(self) -> Guide | None:
+        """Return what gives, for places (n, 3), the nearest ones on the axis of a tunnel and its directions there."""
+        axis = self.axis
+        return None if axis is None else lambda places: axis.at(axis.project(places)[0])
+
+    def directions(self, places: FloatArray) -> FloatArray | None:
+        """Return the direction of the axis of a tunnel (n, 3) at the feet of places (n, 3)."""
+        return None if self.axis is None else self.axis.directions(places)
+
+
+def shape_of(reference: Epoch, config: CompareConfig) -> Shape:
+    """Find or take the axis of a tunnel.
+
+    Raises
+    ------
+    OptionError
+        The scan shows no tunnel, or the axis that was given leaves it.
+    """
+    if config.strain.structure != "tunnel":
+        return Shape(config.strain.structure)
+    from scanstrain.structures import fit_axis, given_axis
+
+    given = config.tunnel.axis
+    if given is None:
+        return Shape("tunnel", fit_axis(reference.points))
+    return Shape("tunnel", given_axis(np.asarray(given) - reference.origin, reference.points))
+
+
+def places_on(unrolled: Unrolled | None) -> dict[str, NDArray[np.generic]]:
+    """Return chainage [m] and clock angle [rad] as attributes; nothing where there is no axis."""
+    if unrolled is None:
+        return {}
+    return {"chainage": unrolled.along.astype(np.float32), "clock": unrolled.clock.astype(np.float32)}
+
+
+def sections_of(
+    shape: Shape, reference: Epoch, current: Epoch, registration: Registration, config: CompareConfig
+) -> tuple[Section, ...]:
+    """Cut sections through both epochs of a tunnel; none through anything else.
+
+    Parameters
+    ----------
+    shape : Shape
+    reference, current : Epoch
+        `current` already registered.
+    registration : Registration
+        Its error is part of that of movements, not of lengths.
+    config : CompareConfig
+    """
+    if shape.axis is None:
+        return ()
+    from scanstrain.structures import cut_sections
+
+    options = config.tunnel
+    spacing = options.section_spacing
+    return cut_sections(
+        shape.axis,
+        reference.points,
+        current.points,
+        spacing=auto_spacing(shape.axis.radius) if isinstance(spacing, str) else spacing,
+        thickness=None if isinstance(options.section_thickness, str) else options.section_thickness,
+        chords=options.chords,
+        datum=registration.displacement_covariance,
+    )
+
+
+def auto_spacing(radius: float) -> float:
+    """Choose a distance between sections [m] near the radius of the lining: 1, 2 or 5 times a power of ten.
+
+    Examples
+    --------
+    >>> auto_spacing(2.6), auto_spacing(0.9), auto_spacing(4.5)
+    (2.0, 1.0, 5.0)
+    """
+    steps = np.array([1.0, 2.0, 5.0, 10.0]) * 10.0 ** np.floor(np.log10(AUTO_SECTIONS * radius))
+    return float(steps[np.abs(np.log(steps / (AUTO_SECTIONS * radius))).argmin()])
