@@ -12,7 +12,9 @@ from typing import Any
 from scanstrain.attributes import BY_NAME, Attribute
 from scanstrain.batch import Outcome
 from scanstrain.inspection import CAPTURE_RANGE, Inspected, Inspection
+from scanstrain.outputs.even_strain import budget_sentences
 from scanstrain.outputs.findings import verdict
+from scanstrain.outputs.triggers import trigger_sentence
 from scanstrain.outputs.words import amount, digits, number, percent
 
 WIDTH = 100
@@ -30,12 +32,18 @@ Summary = Mapping[str, Any]
 
 def comparison_screen(name: str, folder: Path, summary: Summary, *, verbose: bool = False) -> str:
     """Return the screen of one finished comparison: the verdict, a table of values, warnings, and where it all is."""
-    lines = [name, *_paragraphs(verdict(summary)), "", *_values(summary["results"]), ""]
+    lines = [name, *_paragraphs(verdict(summary)), *_triggers(summary), "", *_values(summary["results"]), ""]
     lines += _paragraphs(f"Warning: {text}" for text in summary["warnings"])
     if verbose:
+        lines += _paragraphs(budget_sentences(summary["budget"]))
         lines += _paragraphs(f"Caution: {text}" for text in summary["cautions"])
         lines += [f"  {stage}: {seconds:.1f} s" for stage, seconds in summary["timing"]["stages"].items()]
     return "\n".join([*lines, f"Written to {folder}"])
+
+
+def _triggers(summary: Summary) -> list[str]:
+    """One line for each of the user's own triggers; none where there are none."""
+    return _paragraphs(f"Trigger {trigger_sentence(row)}" for row in summary["triggers"])
 
 
 def _values(results: Mapping[str, Mapping[str, Any]]) -> list[str]:
@@ -75,14 +83,21 @@ def _paragraphs(texts: Iterable[str]) -> list[str]:
     ]
 
 
-def batch_screen(outcomes: Sequence[Outcome], folder: Path) -> str:
-    """Return a table with one line for each comparison of a batch."""
+def batch_screen(outcomes: Sequence[Outcome], folder: Path, *, notes: Sequence[str] = ()) -> str:
+    """Return a table with one line for each comparison of a batch, its triggers, and notes on the series."""
     rows: list[Sequence[str]] = [("comparison", "result", "gauges", "changed", "normal displacement", "limit", "time")]
     for outcome in outcomes:
         state = "done" if outcome.done else "failed"
         rows.append((outcome.name, state, *_findings(outcome.summary), f"{outcome.seconds:.0f} s"))
     written = [f"Written to {folder}"] if any(outcome.done for outcome in outcomes) else []
-    return "\n".join([*_aligned(rows), *written])
+    return "\n".join([*_aligned(rows), *_batch_triggers(outcomes), *_paragraphs(notes), *written])
+
+
+def _batch_triggers(outcomes: Sequence[Outcome]) -> list[str]:
+    summaries = [(outcome.name, outcome.summary) for outcome in outcomes if outcome.summary is not None]
+    return _paragraphs(
+        f"{name}: trigger {trigger_sentence(row)}" for name, summary in summaries for row in summary["triggers"]
+    )
 
 
 def _findings(summary: Summary | None) -> tuple[str, str, str, str]:

@@ -40,7 +40,7 @@ class TriggerEntry(Options):
     )
     quantity: str = Field(
         examples=["disp_n"],
-        description="What is held against the limits: an attribute, or a quantity of sections or of zones."
+        description="What is held against the limits: an attribute, or a quantity of sections or of zones.",
     )
     zone: str | None = Field(
         default=None,

@@ -15,6 +15,7 @@ import numpy as np
 from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.result import Status
 from scanstrain.outputs.cautions import cautions
+from scanstrain.outputs.even_strain import budget_data
 from scanstrain.outputs.findings import verdict
 from scanstrain.outputs.motions import body_numbers, directions, seam_numbers, target_numbers
 from scanstrain.outputs.options import OutputOptions
@@ -22,7 +23,9 @@ from scanstrain.outputs.registered import rigid_motion
 from scanstrain.outputs.section_table import section_data
 from scanstrain.outputs.statistics import attribute_statistics
 from scanstrain.outputs.strict import plain, write_json
+from scanstrain.outputs.triggers import trigger_cautions, trigger_data, trigger_warnings
 from scanstrain.outputs.words import OBSERVED_WORDS, status_word
+from scanstrain.outputs.zone_table import values_of_parts, zone_data
 from scanstrain.registration.result import Registration
 from scanstrain.result import Result
 from scanstrain.structures import section_units
@@ -53,11 +56,16 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         Only dicts, lists, strings, finite numbers, booleans and None, in SI units: ready for `json.dumps`.
     """
     strain = result.strain
+    values = values_of_parts(result)
+    triggers = trigger_data(result, values)
     content = {
         "registration": _registration(result),
         "rigid_motion": {body.name: body_numbers(body, result.reference.origin) for body in result.bodies},
         "gauges": _gauges(result),
         "sections": {"definitions": _section_words(result), "rows": section_data(result)} if result.sections else None,
+        "zones": zone_data(result, values),
+        "triggers": triggers,
+        "budget": budget_data(result, values),
         "setups": {epoch: [seam_numbers(seam) for seam in seams] for epoch, seams in result.seams.items()},
         "calibration": {
             "factors": result.calibration.factors,
@@ -70,8 +78,8 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         "software": _software(),
         "config": result.config.model_dump(mode="json"),
         "timing": _timing(result),
-        "warnings": _warnings(result),
-        "cautions": cautions(result),
+        "warnings": [*_warnings(result), *trigger_warnings(triggers)],
+        "cautions": [*cautions(result), *trigger_cautions(result)],
         "no_data": {
             "value": "NaN" if no_data is None else no_data,
             "meaning": "the data do not support a value here; observed and status say why",

@@ -10,10 +10,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.attributes import BY_NAME, JUDGED, OF_BODIES
+from scanstrain.attributes import BY_NAME, JUDGED, OF_BODIES, Attribute
 from scanstrain.damage import CAUTIONS
 from scanstrain.limits import BELOW, EXCEEDED, NORMAL_95, POSSIBLE, UNSEEN, grade_zone, worst_level
-from scanstrain.outputs.words import amount_in
+from scanstrain.outputs.statistics import short
+from scanstrain.outputs.words import interval
 from scanstrain.outputs.zone_table import parts_of
 from scanstrain.result import WHOLE, Result
 from scanstrain.strain.zone_values import ZoneValue
@@ -21,6 +22,14 @@ from scanstrain.structures import section_units
 
 FloatArray = NDArray[np.float64]
 Values = Mapping[str, Mapping[str, ZoneValue]]
+
+_FOR_A_PERSON = {
+    "m": BY_NAME["disp_n"],
+    "rad": BY_NAME["spin"],
+    "1/m": BY_NAME["curv_1"],
+    "1": Attribute("share", "1", "signed", "1 share of a length", person="%", factor=100.0),
+}
+"""How quantities that are no attributes are written, by their unit."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,7 +96,7 @@ def trigger_sentence(row: Mapping[str, Any]) -> str:
     furthest = row["furthest"]
     if furthest is None:
         return f"{start}: {said}."
-    value = amount_in(furthest["value"], NORMAL_95 * furthest["sd"], row["unit"])
+    value = interval(furthest["value"], furthest["sd"], BY_NAME.get(row["quantity"], _FOR_A_PERSON[row["unit"]]))
     return f"{start}: {said}; furthest {value} (95 %){_at(furthest)}."
 
 
@@ -171,7 +180,7 @@ def _row(trigger: Any, judged: _Judged) -> dict[str, Any]:
         "exceeded": worst.exceeded,
         "possible": worst.possible,
         "levels": {
-            level: {"limit": limits[level], "grade": each.grade, **({sums: each.areas} if sums else {})}
+            level: {"limit": short(limits[level]), "grade": each.grade} | ({sums: each.areas} if sums else {})
             for level, each in found.items()
         },
         "furthest": None if furthest is None else _furthest(judged, furthest),
@@ -198,5 +207,5 @@ def _note(judged: _Judged) -> str | None:
     way = "up" if np.nansum(judged.bias) > 0 else "down"
     return (
         f"Noise drives this quantity {way}, by as much as noise_bias where the true value is zero. Values are held "
-        "against limits as they stand; their standard errors count it in, so no exceedance comes of it."
+        "against limits as they stand, with standard errors that count it in."
     )

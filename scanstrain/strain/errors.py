@@ -79,7 +79,11 @@ def _rotations(gauges: Gauges, moved: Kinematics) -> dict[str, Parts]:
     half = np.array([[-0.5, 0.5]])
     spin = sandwich(np.broadcast_to(half, (len(gauges), 1, 2)), shared[:, _SPIN][:, :, _SPIN])[:, 0, 0]
     return {
-        "tilt": (magnitude_sd(moved.tilt, moved.tilt_covariance), _root(tilt), _lengthened(moved.tilt_covariance)),
+        "tilt": (
+            magnitude_sd(moved.tilt, moved.tilt_covariance),
+            _root(np.asarray(tilt, dtype=np.float64)),
+            _lengthened(moved.tilt_covariance),
+        ),
         "spin": (np.sqrt(moved.spin_variance), _root(spin), np.zeros(len(gauges))),
     }
 
@@ -94,7 +98,7 @@ def _strains(gauges: Gauges, moved: Kinematics, axes: FloatArray) -> dict[str, P
     circle, spread = _circle(moved.strain, moved.strain_covariance)
     bias = _lengthened(spread)
     # the change of area is the sum of both strains to first order, which is enough for an error
-    area = moved.strain_covariance[:, :2, :2].sum(axis=(1, 2))
+    area = np.einsum("gij->g", moved.strain_covariance[:, :2, :2])
     return found | {
         "strain_1": (larger, none, bias),
         "strain_2": (smaller, none, -bias),

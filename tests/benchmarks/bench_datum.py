@@ -50,11 +50,9 @@ def judged(name, result, T, places):
     """Errors [m] and claimed standard errors [m] along the normals at clean places of the true surface."""
     moved = apply(result.T_ref_cur, places if T is None else apply(np.linalg.inv(T), places))
     n = normals_of(name, places)
-    if name == "lining":
-        # A slide or roll of a lining in itself is no error of its surface.
-        error = np.hypot(moved[:, 1], moved[:, 2]) - 0.8
-    else:
-        error = ((moved - places) * n).sum(axis=1)
+    # A slide or roll of a lining in itself is no error of its surface.
+    aside = ((moved - places) * n).sum(axis=1)
+    error = np.hypot(moved[:, 1], moved[:, 2]) - 0.8 if name == "lining" else aside
     sd = np.sqrt(np.einsum("ni,nij,nj->n", n, result.displacement_covariance(places), n))
     return error, sd
 

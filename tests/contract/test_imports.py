@@ -31,6 +31,7 @@ LAYERS = (
     ("datum", "parts", "shape"),
     ("pipeline",),
     ("batch", "plugin"),
+    ("evolution",),
     ("screens", "terminal"),
     ("cli",),
     ("__init__", "__main__"),

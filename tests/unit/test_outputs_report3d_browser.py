@@ -163,7 +163,7 @@ def test_a_click_shows_the_values_of_that_point_with_their_intervals(view, resul
         assert abs(number - value * BY_NAME[name].factor) <= 0.02 * sd * BY_NAME[name].factor + 0.005
         assert interval(value, sd, BY_NAME[name]).split(" ± ")[1] == f"{half} {BY_NAME[name].person}"
     assert "95 % interval" in said
-    assert "part of a significant change" in said
+    assert "significant change at this place" in said
     assert view.run("document.querySelector('.cv-ring').hidden") is False
 
 

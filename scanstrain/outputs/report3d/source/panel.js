@@ -38,7 +38,7 @@ function about(cloud, layer, i) {
     if (found === null) return sentence(reason(cloud, layer, i));
     const parts = [];
     if (found.error) parts.push("value with 95 % interval");
-    if (layer.masked) parts.push(cloud.changed[i] ? "part of a significant change" : "no significant change here");
+    if (layer.masked) parts.push(cloud.changed[i] ? "significant change at this place" : "no significant change at this place");
     if (layer.limit !== null) parts.push(`median detection limit ${amount(layer.limit, layer)}`);
     return parts.length ? sentence(parts.join("; ")) : "";
 }

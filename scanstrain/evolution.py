@@ -1,0 +1,205 @@
+# SPDX-License-Identifier: MIT
+"""Series out of the comparisons of a batch: what zones and sections did through three dated epochs or more."""
+
+from __future__ import annotations
+
+import datetime as dt
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from scanstrain.batch import Outcome
+from scanstrain.errors import ScanstrainError
+
+if TYPE_CHECKING:  # the options load NumPy, which must not happen before a worker has set its threads
+    from scanstrain.config import BatchConfig, EpochEntry
+    from scanstrain.config.trigger import TriggerEntry
+    from scanstrain.series import ChangeRow, RateRow, Track
+
+Summary = Mapping[str, Any]
+
+FEWEST = 3
+"""Epochs of a series, the first one included."""
+OF_SECTIONS = ("horizontal_diameter_change", "vertical_diameter_change", "ovality_change", "crown_up")
+"""What is followed at every section."""
+
+
+@dataclass(frozen=True, slots=True)
+class Evolution:
+    """What became of the series of a batch.
+
+    Parameters
+    ----------
+    rows : tuple of ChangeRow or RateRow
+        Changes and rates by place and quantity; empty where there is no series.
+    notes : tuple of str
+        What was left out, in sentences.
+    file : Path or None
+        `series.csv`, if it was written.
+    """
+
+    rows: tuple[ChangeRow | RateRow, ...] = ()
+    notes: tuple[str, ...] = ()
+    file: Path | None = None
+
+
+def follow_epochs(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bool = True) -> Evolution:
+    """Follow every zone and section through the comparisons with the first epoch, and write `series.csv`.
+
+    Nothing is computed anew: changes and standard errors are those of the finished comparisons. A comparison that
+    failed is left out. Whatever keeps a series from being made is a note; the comparisons stand as they are.
+
+    Parameters
+    ----------
+    config : BatchConfig
+    outcomes : sequence of Outcome
+        Of `run_batch`.
+    write : bool
+        Write the table beside the folders of the comparisons.
+
+    Returns
+    -------
+    Evolution
+        Without rows where fewer than three dated epochs are compared with the first.
+    """
+    epochs = config.followed()
+    if len(epochs) < FEWEST:
+        return Evolution()
+    found = {outcome.name: outcome for outcome in outcomes}
+    first = epochs[0]
+    summaries, notes = [], []
+    for entry in epochs[1:]:
+        outcome = found.get(f"{first.label}_to_{entry.label}")
+        if outcome is None or outcome.summary is None:
+            why = "was not run" if outcome is None else "failed"
+            notes.append(f"Series: epoch {entry.label!r} is left out, because its comparison with the first one {why}.")
+        else:
+            summaries.append((entry, outcome.summary))
+    if len(summaries) < FEWEST - 1:
+        return Evolution(notes=(*notes, "Series: fewer than three epochs are left, so there is none."))
+    try:
+        rows = tuple(_rows(config, first, summaries))
+        file = _written(rows, config.output.folder) if write and rows else None
+    except ScanstrainError as error:
+        return Evolution(notes=(*notes, f"Series: {error}"))
+    return Evolution(rows, tuple(notes), file)
+
+
+def evolution_data(evolution: Evolution) -> dict[str, Any]:
+    """Return the series in a form that JSON can hold; SI units, rates per year, None where there is no value."""
+    from scanstrain.outputs.strict import plain
+
+    rows = []
+    for row in evolution.rows:
+        numbers = asdict(row)
+        kind = "rate" if "fit" in numbers else "change"
+        numbers |= numbers.pop("fit", {})
+        rows.append({"row": kind, **{name: _iso(value) for name, value in numbers.items()}})
+    file = None if evolution.file is None else str(evolution.file)
+    return dict(plain({"file": file, "notes": list(evolution.notes), "rows": rows}))
+
+
+def _iso(value: Any) -> Any:
+    return value.isoformat() if isinstance(value, dt.date) else value
+
+
+def _written(rows: Sequence[ChangeRow | RateRow], folder: Path) -> Path:
+    from scanstrain.outputs.series_table import write_series_table
+
+    return write_series_table(rows, folder)
+
+
+def _rows(
+    config: BatchConfig, first: EpochEntry, later: Sequence[tuple[EpochEntry, Summary]]
+) -> Iterator[ChangeRow | RateRow]:
+    from scanstrain.series import check_dates, follow, rows_of
+
+    labels = (first.label, *(entry.label for entry, _ in later))
+    dates = tuple(entry.date for entry in (first, *(entry for entry, _ in later)) if entry.date is not None)
+    check_dates(dates, season=config.series.season)
+    for track, chainage in _tracks(labels, dates, [summary for _, summary in later]):
+        triggers = [trigger for trigger in config.trigger if _concerns(trigger, track, chainage, config)]
+        grades = [_grade(triggers, value, sd) for value, sd in zip(track.values, track.sd, strict=True)]
+        yield from rows_of(follow(track, season=config.series.season), grades=grades)
+
+
+Seen = dict[tuple[str, str, str], list[tuple[int, float, float]]]
+"""By place, quantity and unit: number of the epoch, change and standard error."""
+
+
+def _tracks(
+    labels: tuple[str, ...], dates: tuple[dt.date, ...], summaries: Sequence[Summary]
+) -> Iterator[tuple[Track, float | None]]:
+    """Yield every track, with the chainage of its section or None."""
+    import numpy as np
+
+    from scanstrain.series import Track
+
+    seen: Seen = {}
+    stations: dict[str, float] = {}
+    for number, summary in enumerate(summaries):
+        _gather_bodies(seen, number, summary)
+        _gather_sections(seen, stations, number, summary)
+    for (place, quantity, unit), changes in seen.items():
+        values, sd = np.full(len(summaries), np.nan), np.full(len(summaries), np.nan)
+        for number, value, error in changes:
+            values[number], sd[number] = value, error
+        yield Track(place, quantity, unit, labels, dates, values, sd), stations.get(place)
+
+
+def _gather_bodies(seen: Seen, number: int, summary: Summary) -> None:
+    """How the whole object and each zone moved."""
+    from scanstrain.attributes import OF_BODIES
+
+    for place, body in summary.get("rigid_motion", {}).items():
+        mean = summary.get("zones", {}).get(place, {}).get("quantities", {}).get("disp_n", {})
+        known = {**body, "mean_disp_n": mean.get("mean"), "mean_disp_n_sd": mean.get("mean_sd")}
+        for quantity, (unit, _) in OF_BODIES.items():
+            _gather(seen, (place, quantity, unit), number, known)
+
+
+def _gather_sections(seen: Seen, stations: dict[str, float], number: int, summary: Summary) -> None:
+    """How each section changed; all comparisons share the axis of the first epoch, so they share its chainages."""
+    from scanstrain.structures import section_units
+
+    units = section_units()
+    for row in (summary.get("sections") or {}).get("rows", ()):
+        place = f"section {row['chainage']:.2f} m"
+        stations[place] = float(row["chainage"])
+        for quantity in OF_SECTIONS:
+            _gather(seen, (place, quantity, units[quantity][0]), number, row)
+
+
+def _gather(seen: Seen, key: tuple[str, str, str], number: int, known: Mapping[str, Any]) -> None:
+    value, sd = known.get(key[1]), known.get(f"{key[1]}_sd")
+    if value is not None and sd is not None and sd > 0:
+        seen.setdefault(key, []).append((number, float(value), float(sd)))
+
+
+def _concerns(trigger: TriggerEntry, track: Track, chainage: float | None, config: BatchConfig) -> bool:
+    """Whether a trigger is about a track; without a zone it is about the whole object and all sections."""
+    from scanstrain.result import WHOLE
+
+    if trigger.quantity != track.quantity:
+        return False
+    if chainage is None:
+        return (trigger.zone or WHOLE) == track.place
+    zone = next((zone for zone in config.zone if zone.name == trigger.zone), None)
+    return zone is None or zone.chainage is None or zone.chainage[0] <= chainage <= zone.chainage[1]
+
+
+def _grade(triggers: Sequence[TriggerEntry], value: float, sd: float) -> str:
+    """How a change stands to some triggers, in words."""
+    from scanstrain.limits import BELOW, UNSEEN, grade, worst_level
+
+    said = []
+    for trigger in triggers:
+        grades = {
+            level: str(grade(value, sd, limit, direction=trigger.side)) for level, limit in trigger.limits().items()
+        }
+        worst = worst_level(grades)
+        levels = ((worst.exceeded, "exceeded"), (worst.possible, "possible"))
+        words = ", ".join(f"{level} {word}" for level, word in levels if level is not None)
+        said.append(f"{trigger.name}: {words or (UNSEEN if UNSEEN in grades.values() else BELOW)}")
+    return "; ".join(said)

@@ -1,0 +1,7 @@
+# SPDX-License-Identifier: MIT
+"""Pages for people: the report of one comparison, and the overview of a batch."""
+
+from scanstrain.outputs.report.index import write_index
+from scanstrain.outputs.report.write import write_report
+
+__all__ = ["write_index", "write_report"]
