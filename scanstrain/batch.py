@@ -158,6 +158,8 @@ def run_batch(
     ------
     OptionError
         `workers` or `only` is wrong, or a result folder cannot serve; nothing has run then.
+    OutputError
+        The overview of all comparisons, `index.html`, could not be written; their results are complete.
     """
     if workers < 1:
         raise OptionError(f"workers: required a whole number from 1; got {workers}; give for example 2.")
@@ -174,7 +176,12 @@ def run_batch(
         outcomes[position] = outcome
         if finished:
             finished(outcome)
-    return [outcomes[position] for position in range(len(jobs))]
+    ordered = [outcomes[position] for position in range(len(jobs))]
+    if any(outcome.done for outcome in ordered):
+        from scanstrain.outputs.report import write_index
+
+        write_index(ordered, config.output.folder)
+    return ordered
 
 
 def outcomes_data(outcomes: Sequence[Outcome]) -> dict[str, Any]:

@@ -82,7 +82,7 @@ def follow_epochs(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bo
         rows = tuple(_rows(config, first, summaries))
         file = _written(rows, config.output.folder) if write and rows else None
     except ScanstrainError as error:
-        return Evolution(notes=(*notes, f"Series: {error}"))
+        return Evolution(notes=(*notes, f"Series: {str(error).removeprefix('series: ')}"))
     return Evolution(rows, tuple(notes), file)
 
 

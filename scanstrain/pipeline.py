@@ -19,7 +19,7 @@ from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
 from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.result import Result
-from scanstrain.shape import Shape, places_on, sections_of, shape_of
+from scanstrain.shape import Shape, places_on, sections_of, shape_of, wall_movement
 
 if TYPE_CHECKING:  # the stages compile when they are loaded
     from scanstrain.neighbourhood.result import AffineField
@@ -130,12 +130,22 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         bodies = bodies_of(affine, registration, zones)
     with clock.stage("sections", 0.83):
         sections = sections_of(shape, reference, moved, registration, config)
+        wall = wall_movement(shape, affine, registration, config)
     with clock.stage("points", 0.85):
         points = blend_to_points(strain, reference.points)
         points |= {"stable": registration.stable.astype(np.uint8), **places_on(unrolled)}
     clock.say("done", 1.0)
     targets = registration.targets.warnings if registration.targets else ()
-    said = (*notices, *own_doubts, *more_doubts, *targets, *registration.warnings, *affine.warnings, *doubts)
+    said = (
+        *notices,
+        *shape.warnings,
+        *own_doubts,
+        *more_doubts,
+        *targets,
+        *registration.warnings,
+        *affine.warnings,
+        *doubts,
+    )
     return Result(
         reference,
         current,
@@ -152,6 +162,7 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         seams={"reference": own_seams, "current": seams},
         axis=shape.axis,
         sections=sections,
+        wall=wall,
     )
 
 

@@ -18,7 +18,7 @@ from scanstrain.registration.seams import Seam
 from scanstrain.strain.bodies import BodyMotion
 from scanstrain.strain.calibration import Calibration
 from scanstrain.strain.result import StrainField
-from scanstrain.structures import Axis, Section
+from scanstrain.structures import Axis, Section, WallResult
 
 FloatArray = NDArray[np.float64]
 
@@ -61,6 +61,8 @@ class Result:
         Of a tunnel, found on the reference epoch or given.
     sections : tuple of Section
         Square to that axis.
+    wall : WallResult or None
+        Movement of the face of a wall and of its parts.
     """
 
     reference: Epoch
@@ -78,6 +80,7 @@ class Result:
     seams: Mapping[str, tuple[Seam, ...]] = default(default_factory=dict)
     axis: Axis | None = None
     sections: tuple[Section, ...] = ()
+    wall: WallResult | None = None
 
     @property
     def gauge_positions(self) -> FloatArray:

@@ -12,11 +12,13 @@ from numpy.typing import NDArray
 
 from scanstrain.config import CompareConfig
 from scanstrain.epoch import Epoch
+from scanstrain.errors import OptionError
+from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.registration.result import Registration
 from scanstrain.zones import Unrolled
 
 if TYPE_CHECKING:
-    from scanstrain.structures import Axis, Section
+    from scanstrain.structures import Axis, Section, Wall, WallResult
 
 FloatArray = NDArray[np.float64]
 Guide = Callable[[FloatArray], tuple[FloatArray, FloatArray]]
@@ -34,14 +36,20 @@ class Shape:
     structure : {"tunnel", "wall", "free"}
     axis : Axis or None
         Of a tunnel.
+    wall : Wall or None
+        The main face of a wall.
+    warnings : tuple of str
     """
 
     structure: str
     axis: Axis | None = None
+    wall: Wall | None = None
+    warnings: tuple[str, ...] = ()
 
     def unroll(self, points: FloatArray) -> Unrolled | None:
         """Return places (n, 3) on the surface laid flat; None for an object of no known structure."""
-        return None if self.axis is None else self.axis.unroll(points)
+        flat = self.axis or self.wall
+        return None if flat is None else flat.unroll(points)
 
     def guide(self) -> Guide | None:
         """Return what gives, for places (n, 3), the nearest ones on the axis of a tunnel and its directions there."""
@@ -54,15 +62,17 @@ class Shape:
 
 
 def shape_of(reference: Epoch, config: CompareConfig) -> Shape:
-    """Find or take the axis of a tunnel.
+    """Find or take the axis of a tunnel or the face of a wall.
 
     Raises
     ------
     OptionError
         The scan shows no tunnel, or the axis that was given leaves it.
     """
-    if config.strain.structure != "tunnel":
-        return Shape(config.strain.structure)
+    if config.strain.structure == "wall":
+        return _wall(reference, config)
+    if config.strain.structure == "free":
+        return Shape("free")
     from scanstrain.structures import fit_axis, given_axis
 
     given = config.tunnel.axis
@@ -71,9 +81,64 @@ def shape_of(reference: Epoch, config: CompareConfig) -> Shape:
     return Shape("tunnel", given_axis(np.asarray(given) - reference.origin, reference.points))
 
 
+def _wall(reference: Epoch, config: CompareConfig) -> Shape:
+    """Find the main face; a wall of several faces has strains all the same, but no lean of its own."""
+    from scanstrain.structures import fit_wall
+
+    given, free_side = config.wall.plane, config.strain.free_side
+    try:
+        wall = fit_wall(
+            reference.points,
+            given=None if given is None else np.asarray(given) - reference.origin,
+            free_side=None if free_side is None else np.asarray(free_side) - reference.origin,
+        )
+    except OptionError as error:
+        return Shape("wall", warnings=(f"No lean, profile or bulge of the wall: {error}",))
+    return Shape("wall", wall=wall, warnings=wall.warnings)
+
+
+def wall_movement(
+    shape: Shape, field: AffineField, registration: Registration, config: CompareConfig
+) -> WallResult | None:
+    """Measure how the face of a wall moved; None for anything else, or where hardly any gauge lies on it.
+
+    Parameters
+    ----------
+    shape : Shape
+    field : AffineField
+        Calibrated.
+    registration : Registration
+        Its error is part of that of movements, not of bulges.
+    config : CompareConfig
+    """
+    if shape.wall is None:
+        return None
+    from scanstrain.structures import measure_wall
+
+    fine = field.status == Status.FINE
+    options = config.wall
+    try:
+        return measure_wall(
+            shape.wall,
+            field.position,
+            np.where(fine, field.displacement[:, 2], np.nan),
+            np.where(fine, np.sqrt(field.covariance[:, 2, 2]), np.nan),
+            gauge_length=field.gauge_length,
+            gauge_spacing=field.gauge_spacing,
+            normals=field.frame[:, :, 2],
+            panel=options.panel,
+            bands=options.band,
+            datum=registration.displacement_covariance,
+        )
+    except OptionError:
+        if options.panel is not None or options.band is not None:
+            raise
+        return None
+
+
 def places_on(unrolled: Unrolled | None) -> dict[str, NDArray[np.generic]]:
     """Return chainage [m] and clock angle [rad] as attributes; nothing where there is no axis."""
-    if unrolled is None:
+    if unrolled is None or np.isnan(unrolled.clock).all():
         return {}
     return {"chainage": unrolled.along.astype(np.float32), "clock": unrolled.clock.astype(np.float32)}
 

@@ -41,7 +41,9 @@ def yard(rng, *, length=8.0, height=4.0, bearing=0.0, lean=0.0, density=400, noi
         patch(rng, corner - 0.5 * right, (length + 1) * right, 5 * level, density=density, noise=noise),
         patch(rng, corner, 2.0 * level, height * UP, density=density, noise=noise),
         patch(rng, corner + length * right, 1.5 * level, height * UP, density=density, noise=noise),
-        patch(rng, corner + 0.35 * length * right + 0.3 * normal, 0.6 * right, height * up, density=density, noise=noise),
+        patch(
+            rng, corner + 0.35 * length * right + 0.3 * normal, 0.6 * right, height * up, density=density, noise=noise
+        ),
     ]
     angle, rise = rng.uniform(0, np.pi, 800), rng.uniform(0, height, 800)
     pipe = np.outer(1.2 + 0.05 * np.cos(angle), right) + np.outer(0.1 + 0.05 * np.sin(angle), normal)

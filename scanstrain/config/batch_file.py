@@ -126,6 +126,7 @@ class BatchConfig(CompareConfig):
             neighbourhood=self.neighbourhood,
             strain=self.strain,
             tunnel=self.tunnel,
+            wall=self.wall,
             budget=self.budget,
             output=output,
             zone=self.zone,

@@ -204,6 +204,28 @@ class TunnelOptions(Options):
     )
 
 
+class WallOptions(Options):
+    """The face of a wall and the parts that its movement is measured in."""
+
+    plane: Places | None = Field(
+        default=None,
+        examples=[[[0.0, 0.0, 0.0], [10.0, 0.0, 0.0]]],
+        description="Two points [x, y, z] at the foot in file coordinates [m], left to right for somebody who faces the "
+        "wall, for a vertical face, or a third one on the face. No default: the main face is found on the reference scan.",
+    )
+    panel: Annotated[tuple[Positive, Positive], Strict(False)] | None = Field(
+        default=None,
+        examples=[[2.0, 1.5]],
+        description="Width and height of panels whose movement is given one by one [m]. No default: the wall is one "
+        "panel.",
+    )
+    band: Positive | None = Field(
+        default=None,
+        examples=[0.5],
+        description="Height of the bands of the verticality profile [m]. No default: one gauge length.",
+    )
+
+
 class CompareConfig(Options):
     """Everything that one comparison needs to know."""
 
@@ -211,6 +233,7 @@ class CompareConfig(Options):
     neighbourhood: NeighbourhoodOptions = Field(default=NeighbourhoodOptions(), description="Gauges and their fit.")
     strain: StrainOptions = Field(default=StrainOptions(), description="Strain, rotation, significance.")
     tunnel: TunnelOptions = Field(default=TunnelOptions(), description="Axis and sections of a tunnel.")
+    wall: WallOptions = Field(default=WallOptions(), description="Face of a wall and its parts.")
     budget: BudgetOptions = Field(default=BudgetOptions(), description="Even strain from temperature, for comparison.")
     output: OutputOptions = Field(default=OutputOptions(), description="Colours and missing values.")
     zone: Annotated[tuple[ZoneEntry, ...], Strict(False)] = Field(

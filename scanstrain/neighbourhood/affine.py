@@ -3,7 +3,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -16,6 +16,8 @@ from scanstrain.neighbourhood.correlation import count_correlation
 from scanstrain.neighbourhood.fit import CELLS, COVER, MATCHED, POINTS, SCALE_GREY, SCALE_NORMAL
 from scanstrain.neighbourhood.gauges import Guide, frames_at, place_gauges, straight_guide
 from scanstrain.neighbourhood.intensity import comparable_intensity
+from scanstrain.neighbourhood.joint_cuts import cuts_at
+from scanstrain.neighbourhood.joint_lines import Joint, lay_on_surface, pieces_of
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
 from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.neighbourhood.smooth import SmoothSurface, support_cells
@@ -77,6 +79,7 @@ def fit_affine(
     required_strain_sd: float | None = None,
     free_side: FloatArray | None = None,
     axis: FloatArray | Guide | None = None,
+    joints: Sequence[Joint] = (),
     progress: Progress | None = None,
 ) -> AffineField:
     """Fit a local affine map of the reference surface onto the current one at every gauge.
@@ -108,6 +111,8 @@ def fit_affine(
     axis : ndarray of shape (3,) or callable, optional
         Unit direction of a straight tunnel, or for any tunnel the nearest places on its axis and the directions
         there, each (n, 3), from places (n, 3): normals look to the axis and a2 runs along it, otherwise a2 is upward.
+    joints : sequence of Joint
+        Lines across which the surface is not continuous: a patch ends at them.
     progress : callable, optional
         Called with a phrase and the share done.
 
@@ -126,7 +131,7 @@ def fit_affine(
     spacing = gauge_spacing or gauge_length / 4
     width = _resolution(reference, current, gauge_length, resolution)
     grey_reference, grey_current = (
-        _intensities(reference, current, gauge_length, width) if use_intensity else (None, None)
+        pair_of_textures(reference, current, gauge_length, width) if use_intensity else (None, None)
     )
     radius = gauge_length / 2
     support = max(gauge_length / 4, 6 * width)
@@ -136,11 +141,13 @@ def fit_affine(
     places, normals = place_gauges(finest.cells, spacing)
     guide = straight_guide(axis, places) if isinstance(axis, np.ndarray) else axis
     gauges, warnings = frames_at(places, normals, support_cells(finest.cells.position, radius), free_side, guide)
+    traces = [lay_on_surface(joint, finest.cells, radius) for joint in joints]
+    cuts = cuts_at(gauges.origin, gauges.frame, gauges.curvature, radius, *pieces_of(joints, traces, width, radius))
     need = Requirements(
         displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
         strain=required_strain_sd or REQUIRED_STRAIN_SD,
     )
-    state = Estimate(np.zeros((len(places), 12)), np.ones(len(places)), need.limits() / _units(radius))
+    state = Estimate(np.zeros((len(places), 12)), np.ones(len(places)), need.limits() / units_of(radius))
 
     change = np.zeros((len(places), 3))
     widths = _pyramid(width, gauge_length)
@@ -155,6 +162,7 @@ def fit_affine(
             gauges,
             radius,
             spacing,
+            cuts,
         )
         gate = max(ours.gate, 4 * step) if not last else ours.gate + step
         for turn in range(3 if last else 1):
@@ -165,7 +173,7 @@ def fit_affine(
             if last and turn and np.mean(np.where(seen, change, 0.0).max(axis=1) < SETTLED * step) > SETTLED_SHARE:
                 break
     say("fit done", 1.0)
-    status = _status(state, gauges, radius, change.max(axis=1) > 0.5 * width, min_points)
+    status = gauge_status(state, gauges, radius, change.max(axis=1) > 0.5 * width, min_points)
     if not (status == Status.FINE).any():
         counts = ", ".join(f"{Status(s).name.lower()} {int((status == s).sum())}" for s in np.unique(status))
         raise FitError(
@@ -186,7 +194,7 @@ def _silent(_phrase: str, _share: float) -> None:
     """Report progress to nobody."""
 
 
-def _units(radius: float) -> FloatArray:
+def units_of(radius: float) -> FloatArray:
     """Factors from the unknowns of the fit, metres at the rim, to those of the field: m, 1 and 1/m."""
     return np.array([1.0] * 3 + [1 / radius] * 6 + [1 / radius**2] * 3)
 
@@ -225,7 +233,7 @@ def _pyramid(width: float, gauge_length: float) -> list[float]:
     return [width * (coarse / width) ** (k / steps) for k in range(steps, 0, -1)] + [width]
 
 
-def _intensities(
+def pair_of_textures(
     reference: Epoch, current: Epoch, gauge_length: float, width: float
 ) -> tuple[FloatArray | None, FloatArray | None]:
     """Texture of both epochs, brought to a common spread so that the local gain starts near 1."""
@@ -241,7 +249,7 @@ def _intensities(
     return out[0], out[1]
 
 
-def _status(
+def gauge_status(
     state: Estimate, gauges: SmoothSurface, radius: float, moving: NDArray[np.bool_], min_points: int
 ) -> NDArray[np.uint8]:
     """Give every gauge its reason code."""
@@ -273,7 +281,7 @@ def _field(
 ) -> AffineField:
     """Scale the unknowns back to their units and blank what is not observable."""
     radius = gauge_length / 2
-    scale = _units(radius)
+    scale = units_of(radius)
     values = state.values * scale
     covariance = state.covariance * scale[:, None] * scale[None, :]
     sd = state.data_sd * scale

@@ -182,5 +182,5 @@ def _replace(level: Level, state: Estimate, table: FloatArray, parts: list[Compo
     correlated_covariance(
         g.origin, g.frame, g.curvature, level.radius, level.sheet_gate, level.weak, state.required, level.nuisance,
         level.capacity, level.textured, key, start, table[order], unit[order], state.gains, state.held, scales, own,
-        lengths, shares, SQUARES, state.covariance, state.data_sd,
+        lengths, shares, SQUARES, level.cuts.pieces, level.cuts.start, state.covariance, state.data_sd,
     )  # fmt: skip

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import KEY_BITS, group, voxel_keys
 from scanstrain.neighbourhood.fit import in_frame, members_of
+from scanstrain.neighbourhood.joint_cuts import keep_own_side
 from scanstrain.neighbourhood.rows import LEAST_NOISE
 from scanstrain.neighbourhood.solve import solve_in_place
 from scanstrain.neighbourhood.squares import quadratic_forms, square_of
@@ -52,6 +53,17 @@ def _near(position: FloatArray, places: FloatArray, radius: float) -> NDArray[np
     return np.isin(voxel_keys(position, radius), wanted)
 
 
+def _shown(state: Estimate) -> FloatArray:
+    """Present motion of the gauges (g, 12) without the slides that nothing shows.
+
+    Those are each gauge's own chance, and between gauges of a curved surface their differences would look like height.
+    """
+    held = state.held.copy()
+    for i in (0, 1, 3, 4, 5, 6):
+        held[~(state.data_sd[:, i] <= state.required[i]), i] = 0.0
+    return held
+
+
 def _tables(level: Level, state: Estimate, places: FloatArray, radius: float) -> tuple[FloatArray, FloatArray]:
     """Both epochs about the places: reference cells, and current cells moved back."""
     comparison, g = level.comparison, level.gauges
@@ -60,7 +72,8 @@ def _tables(level: Level, state: Estimate, places: FloatArray, radius: float) ->
     there = np.flatnonzero(_near(theirs.position, places, radius))
     moved = np.zeros((len(there), 3))
     nearest = nearest_gauges(theirs.position[there], g.origin)
-    blend(theirs.position[there], nearest, g.origin, g.frame, state.held, level.radius, level.spacing, moved)
+    held = _shown(state)
+    blend(theirs.position[there], nearest, g.origin, g.frame, held, level.radius, level.spacing, moved)
     back = comparison.back(there, moved, 10 * level.reference.gate)
     fine = back.valid & (np.abs(back.misfit) < level.reference.gate)
     own = comparison.own
@@ -88,20 +101,24 @@ def _tables(level: Level, state: Estimate, places: FloatArray, radius: float) ->
 @numba.njit(cache=True, nogil=True)
 def _square_sums(
     o: FloatArray, f: FloatArray, k: FloatArray, radius: float, gate: float, key: IntArray, start: IntArray,
-    table: FloatArray, members: IntArray, across: int,
+    table: FloatArray, members: IntArray, across: int, pieces: FloatArray,
 ) -> FloatArray:  # fmt: skip
     """Sum the members of a patch over its squares."""
     sums = np.zeros((across, across, _SUMS))
-    for r in range(members_of(o, f, k, radius, gate, key, start, table, members)):
+    found = members_of(o, f, k, radius, gate, key, start, table, members)
+    for r in range(keep_own_side(o, f, pieces, table, members, found)):
         row = table[members[r]]
         x, y, _ = in_frame(row[_POSITION : _POSITION + 3] - o, f)
         facing = in_frame(row[_NORMAL : _NORMAL + 3], f)[2]
         s = sums[square_of(x, radius, across), square_of(y, radius, across)]
         s[0] += 1.0
-        # Of the motion, the part along the one normal of the patch stays in: it is a quadratic. What a slide does
-        # through the slope of relief is taken out, since it looks like relief.
+        # Of the motion, the part along the normal of the smooth patch stays in: it is nearly a quadratic. What a slide
+        # does through the slope of relief is taken out, since it looks like relief.
         s[1] += row[_VALUE] if facing > 0.0 else -row[_VALUE]
-        s[1] += in_frame(row[_MOTION : _MOTION + 3], f)[2]
+        u, v, w = in_frame(row[_MOTION : _MOTION + 3], f)
+        p, q = x + 0.5 * u, y + 0.5 * v
+        slope, across_slope = k[0] * p + k[1] * q, k[1] * p + k[2] * q
+        s[1] += (w - slope * u - across_slope * v) / np.sqrt(1.0 + slope**2 + across_slope**2)
         for column in range(2, _SUMS):
             s[column] += row[_VALUE + column - 1]
     return sums
@@ -167,14 +184,15 @@ def _leave(a: FloatArray, y: FloatArray, c: FloatArray, e: FloatArray) -> bool:
 def _patch_forms(
     chosen: IntArray, origin: FloatArray, frame: FloatArray, shape: FloatArray, radius: float, gate: float,
     capacity: int, key: IntArray, start: IntArray, table: FloatArray, other_key: IntArray, other_start: IntArray,
-    other: FloatArray, lengths: FloatArray, across: int, q: FloatArray, T: FloatArray,
+    other: FloatArray, lengths: FloatArray, across: int, pieces: FloatArray, piece_start: IntArray, q: FloatArray,
+    T: FloatArray,
 ) -> None:  # fmt: skip
     for p in numba.prange(len(chosen)):
         g = chosen[p]
         o, f, k = origin[g], frame[g], shape[g]
-        members = np.empty(capacity, np.int64)
-        ours = _square_sums(o, f, k, radius, gate, key, start, table, members, across)
-        theirs = _square_sums(o, f, k, radius, gate, other_key, other_start, other, members, across)
+        members, cut = np.empty(capacity, np.int64), pieces[piece_start[g] : piece_start[g + 1]]
+        ours = _square_sums(o, f, k, radius, gate, key, start, table, members, across, cut)
+        theirs = _square_sums(o, f, k, radius, gate, other_key, other_start, other, members, across, cut)
         for kind in range(q.shape[1]):
             n = 6 if kind == 0 else 2
             a, y = np.zeros((across, across, n)), np.zeros((across, across))
@@ -223,6 +241,6 @@ def difference_forms(
     capacity = int(3 * np.pi * (radius / level.reference.cells.resolution) ** 2) + 256
     _patch_forms(
         chosen, g.origin, g.frame, g.curvature, radius, level.reference.gate + 0.1 * radius, capacity, *hashed,
-        lengths, int(np.ceil(PATCH * squares)), q, T,
+        lengths, int(np.ceil(PATCH * squares)), level.cuts.pieces, level.cuts.start, q, T,
     )  # fmt: skip
     return q, T

@@ -19,6 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import KEY_BITS, find_key, pack
+from scanstrain.neighbourhood.joint_cuts import keep_own_side
 from scanstrain.neighbourhood.solve import accumulate, inverse, solve_in_place
 
 FloatArray = NDArray[np.float64]
@@ -261,7 +262,7 @@ def fit_gauges(
     origin: FloatArray, frame: FloatArray, shape: FloatArray, radius: float, sheet_gate: float, weak: float,
     required: FloatArray, nuisance: FloatArray, hold: float, min_cells: int, capacity: int, textured: bool,
     key: IntArray, start: IntArray, table: FloatArray, gains: FloatArray, held: FloatArray, values: FloatArray,
-    covariance: FloatArray, data_sd: FloatArray, info: FloatArray,
+    covariance: FloatArray, data_sd: FloatArray, info: FloatArray, pieces: FloatArray, piece_start: IntArray,
 ) -> None:  # fmt: skip
     """Fit every gauge.
 
@@ -294,6 +295,8 @@ def fit_gauges(
         Result [m], its covariance [m^2], and standard errors from the data alone, which decide observability [m].
     info : ndarray of shape (g, 6)
         Cells, matched cells, points, variance factors of surface and intensity rows, covered share of the disc.
+    pieces, piece_start : ndarray
+        Joints about every gauge, as of `joint_cuts.Cuts`: what lies beyond them is not of the gauge.
     """
     for g in numba.prange(len(origin)):
         members = np.empty(capacity, np.int64)
@@ -301,6 +304,7 @@ def fit_gauges(
         values[g, :] = np.nan
         info[g, SCALE_NORMAL] = info[g, SCALE_GREY] = np.nan
         found = members_of(o, f, shape[g], radius, sheet_gate, key, start, table, members)
+        found = keep_own_side(o, f, pieces[piece_start[g] : piece_start[g + 1]], table, members, found)
         m = _keep_matched(found, members, o, f, radius, table, info[g])
         if m < min_cells:
             continue

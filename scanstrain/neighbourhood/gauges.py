@@ -155,9 +155,14 @@ def frames_at(
     fitted = smooth_surface(places, normals, support)
     signs, warnings = free_side_signs(fitted.origin, fitted.frame[:, :, 2], free_side, axis)
     frame = turn_frames(fitted.frame, signs, None if axis is None else axis(fitted.origin)[1])
+    return SmoothSurface(fitted.origin, frame, turned_curvature(fitted, frame), fitted.support), warnings
+
+
+def turned_curvature(fitted: SmoothSurface, frame: FloatArray) -> FloatArray:
+    """Curvature (g, 3) of a smooth surface in other frames (g, 3, 3) with the same normals or their opposites."""
     turn = np.einsum("gai,gaj->gij", fitted.frame[:, :, :2], frame[:, :, :2])
+    signs = np.where(np.einsum("ga,ga->g", fitted.frame[:, :, 2], frame[:, :, 2]) < 0, -1.0, 1.0)
     k11, k12, k22 = fitted.curvature.T
     old = np.stack([k11, k12, k12, k22], axis=1).reshape(-1, 2, 2)
     new = signs[:, None, None] * np.einsum("gia,gij,gjb->gab", turn, old, turn)
-    curvature = np.stack([new[:, 0, 0], new[:, 0, 1], new[:, 1, 1]], axis=1)
-    return SmoothSurface(fitted.origin, frame, curvature, fitted.support), warnings
+    return np.stack([new[:, 0, 0], new[:, 0, 1], new[:, 1, 1]], axis=1)

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from scanstrain.cells import Cells, group, make_cells, voxel_keys
 from scanstrain.neighbourhood import fit
 from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
+from scanstrain.neighbourhood.joint_cuts import Cuts, keep_visible, no_cuts
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
 from scanstrain.neighbourhood.rows import Comparison, Rows, block_density
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells, typical_height
@@ -85,7 +86,13 @@ class Level:
     """Both epochs at one resolution, ready to be compared at any present estimate."""
 
     def __init__(
-        self, reference: Surface, current: Surface, gauges: SmoothSurface, radius: float, spacing: float
+        self,
+        reference: Surface,
+        current: Surface,
+        gauges: SmoothSurface,
+        radius: float,
+        spacing: float,
+        cuts: Cuts | None = None,
     ) -> None:
         self.reference, self.gauges, self.radius, self.spacing = reference, gauges, radius, spacing
         textured = reference.textured and current.textured
@@ -94,7 +101,9 @@ class Level:
         density = block_density(cells)[cells.block], block_density(current.cells)
         ours, theirs = reference.predictor(textured), current.predictor(textured)
         self.comparison = Comparison(cells, ours, theirs, density, reference.gate)
+        self.cuts = cuts or no_cuts(len(gauges.origin))
         self.nearest = nearest_gauges(cells.position, gauges.origin)
+        keep_visible(cells.position, self.nearest, gauges.origin, gauges.frame, self.cuts.pieces, self.cuts.start)
         gradient = NUISANCE_GRADIENT * radius
         self.nuisance = np.full(12, WEAK_PRIOR)
         self.nuisance[[0, 1]], self.nuisance[[3, 4, 5, 6]] = NUISANCE_DISPLACEMENT, gradient
@@ -120,7 +129,8 @@ class Level:
         fit.fit_gauges(
             g.origin, g.frame, g.curvature, self.radius, self.sheet_gate, self.weak, state.required, self.nuisance,
             self.reference.cells.resolution, min_points, self.capacity, self.textured, key, start, table[order],
-            state.gains, state.held, state.values, state.covariance, state.data_sd, state.info,
+            state.gains, state.held, state.values, state.covariance, state.data_sd, state.info, self.cuts.pieces,
+            self.cuts.start,
         )  # fmt: skip
         return table
 

@@ -51,6 +51,8 @@ class Predictor:
         Fitted constants of height [m] and intensity.
     variance, unresolved : ndarray of shape (b, 2)
         Prediction variance, and the part of it that is structure between the points rather than noise.
+    through : ndarray of shape (b, 2)
+        The rest of the prediction variance: noise of the neighbours that passes through the prediction.
     noise : ndarray of shape (b, 2)
         Noise variance of a single point in height [m^2] and intensity.
     sill : ndarray of shape (b, 2)
@@ -66,6 +68,7 @@ class Predictor:
     constant: FloatArray
     variance: FloatArray
     unresolved: FloatArray
+    through: FloatArray
     noise: FloatArray
     sill: FloatArray
     height_table: FloatArray
@@ -133,7 +136,7 @@ def _neighbours(
 def krige(
     s: FloatArray, t: FloatArray, values: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float,
     noise: float, sill: float, probe: float, weights: FloatArray, L: FloatArray,
-) -> tuple[float, float, float]:  # fmt: skip
+) -> tuple[float, float, float, float]:  # fmt: skip
     """Solve one ordinary kriging system.
 
     Fills `weights` with the sill times K^-1 (values), to be multiplied with correlations; returns the constant and
@@ -147,7 +150,7 @@ def krige(
         L[i, i] = sill + constant + noise * share[i]
     if not factor(L, m):
         weights[:m] = 0.0
-        return values[:m].mean(), np.inf, np.inf
+        return values[:m].mean(), np.inf, np.inf, np.inf
     weights[:m] = values[:m]
     forward(L, weights, m)
     backward(L, weights, m)
@@ -161,8 +164,8 @@ def krige(
 def _prediction_error(
     s: FloatArray, t: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float, noise: float, sill: float,
     constant: float, probe: float, L: FloatArray,
-) -> tuple[float, float]:  # fmt: skip
-    """Prediction variance, and what unresolved structure adds per row to the variance of a sum over many rows.
+) -> tuple[float, float, float]:  # fmt: skip
+    """Prediction variance, what unresolved structure adds per row to the variance of a sum over many rows, noise alone.
 
     Judged at four probes one cell apart. Neighbouring rows miss the same structure, so to the variance of one row
     come its covariances with the four nearest and four diagonal neighbours, as far as these cells are filled.
@@ -192,7 +195,7 @@ def _prediction_error(
                 side += 0.25 * (total - through)
             else:
                 diagonal += 0.5 * (total - through)
-    return variance, max(own + _FILLED * 4.0 * (side + diagonal), 0.3 * own)
+    return variance, max(own + _FILLED * 4.0 * (side + diagonal), 0.3 * own), variance - own
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)
@@ -214,12 +217,12 @@ def _solve_blocks(
     curvature: FloatArray, position: FloatArray, size: float, intensity: FloatArray, count: FloatArray, first: IntArray,
     height_table: FloatArray, intensity_table: FloatArray, step: float, noise: FloatArray,
     sill: FloatArray, st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray,
-    variance: FloatArray, unresolved: FloatArray,
+    variance: FloatArray, unresolved: FloatArray, through: FloatArray,
 ) -> None:  # fmt: skip
     for b in numba.prange(len(key)):
         m = first[b + 1] - first[b]
         if m == 0:
-            variance[b, :] = np.inf
+            variance[b, :] = through[b, :] = np.inf
             continue
         cells = np.empty(MAX_NEIGHBOURS, np.int64)
         s, t, h = np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS)
@@ -230,14 +233,14 @@ def _solve_blocks(
             share[i] = 1.0 / count[cells[i]]
             st[first[b] + i, 0], st[first[b] + i, 1] = s[i], t[i]
         probe = 0.5 * size / BLOCK_WIDTH
-        constant[b, 0], variance[b, 0], unresolved[b, 0] = krige(
+        constant[b, 0], variance[b, 0], unresolved[b, 0], through[b, 0] = krige(
             s, t, h, share, m, height_table, step, noise[b, 0], sill[b, 0], probe, w, L
         )
         weights_h[first[b] : first[b] + m] = w
         if len(intensity):
             for i in range(m):
                 grey[i] = intensity[cells[i]]
-            constant[b, 1], variance[b, 1], unresolved[b, 1] = krige(
+            constant[b, 1], variance[b, 1], unresolved[b, 1], through[b, 1] = krige(
                 s, t, grey, share, m, intensity_table, step, noise[b, 1], sill[b, 1], probe, w, L
             )
             weights_i[first[b] : first[b] + m] = w
@@ -274,14 +277,14 @@ def build_predictor(
     total = int(first[-1])
     st, weights_h = np.empty((total, 2)), np.empty(total)
     weights_i = np.empty(total if len(grey) else 0)
-    constant, variance, unresolved = np.zeros((blocks, 2)), np.zeros((blocks, 2)), np.zeros((blocks, 2))
+    constant, variance, unresolved, through = (np.zeros((blocks, 2)) for _ in range(4))
     _solve_blocks(
         *shared, cells.block_size, grey, cells.count, first, height_table, intensity_table, step, noise, sill,
-        st, weights_h, weights_i, constant, variance, unresolved,
+        st, weights_h, weights_i, constant, variance, unresolved, through,
     )  # fmt: skip
     return Predictor(
-        cells, surface, first, st, weights_h, weights_i, constant, variance, unresolved, noise, sill, height_table,
-        intensity_table, step,
+        cells, surface, first, st, weights_h, weights_i, constant, variance, unresolved, through, noise, sill,
+        height_table, intensity_table, step,
     )  # fmt: skip
 
 

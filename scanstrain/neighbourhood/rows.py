@@ -68,7 +68,7 @@ def _evaluate(
     density: FloatArray, gate: float, own_noise: FloatArray, noise: FloatArray,
     key: IntArray, size: float, origin: FloatArray, frame: FloatArray, curvature: FloatArray, first: IntArray,
     st: FloatArray, weights_h: FloatArray, weights_i: FloatArray, constant: FloatArray, variance: FloatArray,
-    unresolved: FloatArray, height_table: FloatArray, intensity_table: FloatArray, step: float,
+    unresolved: FloatArray, through: FloatArray, height_table: FloatArray, intensity_table: FloatArray, step: float,
     valid: NDArray[np.bool_], misfit: FloatArray, slope: FloatArray, grey: FloatArray, grey_slope: FloatArray,
     out_variance: FloatArray,
 ) -> None:  # fmt: skip
@@ -112,7 +112,8 @@ def _evaluate(
         share = own_density[c] / max(density[b], 1e-9)
         out_variance[c, 0] = (own_noise[c, 0] + noise[b, 0] * share) / count[c] + unresolved[b, 0]
         out_variance[c, 1] = (own_noise[c, 1] + noise[b, 1] * share) / count[c] + unresolved[b, 1]
-        out_variance[c, 2] = own_noise[c, 0] / count[c] + variance[b, 0]
+        # Of relief both predictions miss the same, which drops out of their difference; the noise in them does not.
+        out_variance[c, 2] = own_noise[c, 0] / count[c] + through[b, 0]
         out_variance[c, 3] = own_noise[c, 1] / count[c] + variance[b, 1]
 
 
@@ -174,6 +175,7 @@ class Comparison:
         share = single / np.maximum(single + error, 1e-300)
         self.missed = share**2 * missed
         self.spread = share * error
+        self.spread[:, 0] = np.where(np.isfinite(reference.through), reference.through, 0.0)[cells.block, 0]
         self.single = single
 
     def rows(self, moved: FloatArray, gate: float) -> Rows:
@@ -238,6 +240,7 @@ def _against(
         cells.position, moved, cells.count, normal, own_density, density, gate, noise, predictor.noise,
         predictor.cells.key, predictor.cells.block_size, surface.origin, surface.frame, surface.curvature,
         predictor.start, predictor.st, predictor.height, predictor.intensity, predictor.constant, predictor.variance,
-        predictor.unresolved, predictor.height_table, predictor.intensity_table, predictor.table_step, *out,
+        predictor.unresolved, predictor.through, predictor.height_table, predictor.intensity_table,
+        predictor.table_step, *out,
     )  # fmt: skip
     return Rows(out[0], moved, *out[1:5], np.zeros(n), out[5])

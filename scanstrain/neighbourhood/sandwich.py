@@ -22,6 +22,7 @@ from scanstrain.neighbourhood.fit import (
     observation_rows,
     reweight,
 )
+from scanstrain.neighbourhood.joint_cuts import keep_own_side
 from scanstrain.neighbourhood.solve import accumulate, inverse
 from scanstrain.neighbourhood.squares import spread, square_of, taps
 
@@ -103,7 +104,8 @@ def correlated_covariance(
     origin: FloatArray, frame: FloatArray, shape: FloatArray, radius: float, sheet_gate: float, weak: float,
     required: FloatArray, nuisance: FloatArray, capacity: int, textured: bool, key: IntArray, start: IntArray,
     table: FloatArray, unit: FloatArray, gains: FloatArray, held: FloatArray, scales: FloatArray, own: FloatArray,
-    lengths: FloatArray, shares: FloatArray, across: int, covariance: FloatArray, data_sd: FloatArray,
+    lengths: FloatArray, shares: FloatArray, across: int, pieces: FloatArray, piece_start: IntArray,
+    covariance: FloatArray, data_sd: FloatArray,
 ) -> None:  # fmt: skip
     """Replace the covariance of every fitted gauge.
 
@@ -120,6 +122,7 @@ def correlated_covariance(
         Correlation lengths [m], and variance of each component over `unit` for both kinds of rows.
     across : int
         Squares across a gauge.
+    pieces, piece_start : as of `fit.fit_gauges`
     covariance, data_sd : ndarray of shape (g, 12, 12), (g, 12)
         Replaced.
     """
@@ -129,7 +132,8 @@ def correlated_covariance(
         members = np.empty(capacity, np.int64)
         o, f = origin[g], frame[g]
         m = 0
-        for r in range(members_of(o, f, shape[g], radius, sheet_gate, key, start, table, members)):
+        found = members_of(o, f, shape[g], radius, sheet_gate, key, start, table, members)
+        for r in range(keep_own_side(o, f, pieces[piece_start[g] : piece_start[g + 1]], table, members, found)):
             if table[members[r], VALID] != 0.0:
                 members[m] = members[r]
                 m += 1

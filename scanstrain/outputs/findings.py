@@ -43,7 +43,14 @@ def _change(summary: Summary) -> str:
     whole = f"the {number(fine, 0)} gauges that could be evaluated"
     if not found:
         return f"No change beyond the false-discovery control at any of {whole}."
-    return f"{number(found, 0)} of {whole} changed beyond the false-discovery control."
+    alone = ", nowhere three side by side: some such are expected by chance" if _scattered(summary) else ""
+    return f"{number(found, 0)} of {whole} changed beyond the false-discovery control{alone}."
+
+
+def _scattered(summary: Summary) -> bool:
+    """Whether what changed are single gauges or pairs only; an older summary does not tell."""
+    regions = summary.get("regions")
+    return regions is not None and not regions["found"]
 
 
 def _normal(summary: Summary) -> str:
@@ -55,7 +62,7 @@ def _normal(summary: Summary) -> str:
             continue
         limit, largest = result["detection_limit"], result["largest_change"]
         said = f" (95 % detection limit {amount(limit, attribute)}, median)" if limit is not None else ""
-        if largest is not None:
+        if largest is not None and not _scattered(summary):
             value = interval(largest["value"], largest["sd"] or 0.0, attribute)
             parts.append(f"{title} reaches {value} (95 %) at {_place(largest['at'])}{said}")
         else:

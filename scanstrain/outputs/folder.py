@@ -18,7 +18,8 @@ from pathlib import Path
 from scanstrain.attributes import BY_NAME
 from scanstrain.errors import OutputError, ScanstrainError, explain
 
-FIXED_NAMES = frozenset({"strain.laz", "strain.las", "gauges.csv", "sections.csv", "summary.json", "registered.json", "report.html"})
+TABLES = ("gauges.csv", "sections.csv", "wall.csv", "bulges.csv", "joints.csv")
+FIXED_NAMES = frozenset({"strain.laz", "strain.las", *TABLES, "summary.json", "registered.json", "report.html"})
 
 
 def is_ours(name: str) -> bool:

@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 import csv
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -20,15 +21,7 @@ def write_section_table(result: Result, folder: Path, options: OutputOptions) ->
     """Write `sections.csv` in SI units and file coordinates; nothing where there are no sections."""
     if not result.sections:
         return None
-    rows = section_data(result)
-    units = section_units(result.config.tunnel.chords)
-    target = folder / "sections.csv"
-    with target.open("w", encoding="utf-8", newline="") as stream:
-        writer = csv.writer(stream, lineterminator="\n")
-        writer.writerow(units)
-        writer.writerow(unit for unit, _ in units.values())
-        writer.writerows([_cell(row[name]) for name in units] for row in rows)
-    return target
+    return write_rows(section_data(result), section_units(result.config.tunnel.chords), folder / "sections.csv")
 
 
 def section_data(result: Result) -> list[dict[str, Any]]:
@@ -40,5 +33,17 @@ def section_data(result: Result) -> list[dict[str, Any]]:
     return rows
 
 
-def _cell(value: float) -> str:
+def write_rows(rows: Sequence[Mapping[str, Any]], units: Mapping[str, tuple[str, str]], target: Path) -> Path:
+    """Write rows under their names and units; a cell is empty where there is no value."""
+    with target.open("w", encoding="utf-8", newline="") as stream:
+        writer = csv.writer(stream, lineterminator="\n")
+        writer.writerow(units)
+        writer.writerow(unit for unit, _ in units.values())
+        writer.writerows([_cell(row[name]) for name in units] for row in rows)
+    return target
+
+
+def _cell(value: float | str) -> str:
+    if isinstance(value, str):
+        return value
     return f"{value:.10g}" if np.isfinite(value) else ""

@@ -19,11 +19,13 @@ from scanstrain.outputs.even_strain import budget_data
 from scanstrain.outputs.findings import verdict
 from scanstrain.outputs.motions import body_numbers, directions, seam_numbers, target_numbers
 from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.regions import region_data
 from scanstrain.outputs.registered import rigid_motion
 from scanstrain.outputs.section_table import section_data
 from scanstrain.outputs.statistics import attribute_statistics
 from scanstrain.outputs.strict import plain, write_json
 from scanstrain.outputs.triggers import trigger_cautions, trigger_data, trigger_warnings
+from scanstrain.outputs.wall_table import wall_data
 from scanstrain.outputs.words import OBSERVED_WORDS, status_word
 from scanstrain.outputs.zone_table import values_of_parts, zone_data
 from scanstrain.registration.result import Registration
@@ -62,10 +64,12 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         "registration": _registration(result),
         "rigid_motion": {body.name: body_numbers(body, result.reference.origin) for body in result.bodies},
         "gauges": _gauges(result),
+        "regions": region_data(result),
         "sections": {"definitions": _section_words(result), "rows": section_data(result)} if result.sections else None,
         "zones": zone_data(result, values),
         "triggers": triggers,
         "budget": budget_data(result, values),
+        "wall": wall_data(result),
         "setups": {epoch: [seam_numbers(seam) for seam in seams] for epoch, seams in result.seams.items()},
         "calibration": {
             "factors": result.calibration.factors,

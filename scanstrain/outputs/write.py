@@ -13,9 +13,11 @@ from scanstrain.outputs.folder import check_folder, finished_only, is_ours
 from scanstrain.outputs.key import write_colour_key
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.registered import write_registered
+from scanstrain.outputs.report import write_report
 from scanstrain.outputs.section_table import write_section_table
 from scanstrain.outputs.summary import write_summary
 from scanstrain.outputs.table import write_gauge_table
+from scanstrain.outputs.wall_table import write_bulge_table, write_wall_table
 from scanstrain.outputs.words import attribute_of
 from scanstrain.registry import Registry
 from scanstrain.result import Result
@@ -29,8 +31,11 @@ OUTPUTS.add("coloured cloud", write_coloured_cloud)
 OUTPUTS.add("colour key", write_colour_key)
 OUTPUTS.add("gauge table", write_gauge_table)
 OUTPUTS.add("section table", write_section_table)
+OUTPUTS.add("wall table", write_wall_table)
+OUTPUTS.add("bulge table", write_bulge_table)
 OUTPUTS.add("registered", write_registered)
 OUTPUTS.add("summary", write_summary)
+OUTPUTS.add("report", write_report)
 
 
 def write_result(

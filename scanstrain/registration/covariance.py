@@ -6,7 +6,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.linalg import at_least, leave_one_out
+from scanstrain.linalg import leave_one_out, pooled
 from scanstrain.registration.fit import TUKEY, Fit, sums
 from scanstrain.registration.match import Metric
 
@@ -22,7 +22,8 @@ def estimate(fit: Fit, patch: IntArray, count: int, basis: FloatArray) -> tuple[
 
     Leave-one-patch-out (`linalg.leave_one_out`), whatever the correlation inside a patch. Rows are weighted robustly,
     so it is divided by the square of the mean slope of the score over the mean weight (Huber 1981; formula from
-    memory). The covariance of independent blocks, from the same residuals, is a lower limit in every direction.
+    memory). With few patches it scatters, so it is pooled with the covariance of independent blocks from the same
+    residuals (`linalg.pooled`).
 
     Parameters
     ----------
@@ -60,7 +61,7 @@ def estimate(fit: Fit, patch: IntArray, count: int, basis: FloatArray) -> tuple[
     inverse = np.linalg.inv(N)
     m = len(e)
     independent = inverse @ ((a * (e**2)[:, None]).T @ a) @ inverse * m / max(m - k, 1)
-    both = at_least(clustered, independent) / _score_ratio(fit) ** 2
+    both = pooled(clustered, independent, len(present)) / _score_ratio(fit) ** 2
     return step, both + RESOLUTION**2 * np.eye(k), N
 
 

@@ -67,7 +67,7 @@ def zone_values(
     between them repeat it. The error of the registration does not average out: it is a rigid motion, the same for
     all gauges. For the normal displacement it is carried through exactly; for the others it counts in full, as if it
     had one sign everywhere. Errors of a scan that are alike over more than a gauge length average out less than is
-    assumed here.
+    assumed here, and gauges that a corner or clutter misleads are not allowed for.
 
     Parameters
     ----------

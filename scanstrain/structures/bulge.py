@@ -3,16 +3,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.linalg import sandwich
-from scanstrain.structures.gauge_errors import CORE, GaugeErrors
+from scanstrain.structures.gauge_errors import GaugeErrors
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
+Surface = Callable[[FloatArray], FloatArray]
 
 KEPT = 3.0
 """Gauges farther from the plane than this many robust standard deviations do not take part in it: it is that of the
@@ -26,6 +28,14 @@ REACH = 0.55
 
 FEWEST = 9
 """Gauges that a paraboloid with its six coefficients rests on at least."""
+
+RANK = 1e-4
+"""Smallest eigenvalue of a paraboloid's normal matrix for each gauge in it: that of an even disc is 0.006, that of
+gauges on two lines 0."""
+
+WAVES = 13.0
+"""Root of the determinant of the slopes' covariance of the smoothed noise, in units of its variance and of the gauge
+length: how many waves there are in it. Found with simulated white noise."""
 
 NEXT = 1.5
 """Gauges up to this many spacings apart are neighbours: those of a square grid across its diagonals."""
@@ -137,25 +147,32 @@ def find_bulges(
     (bulge, hollow), each Bulge or None
         None where nothing remains on that side, or gauges are too few for a paraboloid.
     """
+    from scipy.interpolate import LinearNDInterpolator
+
     place = errors.rows[:, 1:]
     reach = max(REACH * gauge_length, 2.2 * gauge_spacing)
     smooth = smoothed(place, rest.moved, reach)
-    if not np.isfinite(smooth).any():
+    fine = np.isfinite(smooth)
+    # places in one line carry no surface
+    if fine.sum() < 3 or np.linalg.matrix_rank(place[fine] - place[fine].mean(axis=0)) < 2:
         return None, None
-    independent = max(1.0, len(place) * gauge_spacing**2 / (np.pi / 4 * (CORE * gauge_length) ** 2))
+    surface = LinearNDInterpolator(place[fine], np.stack([smooth[fine], rest.sd[fine]], axis=1))
+    size = len(place) * (gauge_spacing / gauge_length) ** 2
 
     def largest(side: float) -> Bulge | None:
         peak = int(np.nanargmax(side * smooth))
         if side * smooth[peak] <= 0:
             return None
         value, value_sd, at, at_sd = _top(rest, errors, peak, reach, side)
-        wide, tall = (_width(place, smooth, rest.sd, at, axis, value, value_sd, gauge_spacing) for axis in (0, 1))
+        wide, tall = (
+            _width(surface, np.ptp(place[:, axis]), at, axis, value, value_sd, gauge_spacing) for axis in (0, 1)
+        )
         area = _area(place, side * rest.moved > LIMIT * rest.sd, peak, gauge_spacing)
         return Bulge(
             height=value,
             height_sd=value_sd,
             largest=float(side * (side * rest.moved).max()),
-            chance=_chance(side * value / value_sd, independent),
+            chance=_chance(side * value / value_sd, size),
             along=float(at[0]),
             up=float(at[1]),
             along_sd=float(at_sd[0]),
@@ -175,18 +192,24 @@ def smoothed(place: FloatArray, values: FloatArray, reach: float) -> FloatArray:
     """Return values (g,) at places (g, 2) smoothed by paraboloids over a reach [m]; NaN where gauges are too few."""
     from scipy.spatial import cKDTree
 
+    near = cKDTree(place).query_ball_point(place, reach, return_sorted=True)
+    count = np.array([len(some) for some in near])
+    start, other = np.r_[0, np.cumsum(count)[:-1]], np.concatenate(near).astype(np.int64)
+    rows = _paraboloid(place[other] - np.repeat(place, count, axis=0), reach)
+    middle = np.linalg.norm(np.add.reduceat(rows[:, 1:3], start), axis=1) / count
+    serve = (count >= FEWEST) & (middle < ONE_SIDED)
+    normal = np.add.reduceat(rows[:, :, None] * rows[:, None, :], start)
+    right = np.add.reduceat(rows * values[other, None], start)
+    serve &= np.linalg.eigvalsh(normal)[:, 0] > RANK * count
     smooth = np.full(len(place), np.nan)
-    for k, near in enumerate(cKDTree(place).query_ball_point(place, reach)):
-        off_centre = np.linalg.norm(place[near].mean(axis=0) - place[k])
-        if len(near) >= FEWEST and off_centre < ONE_SIDED * reach:
-            smooth[k] = _paraboloid(place[near], place[k], reach)[0] @ values[near]
+    smooth[serve] = np.linalg.solve(normal[serve], right[serve, :, None])[:, 0, 0]
     return smooth
 
 
-def _paraboloid(place: FloatArray, middle: FloatArray, reach: float) -> FloatArray:
-    """Weights (6, m) that give value, slopes and second derivatives (xx, xy, yy) at a middle, in units of `reach`."""
-    x, y = ((place - middle) / reach).T
-    return np.asarray(np.linalg.pinv(np.stack([np.ones(len(x)), x, y, x * x / 2, x * y, y * y / 2], axis=1)))
+def _paraboloid(away: FloatArray, reach: float) -> FloatArray:
+    """Rows (m, 6) of a paraboloid: what value, slopes and second derivatives (xx, xy, yy), in reaches, add there."""
+    x, y = (away / reach).T
+    return np.stack([np.ones(len(x)), x, y, x * x / 2, x * y, y * y / 2], axis=1)
 
 
 def _top(
@@ -196,7 +219,7 @@ def _top(
     place = errors.rows[:, 1:]
     near = np.linalg.norm(place - place[peak], axis=1) <= reach
     weights = np.zeros((6, len(place)))
-    weights[:, near] = _paraboloid(place[near], place[peak], reach)
+    weights[:, near] = np.linalg.pinv(_paraboloid(place[near] - place[peak], reach))
     c = weights @ rest.moved
     bend = np.array([[c[3], c[4]], [c[4], c[5]]])
     off, known = np.zeros(2), bool((np.linalg.eigvalsh(side * bend) < 0).all())
@@ -216,11 +239,13 @@ def _top(
     return float(here @ c), float(np.sqrt(here @ covariance @ here)), place[peak] + reach * off, at_sd
 
 
-def _chance(z: float, independent: float) -> float:
-    """Probability that the largest of so many independent standardised values is as large as z (Sidak 1967)."""
-    from scipy.special import ndtr
+def _chance(z: float, size: float) -> float:
+    """Probability that noise alone reaches z somewhere on a face of a size in squares of the gauge length.
 
-    return float(-np.expm1(independent * np.log1p(-min(float(ndtr(-z)), 1 - 1e-16))))
+    From the expected number of peaks of a smooth Gaussian field over a height (Adler 1981; from memory).
+    """
+    peaks = WAVES * size * (2 * np.pi) ** -1.5 * max(z, 1.0) * np.exp(-0.5 * max(z, 1.0) ** 2)
+    return float(-np.expm1(-peaks))
 
 
 def _area(place: FloatArray, beyond: BoolArray, peak: int, spacing: float) -> float:
@@ -238,19 +263,15 @@ def _area(place: FloatArray, beyond: BoolArray, peak: int, spacing: float) -> fl
 
 
 def _width(
-    place: FloatArray, smooth: FloatArray, sd: FloatArray, top: FloatArray, axis: int, value: float, value_sd: float,
-    spacing: float,
-) -> tuple[float, float, bool]:  # fmt: skip
+    surface: Surface, reach: float, top: FloatArray, axis: int, value: float, value_sd: float, spacing: float
+) -> tuple[float, float, bool]:
     """Extent at half height along an axis through the top, its standard error, and whether both ends are seen [m]."""
-    from scipy.interpolate import LinearNDInterpolator
-
-    fine = np.isfinite(smooth)
     step = spacing / STEPS
-    t = step * np.arange(int(np.ceil(np.ptp(place[:, axis]) / step)) + 1)
-    surface = LinearNDInterpolator(place[fine], np.stack([smooth[fine] / value, sd[fine]], axis=1))
+    t = step * np.arange(int(np.ceil(reach / step)) + 1)
     width, variance, closed = 0.0, 0.0, True
     for way in (-1.0, 1.0):
-        share, error = surface(top + way * t[:, None] * np.eye(2)[axis]).T
+        remaining, error = surface(top + way * t[:, None] * np.eye(2)[axis]).T
+        share = remaining / value
         end = int(np.argmax(np.r_[~(share > HALF), True]))
         if end == 0 or end >= len(t) or not np.isfinite(share[end]):
             # half height is not reached before the seen face ends

@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from scanstrain.cells import Cells, make_cells, median_spacing
+from scanstrain.cells import BLOCK_WIDTH, Cells, make_cells, median_spacing
 from scanstrain.errors import OptionError, explain
 from scanstrain.structures.wall import UP, Wall, axes_of
 from scanstrain.structures.wall_plane import STEEP, agreeing, best_plane, find_plane, lean_error
@@ -95,8 +95,10 @@ def fit_wall(points: FloatArray, *, given: ArrayLike | None = None, free_side: A
 def _main_face(centre: FloatArray, normal: FloatArray, tolerance: float) -> tuple[FloatArray, FloatArray]:
     """Place and normal of the face that is larger than all others by far."""
     found = find_plane(centre, normal, tolerance)
-    share = 0.0 if found is None else float(found[2].mean())
-    if found is None or found[2].sum() < FEWEST or share < MAIN:
+    share = float(found[2].mean()) if found is not None else 0.0
+    if found is None or found[2].sum() < FEWEST:
+        raise _no_wall(f"less than {FEWEST} patches of {CELL * BLOCK_WIDTH:.0f} point spacings on one upright plane")
+    if share < MAIN:
         raise _no_wall(f"a plane that {100 * share:.0f} % of its upright surface lies on")
     place, across, agree = found
     second = find_plane(centre[~agree], normal[~agree], tolerance)

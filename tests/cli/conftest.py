@@ -58,6 +58,7 @@ def fake(monkeypatch):
     pipeline.compare_files = compare_files
     monkeypatch.setitem(sys.modules, "scanstrain.pipeline", pipeline)
     monkeypatch.setattr("scanstrain.io.write_result_cloud", MADE["fake_write"])
+    monkeypatch.setattr("scanstrain.outputs.report.write.report_page", MADE["fake_page"])
     return made
 
 

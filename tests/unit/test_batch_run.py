@@ -42,7 +42,7 @@ def batch(tmp_path):
 @pytest.fixture
 def calls(monkeypatch):
     """Replace the pipeline and the writer; return what they were called with. Scans named in `broken` fail."""
-    made = types.SimpleNamespace(compared=[], written=[], broken={})
+    made = types.SimpleNamespace(compared=[], written=[], broken={}, indexed=[])
 
     def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None):
         made.compared.append((reference.stem, current.stem, config, assume_same_crs))
@@ -63,6 +63,7 @@ def calls(monkeypatch):
     pipeline.compare_files = compare_files
     monkeypatch.setitem(sys.modules, "scanstrain.pipeline", pipeline)
     monkeypatch.setattr("scanstrain.outputs.write_result", write_result)
+    monkeypatch.setattr("scanstrain.outputs.report.write_index", lambda *about: made.indexed.append(about))
     return made
 
 
@@ -92,6 +93,7 @@ def test_a_comparison_that_fails_does_not_stop_the_others(batch, calls):
     assert "InputFileError" in first.details
     assert second.done
     assert seen == [first, second]
+    assert calls.indexed == [([first, second], first.folder.parent)]
     assert not first.folder.exists()
 
 

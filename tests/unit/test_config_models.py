@@ -20,11 +20,12 @@ from scanstrain.config import (
     config_from_options,
     option_names,
 )
+from scanstrain.config.assessment import BudgetOptions, SeriesOptions
 from scanstrain.config.batch_file import BatchOutputOptions
 from scanstrain.config.faults import find_faults
 from scanstrain.errors import OptionError
 
-STAGES = (RegistrationOptions, NeighbourhoodOptions, StrainOptions, OutputOptions)
+STAGES = (RegistrationOptions, NeighbourhoodOptions, StrainOptions, BudgetOptions, OutputOptions, SeriesOptions)
 MODELS = (*STAGES, CompareConfig, BatchConfig, BatchOutputOptions, EpochEntry, ComparisonEntry)
 
 
@@ -47,7 +48,7 @@ def test_every_option_of_a_stage_gives_its_unit_and_the_reason_for_its_default(m
         parts = [part for part in schema.get("anyOf", [schema]) if part.get("items") != {"type": "string"}]
         kinds = {part.get("type") for part in parts}
         if kinds & {"number", "integer", "array"}:
-            assert re.search(r"\[(m|1|m, rad, 1 or 1/m|x, y, z\] .*\[m)\]", field.description), name
+            assert re.search(r"\[(m|1|K|1/K|m, rad, 1 or 1/m|x, y, z\] .*\[m)\]", field.description), name
 
 
 @pytest.mark.parametrize("model", MODELS, ids=lambda model: model.__name__)

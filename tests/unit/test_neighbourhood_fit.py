@@ -122,7 +122,7 @@ class Patch:
         fit_gauges(
             self.centre, frame, np.zeros((g, 3)), RADIUS, 0.1, weak_prior, np.full(12, float(required)),
             np.full(12, float(nuisance)), hold, min_cells, 5000, self.textured, key, begin, self.table()[order],
-            np.full(g, self.gain), held, values, covariance, data_sd, info,
+            np.full(g, self.gain), held, values, covariance, data_sd, info, np.zeros((0, 5)), np.zeros(g + 1, np.int64),
         )  # fmt: skip
         return {"values": values, "held": held, "covariance": covariance, "data_sd": data_sd, "info": info}
 

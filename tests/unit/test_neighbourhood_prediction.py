@@ -102,7 +102,7 @@ def kriged():
     table, step = Covariance("matern52", LENGTH, np.ones(1), np.ones(1)).table(0.15)
     weights, L = np.empty(64), np.empty((64, 64))
     probe = 0.01
-    offset, variance, _ = krige(
+    offset, variance, _, _ = krige(
         xy[:, 0].copy(), xy[:, 1].copy(), values, share, 40, table, step, NOISE, SILL, probe, weights, L
     )
 

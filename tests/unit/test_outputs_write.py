@@ -25,6 +25,7 @@ def written(monkeypatch):
         return MADE["fake_write"](source, target, values, colour=colour, no_data=no_data)
 
     monkeypatch.setattr(scanstrain.io, "write_result_cloud", write, raising=False)
+    monkeypatch.setattr("scanstrain.outputs.report.write.report_page", MADE["fake_page"])
     return calls
 
 
@@ -36,6 +37,7 @@ def test_strain_cloud_gets_every_attribute_and_the_source(written, tmp_path):
     assert list(values) == list(result.points)
     assert [path.name for path in paths] == [
         "strain.laz", "strain_tilt.laz", "strain_tilt.png", "gauges.csv", "registered.json", "summary.json",
+        "report.html",
     ]  # fmt: skip
     assert json.loads((tmp_path / "out" / "summary.json").read_text())["no_data"]["value"] == -9999.0
 

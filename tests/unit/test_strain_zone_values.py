@@ -54,7 +54,7 @@ def test_the_bias_of_lengths_and_principal_values_at_rest_is_the_one_stated():
 
 
 def grid(n, spacing, rng, sd, truth=0.0, length=0.4):
-    """Gauges on a wall whose normal displacement is a mean over a patch of one gauge length, as overlapping ones are."""
+    """Gauges on a wall whose normal displacements are means over overlapping patches of one gauge length."""
     from scipy.signal import fftconvolve
 
     reach = round(length / spacing)  # of the patch, in half spacings

@@ -45,8 +45,9 @@ def _facts(summary: Summary) -> Iterator[tuple[str, str]]:
     turned = sum(part**2 for part in registration["rotation_vector"]) ** 0.5
     moved = sum(part**2 for part in registration["translation"]) ** 0.5
     yield "The current epoch was turned by", amount(turned, BY_NAME["tilt"])
-    yield "and shifted by", f"{amount(moved, _LENGTH)} at x {{:.2f}}, y {{:.2f}}, z {{:.2f}}".format(
-        *registration["pivot"]
+    yield (
+        "and shifted by",
+        f"{amount(moved, _LENGTH)} at x {{:.2f}}, y {{:.2f}}, z {{:.2f}}".format(*registration["pivot"]),
     )
     half = NORMAL_95 * (registration["scale_ppm_sd"] or 0.0)
     known = registration["scale_ppm"] is not None and registration["scale_ppm_sd"] is not None

@@ -73,9 +73,11 @@ def _answer(summary: Summary, places: Places) -> tuple[str, str]:
     if not gauges["fine"]:
         return "Nothing can be said: no gauge could be evaluated.", "unknown"
     if places.regions:
-        many = "one region" if len(places.regions) == 1 else f"{number(len(places.regions), 0)} regions"
-        size = number(places.area, 2 if places.area < 10 else 1)
-        return f"Changed: {many}, {size} m² together. In the clearest one {places.largest} (95 %).", "changed"
+        size = f"{number(places.area, 2 if places.area < 10 else 1)} m²"
+        if len(places.regions) == 1:
+            return f"Changed: one region of {size}. There {places.largest} (95 %).", "changed"
+        many = f"{number(len(places.regions), 0)} regions, {size} together"
+        return f"Changed: {many}. In the clearest one {places.largest} (95 %).", "changed"
     limits, hidden = _limits(summary)
     if not limits:
         return "Nothing can be said: no component of movement is observable.", "unknown"

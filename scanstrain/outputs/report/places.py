@@ -12,15 +12,14 @@ from numpy.typing import NDArray
 
 from scanstrain.attributes import BY_NAME
 from scanstrain.outputs.figures import Layout
-from scanstrain.outputs.report.tables import MISSING, Cell, Table, measured, neat, plain_number, table
-from scanstrain.outputs.words import STANDARD_ERROR, TITLES, interval, number
+from scanstrain.outputs.regions import MAIN, SOUGHT, changed_of
+from scanstrain.outputs.report.tables import MISSING, Cell, Row, Table, measured, neat, plain_number, table
+from scanstrain.outputs.words import TITLES, interval, number
 from scanstrain.result import Result
-from scanstrain.strain.regions import NONE, Region, find_regions
+from scanstrain.strain.regions import NONE, Region
 
-MAIN = "disp_n"
-"""Quantity that names the change of a region, if the region shows it."""
-SOUGHT = (MAIN, *(name for name in STANDARD_ERROR if name != MAIN))
-"""Quantities with a standard error at every gauge, in the order in which a region is described."""
+LISTED = ("tilt", "strain_1", "strain_2")
+"""Quantities in the full table besides the main one."""
 FIRST = 5
 """Regions on the first screen."""
 
@@ -53,22 +52,17 @@ class Places:
 
 def places_of(result: Result, layout: Layout) -> Places:
     """Group what changed and put it into words."""
-    strain = result.strain
-    values, errors = (
-        np.stack([np.asarray(strain.values[name], np.float64) for name in names], axis=1)
-        for names in (SOUGHT, [STANDARD_ERROR[name] for name in SOUGHT])
-    )
-    discovery = np.asarray(strain.values["discovery"]) == 1
-    regions, isolated = find_regions(strain.position, discovery, values, errors, spacing=strain.gauge_spacing)
-    area = sum(region.area for region in regions)
+    changed = changed_of(result)
+    regions, values, errors = changed.regions, changed.values, changed.errors
+    isolated, area = len(changed.isolated), sum(region.area for region in regions)
     if not regions:
-        return Places(regions, len(isolated), area, "", None, None)
+        return Places(regions, isolated, area, "", None, None)
     column, row = _leading(regions[0], values, errors)
     name = TITLES[SOUGHT[column]][0].lower()
     value = neat(interval(values[row, column], errors[row, column], BY_NAME[SOUGHT[column]]))
     largest = f"{name} reaches {value} at {where(result, layout, row)}"
     short = _short(result, layout, regions, values, errors)
-    return Places(regions, len(isolated), area, largest, short, _full(result, layout, regions, values, errors))
+    return Places(regions, isolated, area, largest, short, _full(result, layout, regions, values, errors))
 
 
 def where(result: Result, layout: Layout, gauge: int) -> str:
@@ -77,9 +71,11 @@ def where(result: Result, layout: Layout, gauge: int) -> str:
     chainage, clock = (float(values[name][gauge]) if name in values else math.nan for name in ("chainage", "clock"))
     if math.isfinite(chainage) and math.isfinite(clock):
         return neat(f"chainage {chainage:.2f} m, {hour(clock)} h")
-    if layout.vertical == "height [m]" and bool(layout.shown[gauge]):
-        return neat(f"{layout.along[gauge]:.2f} m along, height {layout.across[gauge]:.2f} m")
-    return neat("x {:.2f}, y {:.2f}, z {:.2f}".format(*result.gauge_positions[gauge]))
+    shown = bool(layout.shown[gauge])
+    if layout.vertical == "height [m]" and shown:
+        return neat(f"{layout.along[gauge]:.2f} m along the wall, height {layout.across[gauge]:.2f} m")
+    place = neat("x {:.2f}, y {:.2f}, z {:.2f}".format(*result.gauge_positions[gauge]))
+    return place if shown else f"{place}, not on the map"
 
 
 def hour(clock: float) -> str:
@@ -112,54 +108,58 @@ def _short(
     result: Result, layout: Layout, regions: tuple[Region, ...], values: NDArray[np.float64],
     errors: NDArray[np.float64],
 ) -> Table:  # fmt: skip
-    rows = []
+    rows: list[Row] = []
     for rank, region in enumerate(regions[:FIRST], 1):
         column, row = _leading(region, values, errors)
         name = SOUGHT[column]
-        said = measured(float(values[row, column]), float(errors[row, column]), name)
+        said = _cell(values, errors, column, row)
+        other = region.lowest[0] if values[row, 0] > 0 else region.highest[0]
         # the quantity is named only where it is not the one that the column is about
         text = said.text if name == MAIN else f"{said.text} {TITLES[name][0].lower()}"
+        if name == MAIN and other != NONE:
+            text = f"{text}\n{_cell(values, errors, 0, int(other)).text}"
         rows.append([Cell(str(rank), rank), where(result, layout, row), _area(region.area), Cell(text, said.sort)])
     more = len(regions) - len(rows)
     note = f"{number(more, 0)} more below." if more else ""
     heads = ("No.", "Place of the largest change", "Size", "Normal displacement, 95 %")
-    return table("Regions that changed, the clearest first", heads, rows, note=note)
+    return table("Regions that changed, the clearest first", heads, rows, note=note, kind="brief")
 
 
 def _full(
     result: Result, layout: Layout, regions: tuple[Region, ...], values: NDArray[np.float64],
     errors: NDArray[np.float64],
 ) -> Table:  # fmt: skip
-    rows = []
+    rows: list[Row] = []
     for rank, region in enumerate(regions, 1):
         _, row = _leading(region, values, errors)
-        place = " ".join(f"{part:.2f}" for part in result.gauge_positions[row])
-        extent = float(np.ptp(result.strain.position[region.gauges], axis=0).max())
+        place = where(result, layout, row)
+        in_file = neat("x {:.2f}, y {:.2f}, z {:.2f}".format(*result.gauge_positions[row]))
+        extent = float(np.ptp(result.strain.position[region.gauges], axis=0).max()) + result.strain.gauge_spacing
         rows.append([
-            Cell(str(rank), rank), where(result, layout, row), neat(place), _area(region.area),
-            plain_number(extent + result.strain.gauge_spacing, 1, "m"), plain_number(len(region.gauges)),
+            Cell(str(rank), rank), place if place.startswith(in_file) else f"{place}\n{in_file}", _area(region.area),
+            plain_number(extent, 1, "m"),
             *_reached(region, values, errors),
         ])  # fmt: skip
-    names = [TITLES[name][0] for name in SOUGHT[1:] if name != "spin"]
-    heads = ("No.", "Place of the largest change", "x y z [m]", "Size", "Longest side", "Gauges",
-             "Highest normal displacement", "Lowest normal displacement", *names)  # fmt: skip
+    names = [TITLES[name][0] for name in LISTED]
+    heads = ("No.", "Place of the largest change", "Size", "Longest side", "Highest normal displacement",
+             "Lowest normal displacement", *names)  # fmt: skip
     note = (
         "A region is three or more gauges side by side that changed beyond the false-discovery control, in any "
         f"component. {MISSING}: within the 95 % interval of that quantity, or not observable. The largest of many "
         "values is on average somewhat too large."
     )
     return table("All regions that changed: what each quantity reaches there, with 95 % intervals", heads, rows,
-                 note=note)  # fmt: skip
+                 note=note, kind="places")  # fmt: skip
 
 
 def _reached(region: Region, values: NDArray[np.float64], errors: NDArray[np.float64]) -> Iterator[Cell]:
     for row in (region.highest[0], region.lowest[0]):
         yield _cell(values, errors, 0, int(row))
-    for column, name in enumerate(SOUGHT):
-        if name in (MAIN, "spin"):
-            continue
+    for name in LISTED:
+        column = SOUGHT.index(name)
         ends = [int(row) for row in (region.highest[column], region.lowest[column]) if row != NONE]
-        yield _cell(values, errors, column, max(ends, key=lambda row: abs(values[row, column]), default=NONE))  # noqa: B023
+        sizes = [abs(float(values[row, column])) for row in ends]
+        yield _cell(values, errors, column, ends[int(np.argmax(sizes))] if ends else NONE)
 
 
 def _cell(values: NDArray[np.float64], errors: NDArray[np.float64], column: int, row: int) -> Cell:

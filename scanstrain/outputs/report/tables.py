@@ -13,7 +13,11 @@ from scanstrain.outputs.words import amount, interval, number
 
 MISSING = "–"
 """Stands where there is no number."""
+NARROW, FIXED = "\u202f", "\u00a0"
+"""Spaces that no line is broken at: between thousands, and between a number and its unit."""
 _HYPHEN = re.compile(r"(?<![\w.\-])-(?=[\d.])")
+_THOUSANDS = re.compile(r"(?<=\d)\s(?=\d{3}(?!\d))")
+_TOGETHER = re.compile(r"(?<=\d) (?=(?:±|%|mm|m²|m|mrad|rad|µε|1/km|ppm|h)(?:[\s.,;)]|$))|(?<=±) (?=\d)")
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,31 +55,42 @@ class Table:
     rows : tuple of tuple of Cell
     note : str
         What belongs under it.
+    kind : {"", "brief", "long"}
+        How it is set: "long" breaks long words.
     """
 
     caption: str
     heads: tuple[str, ...]
     rows: tuple[tuple[Cell, ...], ...]
     note: str = ""
+    kind: str = ""
 
     def right(self, column: int) -> bool:
         """Whether a column holds numbers."""
         return bool(self.rows) and all(row[column].right for row in self.rows)
 
 
-def table(caption: str, heads: Sequence[str], rows: Sequence[Sequence[Cell | str]], *, note: str = "") -> Table:
+Row = list[Cell | str]
+"""Cells of a row; plain strings become cells."""
+
+
+def table(
+    caption: str, heads: Sequence[str], rows: Sequence[Sequence[Cell | str]], *, note: str = "", kind: str = ""
+) -> Table:
     """Make a table; plain strings become cells."""
     cells = tuple(tuple(each if isinstance(each, Cell) else Cell(each) for each in row) for row in rows)
-    return Table(caption, tuple(heads), cells, note)
+    return Table(caption, tuple(heads), cells, note, kind)
 
 
 def neat(text: str) -> str:
-    """Set minus signs before numbers.
+    """Set minus signs before numbers, and spaces within numbers that no line is broken at.
 
     >>> neat("from -3.5 to -2; false-discovery")
     'from −3.5 to −2; false-discovery'
+    >>> neat("-1 857 ± 12 µε at x 5").replace(FIXED, "~").replace(NARROW, "'")
+    "−1'857~±~12~µε at x 5"
     """
-    return _HYPHEN.sub("−", text)
+    return _TOGETHER.sub(FIXED, _THOUSANDS.sub(NARROW, _HYPHEN.sub("−", text)))
 
 
 def measured(value: float | None, sd: float | None, name: str) -> Cell:
