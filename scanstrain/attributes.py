@@ -18,8 +18,9 @@ Kind = Literal["signed", "magnitude", "error", "probability", "code", "place"]
 class Attribute:
     """One written quantity.
 
-    `kind` says how it is coloured: signed about zero, magnitude from zero, standard error, probability, code, or place on the object.
-    `person` is the unit for text that a person reads and `factor` what the stored value is multiplied by for it.
+    `kind` says how it is coloured: signed about zero, magnitude from zero, standard error, probability, code, or place
+    on the object. `person` is the unit for text that a person reads and `factor` what the stored value is multiplied by
+    for it.
     """
 
     name: str

@@ -194,8 +194,8 @@ class TunnelOptions(Options):
     )
     section_thickness: Positive | Auto = Field(
         default="auto",
-        description="Length of tunnel that goes into one section [m]. Default auto: 0.01 m, which is too thin to blur a "
-        "step between rings, or more where points are sparse.",
+        description="Length of tunnel that goes into one section [m]. Default auto: 0.01 m, which is too thin to blur "
+        "a step between rings, or more where points are sparse.",
     )
     chords: Chords = Field(
         default=(),
@@ -210,8 +210,9 @@ class WallOptions(Options):
     plane: Places | None = Field(
         default=None,
         examples=[[[0.0, 0.0, 0.0], [10.0, 0.0, 0.0]]],
-        description="Two points [x, y, z] at the foot in file coordinates [m], left to right for somebody who faces the "
-        "wall, for a vertical face, or a third one on the face. No default: the main face is found on the reference scan.",
+        description="Two points [x, y, z] at the foot in file coordinates [m], left to right for somebody who faces "
+        "the wall, for a vertical face, or a third one on the face. No default: the main face is found on the "
+        "reference scan.",
     )
     panel: Annotated[tuple[Positive, Positive], Strict(False)] | None = Field(
         default=None,

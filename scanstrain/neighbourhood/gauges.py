@@ -92,10 +92,8 @@ def free_side_signs(
     warnings : tuple of str
     """
     middle = (places.min(axis=0) + places.max(axis=0)) / 2
-    if free_side is not None:
-        look = free_side - places
-    else:
-        look = (middle if axis is None else axis(places)[0]) - places
+    target = free_side if free_side is not None else middle if axis is None else axis(places)[0]
+    look = target - places
     signs = np.where((normals * look).sum(axis=1) < 0, -1.0, 1.0)
     if free_side is not None or axis is not None:
         return signs, ()

@@ -42,7 +42,9 @@ def shared_middle(
     rows, w, unit : ndarray of shape (n, m), (m,), (m,)
         Design, weights and noise variance of a single point at each row.
     place : ndarray of shape (m, 2)
-        Square of every row, `across` times `across` of them.
+        Square of every row.
+    across : int
+        Squares along one side of the patch.
     width, lengths : float, ndarray of shape (c,)
         Of a square, and of the correlations [m].
     shares : ndarray of shape (c,)
@@ -111,9 +113,12 @@ def correlated_covariance(
 
     Parameters
     ----------
-    origin, ..., table, gains, held : as of `fit.fit_gauges`, after the last fit
+    origin, frame, shape, radius, sheet_gate, weak, required, nuisance, capacity, textured, key, start, table : various
+        As of `fit.fit_gauges`, after the last fit.
     unit : ndarray of shape (c, 2)
         Noise variance of a single point, height and intensity, at every row of the table.
+    gains, held : ndarray
+        As of `fit.fit_gauges`.
     scales : ndarray of shape (g, 2)
         Variance factors of the fit; NaN where there is none.
     own : ndarray of shape (2,)
@@ -122,7 +127,8 @@ def correlated_covariance(
         Correlation lengths [m], and variance of each component over `unit` for both kinds of rows.
     across : int
         Squares across a gauge.
-    pieces, piece_start : as of `fit.fit_gauges`
+    pieces, piece_start : ndarray
+        As of `fit.fit_gauges`.
     covariance, data_sd : ndarray of shape (g, 12, 12), (g, 12)
         Replaced.
     """

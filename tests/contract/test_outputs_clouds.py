@@ -38,7 +38,8 @@ def result(scan):
     made = MADE["make_result"](current=scan.with_name("wall_1.laz"))
     reference = read_scan(scan, origin=MADE["ORIGIN"])
     points = {name: np.delete(column, WITHHELD) for name, column in made.points.items()}
-    return replace(made, reference=reference, points=points)
+    registration = replace(made.registration, stable=np.delete(made.registration.stable, WITHHELD))
+    return replace(made, reference=reference, points=points, registration=registration)
 
 
 def read(path):

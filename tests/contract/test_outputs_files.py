@@ -50,7 +50,8 @@ def folder(tmp_path_factory):
 
 def test_folder_holds_the_published_files_and_nothing_else(folder):
     assert sorted(path.name for path in folder.iterdir()) == [
-        "gauges.csv", "registered.json", "report.html", "strain.laz", "strain_disp_n.laz", "strain_disp_n.png", "summary.json",
+        "gauges.csv", "registered.json", "report.html",
+        "strain.laz", "strain_disp_n.laz", "strain_disp_n.png", "summary.json",
     ]  # fmt: skip
     assert len(OUTPUTS) == 10
     assert not list(folder.parent.glob(".*"))
@@ -71,7 +72,7 @@ def test_summary_is_strict_json_with_the_published_keys(folder):
         "share_observable",
         "share_discovered",
     }
-    codes = {"discovery", "observed", "status"}
+    codes = {"discovery", "observed", "status", "stable"}
     assert all(numbers <= set(entry) for name, entry in summary["results"].items() if name not in codes)
     for epoch in summary["inputs"].values():
         assert {"file", "sha256", "points", "crs", "date"} <= set(epoch)

@@ -16,7 +16,7 @@ from scanstrain.neighbourhood.correlation import LADDER, PATCH, SQUARES, fit_com
 from scanstrain.neighbourhood.sandwich import shared_middle
 from scanstrain.neighbourhood.squares import REACH, quadratic_forms, spread, taps
 from scanstrain.strain import compute_strain
-from scanstrain.synthetic import Scene, Still, Wall, sample_epoch
+from scanstrain.synthetic import Lining, Ovalisation, Scene, Still, Sum, Wall, sample_epoch
 
 MEASURES = runpy.run_path(str(Path(__file__).parents[1] / "scenes" / "scene_measures.py"))
 GAUGE = 0.3
@@ -98,16 +98,16 @@ def test_effective_number_of_a_mean_is_the_area_over_that_of_the_correlation():
     assert len(x) ** 2 / total == pytest.approx(1 / (np.sqrt(np.pi) * 0.02 - 0.02**2) ** 2, rel=0.02)
 
 
-@pytest.mark.parametrize("seed", range(3))
+@pytest.mark.parametrize("seed", range(2))
 def test_independent_noise_is_called_independent(seed):
-    part = fit_components(*forms(lambda d: 0 * d, 100, seed))
+    part = fit_components(*forms(lambda d: 0 * d, 60, seed))
     assert not part.shared.any()
     assert part.own == pytest.approx(1.0, abs=0.02)
 
 
 @pytest.mark.parametrize("length", [0.03, 0.05, 0.1])
 def test_shared_noise_is_found_though_the_fit_takes_most_of_a_long_one(length):
-    part = fit_components(*forms(gaussian(0.5, length), 100, 11))
+    part = fit_components(*forms(gaussian(0.5, length), 60, 11))
     # What counts for a mean: variance times area of the correlation.
     area = (part.shared * LENGTHS**2).sum() / (0.5 * length**2)
     assert area == pytest.approx(1.0, abs=0.2)
@@ -116,7 +116,7 @@ def test_shared_noise_is_found_though_the_fit_takes_most_of_a_long_one(length):
 
 def test_exponential_correlation_is_matched_by_nested_ones():
     """The variance of a mean over a gauge, against the sum over all pairs of the true correlation."""
-    part = fit_components(*forms(lambda d: 0.5 * np.exp(-d / 0.02), 100, 12))
+    part = fit_components(*forms(lambda d: 0.5 * np.exp(-d / 0.02), 60, 12))
     x = np.random.default_rng(2).uniform(-GAUGE / 2, GAUGE / 2, (1500, 2))
     d = cdist(*[x[np.hypot(*x.T) < GAUGE / 2]] * 2)
     found = sum(v * np.exp(-((d / length) ** 2)) for v, length in zip(part.shared, LENGTHS, strict=True))
@@ -124,8 +124,8 @@ def test_exponential_correlation_is_matched_by_nested_ones():
 
 
 def test_a_few_patches_that_deform_do_not_pass_for_noise():
-    clean = fit_components(*forms(gaussian(0.5, 0.05), 60, 13))
-    some = fit_components(*forms(gaussian(0.5, 0.05), 60, 13, bump=20.0, bumped=9))
+    clean = fit_components(*forms(gaussian(0.5, 0.05), 40, 13))
+    some = fit_components(*forms(gaussian(0.5, 0.05), 40, 13, bump=20.0, bumped=6))
     assert (some.shared * LENGTHS**2).sum() == pytest.approx((clean.shared * LENGTHS**2).sum(), rel=0.1)
 
 
@@ -142,7 +142,7 @@ def no_change(scene, **noise):
 
 
 @pytest.mark.parametrize(
-    "scene", [Scene(Wall(2.4, 2.4)), MEASURES["textured"](Wall(2.4, 2.4), Still())], ids=["bare", "textured"]
+    "scene", [Scene(Wall(2.1, 2.1)), MEASURES["textured"](Wall(2.1, 2.1), Still())], ids=["bare", "textured"]
 )
 def test_no_change_under_shared_noise_is_seldom_called_a_change(scene):
     field, errors = no_change(scene, correlated_share=SHARE, correlation_length=LENGTH)
@@ -150,13 +150,23 @@ def test_no_change_under_shared_noise_is_seldom_called_a_change(scene):
     assert shared.share == pytest.approx(SHARE, abs=0.05)
     assert shared.length == pytest.approx(LENGTH, abs=0.01)
     p = compute_strain(field).values["significance"][errors.inside]
-    # Some 250 overlapping gauges; with the noise taken for independent 50-80 % fall below.
+    # Some 150 overlapping gauges; with the noise taken for independent 50-80 % fall below.
     assert np.mean(p[np.isfinite(p)] < 0.05) < 0.1
     z = np.concatenate([np.divide(*errors.of(name)) for name in ("un", "gn1", "gn2")])
     assert 0.7 < np.mean(z**2) < 1.3
 
 
 def test_independent_noise_changes_no_standard_error():
-    field, _ = no_change(Scene(Wall(2.4, 2.4)))
+    field, _ = no_change(Scene(Wall(1.5, 1.5)))
+    assert field.correlation.height.share == 0.0
+    assert set(field.correlation.factor) == {1.0}
+
+
+@pytest.mark.parametrize("motion", [Still(), Sum((Ovalisation(5e-3),))], ids=["still", "ovalised"])
+def test_slides_that_a_bare_lining_does_not_show_are_not_shared_noise(motion):
+    """Every gauge holds a slide of its own by chance; on a curved surface they differ in height, too."""
+    scene = Scene(Lining(0.9, 0.8), motion)
+    pair = [sample_epoch(scene, deformed=bool(k), spacing=0.012, seed=70 + k) for k in (0, 1)]
+    field = fit_affine(*pair, gauge_length=GAUGE, gauge_spacing=GAUGE / 2)
     assert field.correlation.height.share == 0.0
     assert set(field.correlation.factor) == {1.0}

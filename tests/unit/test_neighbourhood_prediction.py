@@ -8,10 +8,11 @@ import pytest
 
 from scanstrain.cells import make_cells
 from scanstrain.neighbourhood.covariance import FAMILIES, Covariance, fit_correlation, measure_covariance
+from scanstrain.neighbourhood.level import Level, make_surface
 from scanstrain.neighbourhood.predict import krige, lookup
 from scanstrain.neighbourhood.smooth import smooth_surface, support_cells
 from scanstrain.neighbourhood.solve import solve_in_place
-from scanstrain.synthetic import RandomField, Wall, jittered_grid
+from scanstrain.synthetic import RandomField, Scene, Wall, jittered_grid, sample_epoch
 
 LENGTH, SILL, NOISE = 0.03, 4.0, 0.5
 
@@ -175,3 +176,17 @@ def test_even_reflectance_shows_no_structure():
     _, intensity = measure_covariance(cells, smooth, gate=0.01, region_width=0.2)
     assert (intensity.sill == 0).mean() > 0.98
     assert np.sqrt(np.median(intensity.noise)) == pytest.approx(30.0, rel=0.05)
+
+
+@pytest.mark.parametrize("spacing", [0.006, 0.01])
+def test_heights_of_two_epochs_differ_as_much_as_expected(spacing):
+    """What both predictions miss of the same relief drops out: without that a third too much is expected."""
+    wall = Wall(1.2, 1.2)
+    scene = Scene(wall, relief=RandomField((1.2, 1.2), rms=0.001, correlation_length=0.05, seed=3))
+    epochs = [sample_epoch(scene, deformed=False, spacing=spacing, seed=50 + k) for k in (0, 1)]
+    ours, theirs = (make_surface(e.points, None, spacing, 0.075, 0.15) for e in epochs)
+    gauges = smooth_surface(np.zeros((1, 3)), np.array([[0.0, 1.0, 0.0]]), support_cells(ours.cells.position, 0.15))
+    rows = Level(ours, theirs, gauges, 0.15, 0.15).comparison.rows(np.zeros((len(ours.cells), 3)), 0.01)
+    assert rows.valid.mean() > 0.9
+    ratio = np.mean(rows.misfit[rows.valid] ** 2) / np.mean(rows.variance[rows.valid, 2])
+    assert ratio == pytest.approx(1.0, abs=0.13)

@@ -41,7 +41,8 @@ def test_every_attribute_is_there_with_one_value_a_gauge(rng):
     for a in ATTRIBUTES:
         assert result.values[a.name].shape == (4,), a.name
         assert result.values[a.name].dtype == (a.numpy_dtype if a.kind == "code" else np.float64), a.name
-        assert np.isfinite(result.values[a.name]).all(), a.name
+        # places on a structure come from elsewhere
+        assert np.isfinite(result.values[a.name]).all() == (a.kind != "place"), a.name
     assert set(result.detection_limit) == {"disp_n", "tilt", "spin", "strain", "curvature"}
 
 
