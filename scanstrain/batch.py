@@ -111,6 +111,7 @@ def compare_to_folder(
         colour_limits=options.colour_limits,
         no_data=options.no_data_number,
         only_significant=options.only_significant,
+        report=options.report,
     )
     summary: dict[str, Any] = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
     return summary

@@ -53,6 +53,12 @@ class OutputOptions(Options):
         "because the eye also needs the quiet area.",
     )
 
+    report: bool = Field(
+        default=True,
+        description="Write report.html. Default true: it is what most people read; it takes some ten seconds and a few "
+        "megabytes a comparison.",
+    )
+
     @field_validator("colour_by")
     @classmethod
     def _known_attribute(cls, value: str) -> str:

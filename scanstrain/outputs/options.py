@@ -22,9 +22,12 @@ class OutputOptions:
         Finite value written for no-data, for readers that cannot take NaN.
     only_significant : bool
         Grey out places without a change beyond the false-discovery control.
+    report : bool
+        Write `report.html`.
     """
 
     colour_by: str = "disp_n"
     colour_limits: Limits | None = None
     no_data: float | None = None
     only_significant: bool = False
+    report: bool = True

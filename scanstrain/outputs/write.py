@@ -46,6 +46,7 @@ def write_result(
     colour_limits: Limits | None = None,
     no_data: float | None = None,
     only_significant: bool = False,
+    report: bool = True,
 ) -> list[Path]:
     """Write a result into a folder.
 
@@ -64,6 +65,8 @@ def write_result(
         Finite value for no-data in the clouds, NaN by default.
     only_significant : bool
         Grey out places without a change beyond the false-discovery control.
+    report : bool
+        Write `report.html`.
 
     Returns
     -------
@@ -78,7 +81,7 @@ def write_result(
         The folder is a file, holds an input in the place of an output, cannot be written to, or the disk is full.
         What stood there before stands there still.
     """
-    options = OutputOptions(colour_by, colour_limits, no_data, only_significant)
+    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report)
     # limits that do not fit are refused before anything is written
     choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits)
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]

@@ -80,7 +80,7 @@ def test_every_comparison_runs_with_the_options_of_the_file(batch, calls, tmp_pa
     assert config.strain.structure == "wall"
     assert calls.written[0] == (
         "b",
-        {"colour_by": "disp_n", "colour_limits": None, "no_data": -9999.0, "only_significant": False},
+        {"colour_by": "disp_n", "colour_limits": None, "no_data": -9999.0, "only_significant": False, "report": True},
     )
 
 

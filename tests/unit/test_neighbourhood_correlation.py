@@ -142,7 +142,7 @@ def no_change(scene, **noise):
 
 
 @pytest.mark.parametrize(
-    "scene", [Scene(Wall(2.1, 2.1)), MEASURES["textured"](Wall(2.1, 2.1), Still())], ids=["bare", "textured"]
+    "scene", [Scene(Wall(2.4, 2.4)), MEASURES["textured"](Wall(2.4, 2.4), Still())], ids=["bare", "textured"]
 )
 def test_no_change_under_shared_noise_is_seldom_called_a_change(scene):
     field, errors = no_change(scene, correlated_share=SHARE, correlation_length=LENGTH)
@@ -150,7 +150,7 @@ def test_no_change_under_shared_noise_is_seldom_called_a_change(scene):
     assert shared.share == pytest.approx(SHARE, abs=0.05)
     assert shared.length == pytest.approx(LENGTH, abs=0.01)
     p = compute_strain(field).values["significance"][errors.inside]
-    # Some 150 overlapping gauges; with the noise taken for independent 50-80 % fall below.
+    # Some 250 overlapping gauges; with the noise taken for independent 50-80 % fall below.
     assert np.mean(p[np.isfinite(p)] < 0.05) < 0.1
     z = np.concatenate([np.divide(*errors.of(name)) for name in ("un", "gn1", "gn2")])
     assert 0.7 < np.mean(z**2) < 1.3

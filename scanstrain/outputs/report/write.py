@@ -35,7 +35,7 @@ DIRECTIONS = ("displacement_arrows", "tilt_arrows", "strain_crosses")
 """Figures by the part of the page to which they belong; the other ones are maps of quantities."""
 
 
-def write_report(result: Result, folder: Path, options: OutputOptions) -> Path:
+def write_report(result: Result, folder: Path, options: OutputOptions) -> Path | None:
     """Write `report.html`, which opens anywhere and loads nothing.
 
     Parameters
@@ -49,8 +49,11 @@ def write_report(result: Result, folder: Path, options: OutputOptions) -> Path:
 
     Returns
     -------
-    Path
+    Path or None
+        None where the options ask for no report.
     """
+    if not options.report:
+        return None
     target = folder / NAME
     target.write_text(report_page(result, options), encoding="utf-8")
     return target
