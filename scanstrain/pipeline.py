@@ -22,6 +22,8 @@ from scanstrain.result import Result
 from scanstrain.shape import Shape, places_on, sections_of, shape_of, wall_movement
 
 if TYPE_CHECKING:  # the stages compile when they are loaded
+    from scanstrain.neighbourhood.joint_jumps import JointJumps
+    from scanstrain.neighbourhood.joint_lines import Joint
     from scanstrain.neighbourhood.result import AffineField
     from scanstrain.registration.result import Registration
     from scanstrain.strain.calibration import Calibration
@@ -123,6 +125,7 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         moved = current.moved(registration.T_ref_cur)
     with clock.stage("neighbourhood", 0.3):
         affine = _fit(reference, moved, shape, config, clock)
+        joints = _joints(reference, moved, affine, config)
     with clock.stage("strain", 0.8):
         affine, calibration, doubts = calibrate(affine, registration, reference.points)
         strain = _strain(affine, registration, calibration, shape, config)
@@ -163,6 +166,7 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         axis=shape.axis,
         sections=sections,
         wall=wall,
+        joints=joints,
     )
 
 
@@ -183,7 +187,34 @@ def _fit(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, cl
         required_strain_sd=_number(options.required_strain_sd),
         free_side=None if free_side is None else np.array(free_side) - reference.origin,
         axis=shape.guide(),
+        joints=_joint_lines(reference, config),
         progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
+    )
+
+
+def _joint_lines(reference: Epoch, config: CompareConfig) -> tuple[Joint, ...]:
+    from scanstrain.neighbourhood.joint_lines import Joint
+
+    origin = reference.origin.tolist()
+    return tuple(Joint(each.name, np.array(each.local_line(origin)), each.width) for each in config.joint)
+
+
+def _joints(reference: Epoch, moved: Epoch, affine: AffineField, config: CompareConfig) -> tuple[JointJumps, ...]:
+    """Measure what the joints did that the user named."""
+    if not config.joint:
+        return ()
+    from scanstrain.neighbourhood.joints import measure_joints
+
+    options = config.neighbourhood
+    return measure_joints(
+        reference,
+        moved,
+        affine,
+        _joint_lines(reference, config),
+        use_intensity=options.use_intensity,
+        min_points=options.min_points,
+        required_displacement_sd=_number(options.required_displacement_sd),
+        required_strain_sd=_number(options.required_strain_sd),
     )
 
 

@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.epoch import Epoch
+from scanstrain.neighbourhood.joint_jumps import JointJumps
 from scanstrain.neighbourhood.result import AffineField
 from scanstrain.registration.result import Registration
 from scanstrain.registration.seams import Seam
@@ -63,6 +64,8 @@ class Result:
         Square to that axis.
     wall : WallResult or None
         Movement of the face of a wall and of its parts.
+    joints : tuple of JointJumps
+        What the joints did that the user named.
     """
 
     reference: Epoch
@@ -81,6 +84,7 @@ class Result:
     axis: Axis | None = None
     sections: tuple[Section, ...] = ()
     wall: WallResult | None = None
+    joints: tuple[JointJumps, ...] = ()
 
     @property
     def gauge_positions(self) -> FloatArray:

@@ -130,6 +130,7 @@ class BatchConfig(CompareConfig):
             budget=self.budget,
             output=output,
             zone=self.zone,
+            joint=self.joint,
             trigger=self.trigger,
         )
 

@@ -11,6 +11,7 @@ from pydantic import Field, Strict, ValidationInfo, field_validator, model_valid
 from scanstrain.config.assessment import BudgetOptions, faults_of_triggers
 from scanstrain.config.base import Auto, FilePath, Options, Point, Positive
 from scanstrain.config.faults import contradiction, refuse, refuse_all
+from scanstrain.config.joint import JointEntry, repeated_joints
 from scanstrain.config.output import OutputOptions
 from scanstrain.config.trigger import TriggerEntry
 from scanstrain.config.zone import ZoneEntry, repeated_names
@@ -240,6 +241,9 @@ class CompareConfig(Options):
     zone: Annotated[tuple[ZoneEntry, ...], Strict(False)] = Field(
         default=(), description="Named parts of the object, for stable ground and for results by zone."
     )
+    joint: Annotated[tuple[JointEntry, ...], Strict(False)] = Field(
+        default=(), description="Joints and cracks that gauges do not reach across, each with what it did."
+    )
     trigger: Annotated[tuple[TriggerEntry, ...], Strict(False)] = Field(
         default=(), description="Your own limits on quantities of the results, in the whole object or in a zone."
     )
@@ -262,6 +266,12 @@ class CompareConfig(Options):
     @classmethod
     def _different_names(cls, value: tuple[ZoneEntry, ...]) -> tuple[ZoneEntry, ...]:
         refuse_all(list(repeated_names(value)))
+        return value
+
+    @field_validator("joint")
+    @classmethod
+    def _different_joints(cls, value: tuple[JointEntry, ...]) -> tuple[JointEntry, ...]:
+        refuse_all(list(repeated_joints(value)))
         return value
 
     @model_validator(mode="after")

@@ -3,7 +3,6 @@
 
 from __future__ import annotations
 
-import csv
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 
@@ -11,6 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.neighbourhood.joint_jumps import JUMPS, JointJumps
+from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.section_table import write_rows
+from scanstrain.result import Result
 
 FloatArray = NDArray[np.float64]
 Row = dict[str, float | int | str]
@@ -66,17 +68,11 @@ def joint_rows(joints: Sequence[JointJumps], origin: FloatArray) -> list[Row]:
     return rows
 
 
-def write_joint_table(joints: Sequence[JointJumps], folder: Path, *, origin: FloatArray) -> Path | None:
+def write_joint_table(result: Result, folder: Path, options: OutputOptions) -> Path | None:  # noqa: ARG001
     """Write `joints.csv` in SI units and file coordinates; nothing where there are no joints."""
-    if not joints:
+    if not result.joints:
         return None
-    target = folder / FILE
-    with target.open("w", encoding="utf-8", newline="") as stream:
-        writer = csv.writer(stream, lineterminator="\n")
-        writer.writerow(COLUMNS)
-        writer.writerow(unit for unit, _ in COLUMNS.values())
-        writer.writerows([_cell(row[name]) for name in COLUMNS] for row in joint_rows(joints, origin))
-    return target
+    return write_rows(joint_rows(result.joints, result.reference.origin), COLUMNS, folder / FILE)
 
 
 def _place_row(joint: JointJumps, k: int, origin: FloatArray) -> Row:
@@ -94,9 +90,3 @@ def _jump(values: FloatArray, errors: FloatArray) -> Row:
     for name, value, error in zip(JUMPS, values, errors, strict=True):
         named[name], named[f"{name}_sd"] = float(value), float(error)
     return named
-
-
-def _cell(value: float | int | str) -> str:
-    if isinstance(value, float):
-        return f"{value:.10g}" if np.isfinite(value) else ""
-    return str(value)

@@ -43,7 +43,7 @@ def write_rows(rows: Sequence[Mapping[str, Any]], units: Mapping[str, tuple[str,
     return target
 
 
-def _cell(value: float | str) -> str:
+def _cell(value: float | str | int) -> str:
     if isinstance(value, str):
         return value
     return f"{value:.10g}" if np.isfinite(value) else ""

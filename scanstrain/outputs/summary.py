@@ -17,6 +17,7 @@ from scanstrain.neighbourhood.result import Status
 from scanstrain.outputs.cautions import cautions
 from scanstrain.outputs.even_strain import budget_data
 from scanstrain.outputs.findings import verdict
+from scanstrain.outputs.joint_table import joint_rows
 from scanstrain.outputs.motions import body_numbers, directions, seam_numbers, target_numbers
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.regions import region_data
@@ -70,6 +71,7 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         "triggers": triggers,
         "budget": budget_data(result, values),
         "wall": wall_data(result),
+        "joints": joint_rows(result.joints, result.reference.origin) if result.joints else None,
         "setups": {epoch: [seam_numbers(seam) for seam in seams] for epoch, seams in result.seams.items()},
         "calibration": {
             "factors": result.calibration.factors,

@@ -10,6 +10,7 @@ from pathlib import Path
 from scanstrain.outputs.cloud import write_coloured_cloud, write_strain_cloud
 from scanstrain.outputs.colour import Limits, choose_scale
 from scanstrain.outputs.folder import check_folder, finished_only, is_ours
+from scanstrain.outputs.joint_table import write_joint_table
 from scanstrain.outputs.key import write_colour_key
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.registered import write_registered
@@ -33,6 +34,7 @@ OUTPUTS.add("gauge table", write_gauge_table)
 OUTPUTS.add("section table", write_section_table)
 OUTPUTS.add("wall table", write_wall_table)
 OUTPUTS.add("bulge table", write_bulge_table)
+OUTPUTS.add("joint table", write_joint_table)
 OUTPUTS.add("registered", write_registered)
 OUTPUTS.add("summary", write_summary)
 OUTPUTS.add("report", write_report)

@@ -53,7 +53,7 @@ def test_folder_holds_the_published_files_and_nothing_else(folder):
         "gauges.csv", "registered.json", "report.html",
         "strain.laz", "strain_disp_n.laz", "strain_disp_n.png", "summary.json",
     ]  # fmt: skip
-    assert len(OUTPUTS) == 10
+    assert len(OUTPUTS) == 11
     assert not list(folder.parent.glob(".*"))
 
 

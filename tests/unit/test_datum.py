@@ -104,3 +104,22 @@ def test_a_leaning_part_is_a_body_of_its_own_in_the_summary():
     assert content["registration"]["stable_ground"]["chosen_by"] == "auto"
     assert content["setups"]["reference"] == []
     assert [(seam["first"], seam["second"]) for seam in content["setups"]["current"]] == [(0, 1)]
+
+
+def test_a_named_joint_is_measured_and_not_smeared():
+    """The right half of a bare wall stands 1 mm forward in the second scan: a step, and no tilt beside it."""
+    rng = np.random.default_rng(6)
+    a, b = (wall(rng, 60_000, noise=0.001) for _ in range(2))
+    b[:, 1] += np.where(b[:, 0] > 0, 0.001, 0.0)
+    config = {
+        "neighbourhood": {"gauge_length": 0.25},
+        "strain": {"structure": "wall", "free_side": [0.0, 5.0, 0.0]},
+        "joint": [{"name": "middle", "line": [[0.0, 0.0, -0.6], [0.0, 0.0, 0.6]]}],
+    }
+    epochs = (make_epoch(points, origin=np.zeros(3), label=name) for points, name in ((a, "a"), (b, "b")))
+    content = summary(compare_epochs(*epochs, CompareConfig.model_validate(config)))
+    whole = content["joints"][-1]
+    assert whole["place"] == "whole"
+    assert abs(abs(whole["step"]) - 0.001) < 4 * whole["step_sd"] < 0.0008
+    assert whole["opening"] is None
+    assert content["results"]["tilt"]["p95"] < 0.004

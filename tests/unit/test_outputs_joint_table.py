@@ -2,14 +2,21 @@
 """joints.csv: names, units, places in file coordinates, blanks for what is not known."""
 
 import csv
+from types import SimpleNamespace
 
 import numpy as np
 
 from scanstrain.neighbourhood.joint_jumps import Side, jumps_between
 from scanstrain.neighbourhood.result import Status
 from scanstrain.outputs.joint_table import COLUMNS, joint_rows, write_joint_table
+from scanstrain.outputs.options import OutputOptions
 
 ORIGIN = np.array([1000.0, 2000.0, 50.0])
+
+
+def with_joints(*joints):
+    """As much of a result as the table needs."""
+    return SimpleNamespace(joints=joints, reference=SimpleNamespace(origin=ORIGIN))
 
 
 def a_joint():
@@ -27,7 +34,7 @@ def a_joint():
 
 
 def test_table_of_joints(tmp_path):
-    path = write_joint_table([a_joint()], tmp_path, origin=ORIGIN)
+    path = write_joint_table(with_joints(a_joint()), tmp_path, OutputOptions())
     with path.open(encoding="utf-8", newline="") as stream:
         names, units, *rows = csv.reader(stream)
     assert names == list(COLUMNS)
@@ -53,5 +60,5 @@ def test_rows_say_the_same_as_the_result():
 
 
 def test_no_joints_no_table(tmp_path):
-    assert write_joint_table([], tmp_path, origin=ORIGIN) is None
+    assert write_joint_table(with_joints(), tmp_path, OutputOptions()) is None
     assert list(tmp_path.iterdir()) == []
