@@ -108,7 +108,10 @@ def strain(data: Arrays, **options: Any) -> Data:
         field, calibration, _ = calibrate(field, datum, reference.points)
         options = {"known": {"stable": calibration.steady}, **options}
     result = compute_strain(field, registration=datum, **options)
-    return {**data, "gauges": dict(result.values), "points": blend_to_points(result, reference.points)}
+    points = blend_to_points(result, reference.points)
+    if datum is not None:
+        points["stable"] = datum.stable.astype(np.uint8)
+    return {**data, "gauges": dict(result.values), "points": points}
 
 
 def epoch_from(arrays: Any, label: str, origin: NDArray[np.float64] | None = None) -> Epoch:

@@ -62,10 +62,16 @@ def find_ground(work: Work, options: Options) -> None:
 
 
 def readmit(work: Work) -> bool:
-    """Let stable patches leave and others return, by their residuals now; say whether any did."""
+    """Let stable patches leave and others return, by their residuals now; say whether any did.
+
+    Never so many that hardly any is left: then the choice stays as it was.
+    """
     if work.keep is None or work.ground is None:
         return False
-    before, work.keep = work.keep, agreeing(_patches(work, work.fit), work.ground.scale)[work.patch]
+    agree = agreeing(_patches(work, work.fit), work.ground.scale)
+    if agree.sum() < max(MIN_PATCHES, work.ground.stable.sum() / 2):
+        return False
+    before, work.keep = work.keep, agree[work.patch]
     return not np.array_equal(before, work.keep)
 
 

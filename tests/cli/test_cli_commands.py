@@ -71,7 +71,7 @@ def test_run_compares_everything_and_ends_with_a_table(call, fake, batch_file, t
     assert first.split()[:9] == ["a_to_b", "done", "11", "of", "12", "3", "6.2", "mm", "0.29"]
     assert second.split()[:2] == ["a_to_c", "done"]
     assert written == f"Written to {tmp_path / 'results'}"
-    assert sorted(path.name for path in (tmp_path / "results").iterdir()) == ["a_to_b", "a_to_c"]
+    assert sorted(path.name for path in (tmp_path / "results").iterdir()) == ["a_to_b", "a_to_c", "index.html"]
     assert "  0 %  a_to_b: registration" in said.err
 
 
@@ -100,7 +100,7 @@ def test_run_as_json(call, fake, batch_file):
 
 def test_run_only(call, fake, batch_file, tmp_path):
     assert call("run", batch_file(), "--only", "c").code == 0
-    assert [path.name for path in (tmp_path / "results").iterdir()] == ["a_to_c"]
+    assert sorted(path.name for path in (tmp_path / "results").iterdir()) == ["a_to_c", "index.html"]
 
 
 def test_an_interruption_gives_130_and_leaves_nothing(call, fake, batch_file, tmp_path):

@@ -68,7 +68,7 @@ def test_every_byte_of_the_reference_is_kept(tmp_path, fmt, colour):
     before, after = take_apart(data), written(tmp_path, data, colour=rgb)
     raised = {0: 2, 1: 3, 4: 5, 6: 7, 9: 10}.get(fmt, fmt) if colour else fmt
     assert after["format"] == raised
-    assert after["length"] == RECORD_BYTES[raised] + 33 * 4 + 3 * 1 + 2
+    assert after["length"] == RECORD_BYTES[raised] + 35 * 4 + 4 * 1 + 2
     assert after["scaling"] == before["scaling"]
     assert after["gap"] == b"\xdd\xcc"
     assert after["vlrs"][:2] == before["vlrs"]
@@ -99,7 +99,7 @@ def test_descriptors_byte_for_byte(tmp_path):
     values = results(400)
     after = written(tmp_path, las(fmt=6), values)
     (payload,) = [p for user, number, _, p in after["vlrs"] if (user, number) == ("LASF_Spec", 4)]
-    assert len(payload) == 192 * 37
+    assert len(payload) == 192 * 40
     at = 30
     for number, a in enumerate(ATTRIBUTES):
         stored = values[a.name]

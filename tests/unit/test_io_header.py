@@ -184,5 +184,6 @@ def test_real_files_keep_their_points():
         outcome[path.name] = len(epoch)
     assert outcome == {
         "1_4_w_evlr.las": 1000, "1_4_w_evlr.laz": 1000, "extra.laz": 1065, "extrabytes.las": 1065, "plane.laz": 28185,
-        "simple.copc.laz": 1065, "simple.las": 1065, "simple1_3.las": 999, "unregistered_extra_bytes.las": "4",
+        "simple.copc.laz": 1065, "simple.las": 1065, "simple1_3.las": 999, "street_current.laz": 69792,
+        "street_reference.laz": 69088, "unregistered_extra_bytes.las": "4",
     }  # fmt: skip
