@@ -200,7 +200,7 @@ def pooled(parts: FloatArray, independent: FloatArray, count: int) -> FloatArray
     Examples
     --------
     >>> pooled(np.diag([1.2, 0.8]), np.eye(2), 1000).round(12)
-    array([[1.09726441, 0.        ],
+    array([[1.09726326, 0.        ],
            [0.        , 1.        ]])
     """
     values, vectors = np.linalg.eigh(independent)
