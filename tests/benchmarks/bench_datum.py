@@ -181,16 +181,18 @@ def clutter(seeds, points):
             plain.append(judged(name, register(*epochs(a, b)), None, places))
             hidden = []
             for cloud in (a, b):
-                # 30 % hidden in three bands that differ between the epochs, and 5 % on pipes before the surface
+                # 30 % hidden in three bands that differ between the epochs, and 5 % on two pipes before the surface
                 span, start = np.ptp(cloud[:, 0]), rng.uniform(0, 1, 3)
                 u = (cloud[:, 0] - cloud[:, 0].min()) / span
                 out = np.zeros(len(cloud), bool)
                 for s in start:
                     out |= (u - s) % 1.0 < 0.1
                 kept = cloud[~out]
-                pipe = rng.random(len(kept)) < 0.05
                 n = normals_of(name, kept)
-                kept = kept - np.where(pipe[:, None], n * rng.uniform(0.02, 0.12, (len(kept), 1)), 0.0)
+                across = np.arctan2(kept[:, 2], kept[:, 1]) if name == "lining" else kept[:, 2]
+                v = (across - across.min()) / np.ptp(across)
+                pipe = (np.abs(v - 0.3) < 0.0125) | (np.abs(v - 0.72) < 0.0125)
+                kept = kept - np.where(pipe[:, None], 0.1 * n, 0.0)
                 hidden.append(kept)
             dirty.append(judged(name, register(*epochs(*hidden)), None, places))
         errors, sds = zip(*dirty, strict=True)
