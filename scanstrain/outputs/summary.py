@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 
 from scanstrain.epoch import Epoch
-from scanstrain.neighbourhood.result import Status
+from scanstrain.neighbourhood.result import PARAMETERS, Status
 from scanstrain.outputs.cautions import cautions
 from scanstrain.outputs.even_strain import budget_data
 from scanstrain.outputs.findings import verdict
@@ -73,6 +73,7 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
         "wall": wall_data(result),
         "joints": joint_rows(result.joints, result.reference.origin) if result.joints else None,
         "setups": {epoch: [seam_numbers(seam) for seam in seams] for epoch, seams in result.seams.items()},
+        "shared_noise": _shared_noise(result),
         "calibration": {
             "factors": result.calibration.factors,
             "ground": result.calibration.ground,
@@ -119,6 +120,18 @@ def _ground(registration: Registration) -> dict[str, Any] | None:
     """What the datum stands on; the second best choice with its effect at the worst place [m]."""
     ground = registration.ground
     return None if ground is None else {field.name: getattr(ground, field.name) for field in fields(ground)}
+
+
+def _shared_noise(result: Result) -> dict[str, Any] | None:
+    """Noise that neighbouring points share, and the factors on standard errors that follow from it (medians)."""
+    found = result.field.correlation
+    if found is None:
+        return None
+    kinds = {"height": found.height, "intensity": found.intensity}
+    return {
+        **{kind: noise and {"share": noise.share, "length": noise.length} for kind, noise in kinds.items()},
+        "factors": dict(zip(PARAMETERS, found.factor, strict=True)),
+    }
 
 
 def _section_words(result: Result) -> dict[str, str]:
