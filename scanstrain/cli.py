@@ -147,6 +147,55 @@ def inspect(terminal: Terminal, scans: tuple[Path, ...]) -> int:
 
 
 @cli.command()
+@click.option("--spacing", type=float, default=0.005, show_default=True, help="Between points on the surface [m].")
+@click.option("--noise", type=float, default=0.002, show_default=True, help="Of one point along the normal [m], 1 sd.")
+@click.option("--gauge-length", type=float, default=0.5, show_default=True, help="Diameter of a gauge [m].")
+@click.option("--contrast", type=float, default=0.0, show_default=True, help="Spread of texture over intensity noise.")
+@click.option("--texture-length", type=float, default=0.03, show_default=True, help="Correlation length [m].")
+@click.option("--shared", type=float, default=0.2, show_default=True, help="Share of noise variance that points share.")
+@click.option("--shared-length", type=float, default=0.05, show_default=True, help="Over which they share it [m].")
+@click.option("--datum-sd", type=float, default=0.0, show_default=True, help="Of the registration at the place [m].")
+@click.option("--thickness", type=float, help="Of the lining or wall [m], for bending strain.")
+@json_option
+@loudness
+@click.pass_obj
+def forecast(terminal: Terminal, /, **plan: Any) -> None:
+    """Say, before going to site, the smallest changes that a planned set-up can show."""
+    from scanstrain.forecast import SetUp
+    from scanstrain.forecast import forecast as look_ahead
+    from scanstrain.plan_screens import forecast_data, forecast_screen
+
+    setup = SetUp(**plan)
+    found = look_ahead(setup)
+    terminal.show(forecast_screen(setup, found), forecast_data(setup, found))
+
+
+@cli.command()
+@click.argument("config", type=PATH)
+@click.option("--only", multiple=True, metavar="LABEL", help="Split this epoch; may be repeated. Default: the first.")
+@click.option("--still", nargs=2, metavar="LABEL LABEL", help="Two epochs that are known to show no change.")
+@click.option("--strain", type=float, help="Strain that is put in [1]; by default five standard errors.")
+@click.option("--height", type=float, help="Bulge that is put in [m]; by default five standard errors.")
+@click.option("--seed", type=int, default=0, show_default=True, help="Of the split into halves.")
+@json_option
+@loudness
+@click.pass_obj
+def prove(terminal: Terminal, /, config: Path, **choice: Any) -> None:
+    """Hold the method against the scans of the batch file CONFIG.
+
+    Counts false alarms between two halves of a scan, then puts a known change into one and looks what comes back.
+    """
+    from scanstrain.config import load_config
+    from scanstrain.plan_screens import proof_data, proof_screen
+    from scanstrain.proof import prove_batch
+
+    batch = load_config(config)
+    with terminal.progress() as progress:
+        proofs = prove_batch(batch, progress=progress, **choice)
+    terminal.show("\n\n".join(map(proof_screen, proofs)), [proof_data(each) for each in proofs])
+
+
+@cli.command()
 @click.argument("cloud", type=PATH)
 @click.option("--by", "attribute", required=True, metavar="ATTRIBUTE", help="Attribute that gives the colour.")
 @click.option("--limits", type=float, nargs=2, metavar="LOW HIGH", help="Ends of the scale, in the unit of the file.")

@@ -57,14 +57,14 @@ def _values(results: Mapping[str, Mapping[str, Any]]) -> list[str]:
             "-" if found[key] is None else percent(found[key]) for key in ("share_observable", "share_discovered")
         ]
         rows.append((f"{name} [{attribute.person}]", *numbers, *shares))
-    return _aligned(rows)
+    return aligned(rows)
 
 
 def _cell(value: float | None, attribute: Attribute, decimals: int) -> str:
     return "-" if value is None else number(value * attribute.factor, decimals)
 
 
-def _aligned(rows: Sequence[Sequence[str]]) -> list[str]:
+def aligned(rows: Sequence[Sequence[str]]) -> list[str]:
     """Put the first column to the left and the others to the right."""
     widths = [max(len(row[column]) for row in rows) for column in range(len(rows[0]))]
     return [
@@ -90,7 +90,7 @@ def batch_screen(outcomes: Sequence[Outcome], folder: Path, *, notes: Sequence[s
         state = "done" if outcome.done else "failed"
         rows.append((outcome.name, state, *_findings(outcome.summary), f"{outcome.seconds:.0f} s"))
     written = [f"Written to {folder}"] if any(outcome.done for outcome in outcomes) else []
-    return "\n".join([*_aligned(rows), *_batch_triggers(outcomes), *_paragraphs(notes), *written])
+    return "\n".join([*aligned(rows), *_batch_triggers(outcomes), *_paragraphs(notes), *written])
 
 
 def _batch_triggers(outcomes: Sequence[Outcome]) -> list[str]:

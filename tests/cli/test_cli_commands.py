@@ -218,7 +218,7 @@ def test_config_schema_is_that_of_the_model(call):
     assert json.loads(call("config", "schema").out) == BatchConfig.model_json_schema()
 
 
-@pytest.mark.parametrize("command", ["run", "compare", "inspect", "sample", "colour", "config"])
+@pytest.mark.parametrize("command", ["run", "compare", "inspect", "forecast", "prove", "sample", "colour", "config"])
 def test_every_command_has_help(call, command):
     said = call(command, "--help")
     assert said.code == 0
@@ -229,3 +229,20 @@ def test_the_version_is_that_of_the_package(call):
     from importlib.metadata import version
 
     assert version("scanstrain") in call("--version").out
+
+
+def test_forecast_says_what_a_set_up_can_show_and_what_it_cannot(call):
+    said = call("forecast", "--thickness", "0.3")
+    assert said.code == 0
+    assert "not observable: a bare surface shows nothing in its own plane" in said.out
+    assert "bending strain at the face" in said.out
+    data = json.loads(call("forecast", "--json", "--contrast", "6").out)
+    found = {each["name"]: each for each in data["quantities"]}
+    assert found["strain"]["detection_limit"] == pytest.approx(1.96 * found["strain"]["standard_error"])
+    assert data["set_up"]["contrast"] == 6
+
+
+def test_forecast_refuses_millimetres(call):
+    said = call("forecast", "--spacing", "5", "--gauge-length", "0.5")
+    assert said.code == 2
+    assert "check that both are in metres" in said.err

@@ -20,7 +20,7 @@ LAYERS = (
     ("errors", "attributes", "progress", "workers"),
     ("registry",),
     ("linalg", "epoch"),
-    ("zones", "cells", "series", "limits", "damage", "budget"),
+    ("zones", "cells", "series", "limits", "damage", "budget", "forecast"),
     ("structures",),
     ("registration",),
     ("neighbourhood",),
@@ -30,9 +30,10 @@ LAYERS = (
     ("config", "inspection"),
     ("datum", "parts", "shape"),
     ("pipeline",),
-    ("batch", "plugin"),
+    ("batch", "plugin", "proof"),
     ("evolution",),
     ("screens", "terminal"),
+    ("plan_screens",),
     ("cli",),
     ("__init__", "__main__"),
 )
@@ -44,7 +45,19 @@ STAGES = ("registration", "neighbourhood", "strain")
 RESULTS = {"strain": {"registration.result", "neighbourhood.result"}, "neighbourhood": {"registration.result"}}
 """What a stage may know of the stages before it: the type that they hand on."""
 
-NUMERICS = ("linalg", "epoch", "zones", "cells", "structures", "series", "limits", "damage", "budget", *STAGES)
+NUMERICS = (
+    "linalg",
+    "epoch",
+    "zones",
+    "cells",
+    "structures",
+    "series",
+    "limits",
+    "damage",
+    "budget",
+    "forecast",
+    *STAGES,
+)
 FILES = {"pathlib", "os", "io", "shutil", "tempfile", "json", "csv", "tomllib", "laspy", "lazrs", "pye57", "plyfile"}
 SHOWN = {"click", "rich", "matplotlib", "pydantic", "jinja2", "logging"}
 
