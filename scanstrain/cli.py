@@ -61,26 +61,37 @@ def cli() -> None:
     """
 
 
+FRESH = click.option("--fresh", is_flag=True, help="Forget what is there already, and compute everything.")
+
+
 @cli.command()
 @click.argument("config", type=PATH)
-@click.option("--workers", type=click.IntRange(min=1), default=1, show_default=True, help="Comparisons at a time.")
-@click.option("--only", multiple=True, metavar="LABEL", help="Only comparisons with this epoch; may be repeated.")
+@click.option(
+    "--workers", type=click.IntRange(min=1), help="Comparisons at a time; by default what the machine carries."
+)
+@click.option("--scheduler", metavar="ADDRESS", help="Dask scheduler whose workers do it all, such as tcp://host:8786.")
+@click.option("--only", multiple=True, metavar="LABEL", help="Only what has this epoch or place; may be repeated.")
+@FRESH
 @json_option
 @loudness
 @click.pass_obj
-def run(terminal: Terminal, config: Path, workers: int, only: tuple[str, ...]) -> int:
-    """Run every comparison of the batch file CONFIG."""
-    from scanstrain.batch import outcomes_data, run_batch
+def run(terminal: Terminal, /, config: Path, only: tuple[str, ...], **options: Any) -> int:
+    """Run every comparison of the batch file CONFIG.
+
+    What is done already stays, and a run that was stopped goes on where it was.
+    """
+    from scanstrain.batch import batch_points, outcomes_data, run_batch
     from scanstrain.config import load_config
-    from scanstrain.evolution import evolution_data, follow_epochs
+    from scanstrain.evolution import evolutions_data, follow_batch
     from scanstrain.screens import batch_screen
 
     batch = load_config(config)
-    with terminal.progress() as progress:
-        outcomes = run_batch(batch, workers=workers, only=only, progress=progress, finished=terminal.finished)
-    series = follow_epochs(batch, outcomes, write=not only)
-    data = {**outcomes_data(outcomes), "series": evolution_data(series)}
-    terminal.show(batch_screen(outcomes, batch.output.folder, notes=series.notes), data)
+    with terminal.progress(batch_points(batch, only)) as progress:
+        outcomes = run_batch(batch, only=only, progress=progress, finished=terminal.finished, **options)
+    series = follow_batch(batch, outcomes, write=not only)
+    notes = [note for each in series.values() for note in each.notes]
+    data = {**outcomes_data(outcomes), "series": evolutions_data(series)}
+    terminal.show(batch_screen(outcomes, batch.output.folder, notes=notes), data)
     for outcome in outcomes:
         if not outcome.done:
             terminal.complain(f"{outcome.name}: {outcome.error}", outcome.details)
@@ -99,28 +110,38 @@ def run(terminal: Terminal, config: Path, workers: int, only: tuple[str, ...]) -
 @click.option("--colour-by", metavar="ATTRIBUTE", help="Attribute that colours the points.")
 @click.option("--no-data", type=NumberOrWord(), help="Number for missing values, in place of NaN.")
 @click.option("--assume-same-crs", is_flag=True, help="Compare although the stated coordinate systems differ.")
+@FRESH
 @json_option
 @loudness
 @click.pass_obj
 def compare(
-    terminal: Terminal, /, reference: Path, current: Path, folder: Path, assume_same_crs: bool, **options: Any
+    terminal: Terminal,
+    /,
+    reference: Path,
+    current: Path,
+    folder: Path,
+    assume_same_crs: bool,
+    fresh: bool,
+    **options: Any,
 ) -> None:
     """Compare the scan CURRENT with the earlier scan REFERENCE.
 
     All other options stand in a configuration file: see `scanstrain config new`.
     """
-    from scanstrain.batch import compare_to_folder
+    from scanstrain.comparison import compare_alone
     from scanstrain.config import config_from_options
+    from scanstrain.io.count import expected_points
     from scanstrain.screens import comparison_screen
 
     given = {name: value for name, value in options.items() if value is not None}
     config = config_from_options(given, spelling=as_option)
-    with terminal.progress() as progress:
-        summary = compare_to_folder(
-            reference, current, config, folder, assume_same_crs=assume_same_crs, progress=progress
+    with terminal.progress(expected_points(reference) + expected_points(current)) as progress:
+        done = compare_alone(
+            reference, current, config, folder, assume_same_crs=assume_same_crs, fresh=fresh, progress=progress
         )
+    terminal.compared(done)
     title = f"{reference.name} to {current.name}"
-    terminal.show(comparison_screen(title, folder, summary, verbose=terminal.verbose), summary)
+    terminal.show(comparison_screen(title, folder, done.summary, verbose=terminal.verbose), done.summary)
 
 
 @cli.command()

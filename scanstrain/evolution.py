@@ -5,7 +5,7 @@ from __future__ import annotations
 
 import datetime as dt
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -42,6 +42,24 @@ class Evolution:
     rows: tuple[ChangeRow | RateRow, ...] = ()
     notes: tuple[str, ...] = ()
     file: Path | None = None
+
+
+def follow_batch(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bool = True) -> dict[str, Evolution]:
+    """Follow the epochs of every place; see `follow_epochs`.
+
+    Returns
+    -------
+    dict of str to Evolution
+        By the name of the place, which is empty where the batch has no places.
+    """
+    from scanstrain.config import sites_of
+
+    found = {}
+    for site in sites_of(config):
+        before = f"{site.name}/" if site.name else ""
+        own = [replace(each, name=each.name.removeprefix(before)) for each in outcomes if each.name.startswith(before)]
+        found[site.name] = follow_epochs(site.batch, own, write=write)
+    return found
 
 
 def follow_epochs(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bool = True) -> Evolution:
@@ -98,6 +116,12 @@ def evolution_data(evolution: Evolution) -> dict[str, Any]:
         rows.append({"row": kind, **{name: _iso(value) for name, value in numbers.items()}})
     file = None if evolution.file is None else str(evolution.file)
     return dict(plain({"file": file, "notes": list(evolution.notes), "rows": rows}))
+
+
+def evolutions_data(evolutions: Mapping[str, Evolution]) -> dict[str, Any]:
+    """Return the series of all places in a form that JSON can hold, under their names where there are places."""
+    data = {place: evolution_data(evolution) for place, evolution in evolutions.items()}
+    return data[""] if set(data) == {""} else data
 
 
 def _iso(value: Any) -> Any:

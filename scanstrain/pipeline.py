@@ -3,16 +3,15 @@
 
 from __future__ import annotations
 
-import time
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from scanstrain.clock import Clock, Progress
 from scanstrain.config import CompareConfig, config_from_options
 from scanstrain.datum import check_setups, datum_options
 from scanstrain.epoch import Epoch
@@ -20,6 +19,7 @@ from scanstrain.errors import OptionError, explain
 from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.result import Result
 from scanstrain.shape import Shape, places_on, sections_of, shape_of, wall_movement
+from scanstrain.zones import Unrolled
 
 if TYPE_CHECKING:  # the stages compile when they are loaded
     from scanstrain.neighbourhood.joint_jumps import JointJumps
@@ -30,14 +30,20 @@ if TYPE_CHECKING:  # the stages compile when they are loaded
     from scanstrain.strain.result import StrainField
 
 FloatArray = NDArray[np.float64]
-Progress = Callable[[str, float], None]
 EpochLabel = tuple[str, str | None]
+Keep = Callable[[str, Callable[[], Any]], Any]
+"""Given the name of a stage and what computes it, returns its result: computed, or kept from an earlier run."""
 
 AUTO_SPACINGS = 60.0
 """Gauge length of `gauge_length = "auto"`, in point spacings: some 2 800 points a gauge, which brings the noise of a
 normal displacement down to about a twenty-fifth of that of a point."""
 AUTO_SHARE = 0.25
 """The same never exceeds this share of the object's extent."""
+
+
+def compute_always(_stage: str, compute: Callable[[], Any]) -> Any:
+    """Keep nothing: run the stage."""
+    return compute()
 
 
 def compare(reference: str | Path, current: str | Path, **options: Any) -> Result:
@@ -71,10 +77,12 @@ def compare_files(
     assume_same_crs: bool = False,
     labels: tuple[EpochLabel, EpochLabel] | None = None,
     progress: Progress | None = None,
+    keep: Keep = compute_always,
 ) -> Result:
     """Read two scan files and compare them; arguments as of `compare` and `compare_epochs`.
 
-    `labels` are what the user calls the two epochs, each with its date; by default the files name them.
+    `labels` are what the user calls the two epochs, each with its date; by default the files name them. `keep` may
+    hand back the result of a stage that an earlier run left; by default nothing is kept.
     """
     from scanstrain.io import check_same_frame, read_scan
 
@@ -85,7 +93,7 @@ def compare_files(
         notices = check_same_frame(first, second, assume_same_crs=assume_same_crs)
     if labels:
         first, second = _named(first, *labels[0]), _named(second, *labels[1])
-    return _compare(first, second, config, clock, notices)
+    return _compare(first, second, config, clock, notices, keep)
 
 
 def compare_epochs(
@@ -106,49 +114,30 @@ def compare_epochs(
     -------
     Result
     """
-    return _compare(reference, current.shifted(reference.origin), config, Clock(progress), ())
+    return _compare(reference, current.shifted(reference.origin), config, Clock(progress), (), compute_always)
 
 
-def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...]) -> Result:
-    from scanstrain.registration import register
-    from scanstrain.strain import blend_to_points, calibrate
+def _compare(
+    reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...], keep: Keep
+) -> Result:
+    from scanstrain.strain import blend_to_points
 
-    align = config.registration.align_setups
-    with clock.stage("set-ups", 0.06):
-        reference, own_seams, own_doubts = check_setups(reference, align=align)
-        current, seams, more_doubts = check_setups(current, align=align)
-    with clock.stage("structure", 0.08):
-        shape = shape_of(reference, config)
-        unrolled = shape.unroll(reference.points)
-    with clock.stage("registration", 0.1):
-        registration = register(reference, current, **datum_options(reference, config, unrolled))
-        moved = current.moved(registration.T_ref_cur)
-    with clock.stage("neighbourhood", 0.3):
-        affine = _fit(reference, moved, shape, config, clock)
-        joints = _joints(reference, moved, affine, config)
-    with clock.stage("strain", 0.8):
-        affine, calibration, doubts = calibrate(affine, registration, reference.points)
-        strain = _strain(affine, registration, calibration, shape, config)
-        zones = gauges_of_zones(affine, reference, config, unrolled)
-        bodies = bodies_of(affine, registration, zones)
-    with clock.stage("sections", 0.83):
-        sections = sections_of(shape, reference, moved, registration, config)
-        wall = wall_movement(shape, affine, registration, config)
+    found = keep("registration", lambda: _register(reference, current, config, clock))
+    shape, registration, seams, doubts, (aligned, current_aligned) = found
+    reference, current = _at(reference, aligned), _at(current, current_aligned)
+    unrolled = shape.unroll(reference.points)
+    moved = current.moved(registration.T_ref_cur)
+    affine, joints = keep("field", lambda: _field(reference, moved, shape, config, clock))
+    affine, calibration, more_doubts, strain, zones, bodies, sections, wall = keep(
+        "strain", lambda: _strained(reference, moved, affine, registration, shape, unrolled, config, clock)
+    )
     with clock.stage("points", 0.85):
         points = blend_to_points(strain, reference.points)
         points |= {"stable": registration.stable.astype(np.uint8), **places_on(unrolled)}
     clock.say("done", 1.0)
     targets = registration.targets.warnings if registration.targets else ()
-    said = (
-        *notices,
-        *shape.warnings,
-        *own_doubts,
-        *more_doubts,
-        *targets,
-        *registration.warnings,
-        *affine.warnings,
-        *doubts,
-    )
+    before = (*notices, *shape.warnings, *doubts, *targets, *registration.warnings)
+    said = (*before, *affine.warnings, *more_doubts, *strain.warnings)
     return Result(
         reference,
         current,
@@ -159,15 +148,68 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
         points,
         config,
         clock.seconds,
-        tuple(dict.fromkeys((*said, *strain.warnings))),
+        tuple(dict.fromkeys(said)),
         bodies=bodies,
         zones=zones,
-        seams={"reference": own_seams, "current": seams},
+        seams=seams,
         axis=shape.axis,
         sections=sections,
         wall=wall,
         joints=joints,
     )
+
+
+def _register(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock) -> tuple[Any, ...]:
+    """Run all that comes before the gauges; aligned set-ups are handed on as points, or None where nothing moved."""
+    from scanstrain.registration import register
+
+    align = config.registration.align_setups
+    with clock.stage("set-ups", 0.06):
+        first, own_seams, own_doubts = check_setups(reference, align=align)
+        second, seams, more_doubts = check_setups(current, align=align)
+    with clock.stage("structure", 0.08):
+        shape = shape_of(first, config)
+        unrolled = shape.unroll(first.points)
+    with clock.stage("registration", 0.1):
+        registration = register(first, second, **datum_options(first, config, unrolled))
+    aligned = tuple(None if new is old else new.points for new, old in ((first, reference), (second, current)))
+    return shape, registration, {"reference": own_seams, "current": seams}, (*own_doubts, *more_doubts), aligned
+
+
+def _at(epoch: Epoch, points: FloatArray | None) -> Epoch:
+    """Return the epoch with its set-ups aligned."""
+    return epoch if points is None else replace(epoch, points=points)
+
+
+def _field(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, clock: Clock) -> tuple[Any, ...]:
+    """Run the neighbourhood stage, joints included."""
+    with clock.stage("neighbourhood", 0.3):
+        affine = _fit(reference, moved, shape, config, clock)
+        return affine, _joints(reference, moved, affine, config)
+
+
+def _strained(
+    reference: Epoch,
+    moved: Epoch,
+    affine: AffineField,
+    registration: Registration,
+    shape: Shape,
+    unrolled: Unrolled | None,
+    config: CompareConfig,
+    clock: Clock,
+) -> tuple[Any, ...]:
+    """Run all that comes after the gauges but the way back to the points."""
+    from scanstrain.strain import calibrate
+
+    with clock.stage("strain", 0.8):
+        affine, calibration, doubts = calibrate(affine, registration, reference.points)
+        strain = _strain(affine, registration, calibration, shape, config)
+        zones = gauges_of_zones(affine, reference, config, unrolled)
+        bodies = bodies_of(affine, registration, zones)
+    with clock.stage("sections", 0.83):
+        sections = sections_of(shape, reference, moved, registration, config)
+        wall = wall_movement(shape, affine, registration, config)
+    return affine, calibration, doubts, strain, zones, bodies, sections, wall
 
 
 def _fit(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, clock: Clock) -> AffineField:
@@ -257,24 +299,3 @@ def _named(epoch: Epoch, label: str, date: str | None) -> Epoch:
     """Return the epoch under the user's label and date."""
     provenance = replace(epoch.provenance, date=date or epoch.provenance.date)
     return replace(epoch, label=label, provenance=provenance)
-
-
-@dataclass
-class Clock:
-    """Seconds per stage, and progress to whoever wants to hear it."""
-
-    progress: Progress | None = None
-    seconds: dict[str, float] = field(default_factory=dict)
-
-    def say(self, phrase: str, share: float) -> None:
-        """Report progress."""
-        if self.progress:
-            self.progress(phrase, share)
-
-    @contextmanager
-    def stage(self, name: str, share: float) -> Iterator[None]:
-        """Time a stage."""
-        self.say(name, share)
-        start = time.perf_counter()
-        yield
-        self.seconds[name] = time.perf_counter() - start

@@ -87,8 +87,7 @@ def batch_screen(outcomes: Sequence[Outcome], folder: Path, *, notes: Sequence[s
     """Return a table with one line for each comparison of a batch, its triggers, and notes on the series."""
     rows: list[Sequence[str]] = [("comparison", "result", "gauges", "changed", "normal displacement", "limit", "time")]
     for outcome in outcomes:
-        state = "done" if outcome.done else "failed"
-        rows.append((outcome.name, state, *_findings(outcome.summary), f"{outcome.seconds:.0f} s"))
+        rows.append((outcome.name, outcome.state, *_findings(outcome.summary), f"{outcome.seconds:.0f} s"))
     written = [f"Written to {folder}"] if any(outcome.done for outcome in outcomes) else []
     return "\n".join([*aligned(rows), *_batch_triggers(outcomes), *_paragraphs(notes), *written])
 

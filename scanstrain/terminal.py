@@ -19,6 +19,7 @@ from scanstrain.errors import ScanstrainError
 
 if TYPE_CHECKING:
     from scanstrain.batch import Outcome
+    from scanstrain.comparison import Written
 
 FAILED, WRONG_CALL, PARTLY_FAILED, INTERRUPTED = 1, 2, 3, 130
 
@@ -31,11 +32,11 @@ class Terminal:
     verbose: bool = False
     json: bool = False
 
-    def progress(self) -> AbstractContextManager[Callable[[str, float], None]]:
-        """Give a reporter of progress."""
+    def progress(self, points: int = 0) -> AbstractContextManager[Callable[[str, float], None]]:
+        """Give a reporter of progress; `points` of everything that is to be done, if known, give a rate."""
         from scanstrain.progress import shown_on
 
-        return shown_on(sys.stderr, quiet=self.quiet)
+        return shown_on(sys.stderr, quiet=self.quiet, points=points)
 
     def show(self, text: str, data: Any) -> None:
         """Write a result: `data` as JSON if that was asked for, otherwise `text` unless it shall be quiet."""
@@ -51,7 +52,19 @@ class Terminal:
 
     def finished(self, outcome: Outcome) -> None:
         """Say at once how a comparison of a batch ended."""
-        self.remark(f"{outcome.name}: {'done' if outcome.done else 'FAILED'} after {outcome.seconds:.0f} s")
+        state = outcome.state if outcome.done else outcome.state.upper()
+        self.remark(f"{outcome.name}: {state} after {outcome.seconds:.0f} s{resumed(outcome.computed, outcome.taken)}")
+        for note in outcome.notes:
+            self.remark(f"Note: {note}")
+
+    def compared(self, written: Written) -> None:
+        """Say what of a single comparison was there already."""
+        if written.up_to_date:
+            self.remark("Up to date: nothing had to be done (--fresh computes it again).")
+        elif written.taken:
+            self.remark(f"Done{resumed(written.computed, written.taken)}")
+        for note in written.notes:
+            self.remark(f"Note: {note}")
 
     def remark(self, text: str) -> None:
         """Write a line for a person beside the result."""
@@ -63,6 +76,17 @@ class Terminal:
         if details and self.verbose:
             click.echo(details.rstrip(), err=True)
         click.echo(f"Error: {text}", err=True)
+
+
+def resumed(computed: Sequence[str], taken: Sequence[str]) -> str:
+    """Say which stages did not have to run again, in brackets; nothing where all ran.
+
+    >>> resumed(["strain"], ["registration", "field"]), resumed(["strain"], [])
+    (' (kept: registration, field; computed: strain)', '')
+    """
+    if not taken:
+        return ""
+    return f" (kept: {', '.join(taken)}; computed: {', '.join(computed) or 'nothing'})"
 
 
 def _switch(name: str, short: str, text: str) -> Callable[[Any], Any]:
@@ -100,7 +124,7 @@ def guarded(command: click.Command, arguments: Sequence[str] | None) -> int:
         terminal.complain(str(error), traceback.format_exc())
         return error.exit_code
     except (click.Abort, KeyboardInterrupt):
-        terminal.complain("interrupted; nothing half-finished is left.")
+        terminal.complain("interrupted; nothing half-finished is left; the same command goes on where it was.")
         return INTERRUPTED
     except BrokenPipeError:
         # Whoever read our output has enough; a second complaint while Python flushes at the end helps nobody.

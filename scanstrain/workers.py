@@ -42,7 +42,7 @@ def map_in_processes(
     workers: int,
     lost: Callable[[Item], Answer],
 ) -> Iterator[tuple[int, Answer]]:
-    """Yield `(position, function(item))` as the answers arrive.
+    """Yield `(position, function(item))` as the answers arrive, from processes of this machine.
 
     Parameters
     ----------
@@ -103,9 +103,25 @@ def _end(processes: set[BaseProcess]) -> None:
 
 def _begin() -> None:
     """Set a worker up: one thread, Ctrl-C left to the parent, and a stop that still cleans up half-written files."""
-    os.environ.update(dict.fromkeys(THREAD_VARIABLES, "1"))
+    keep_to_one_thread()
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     signal.signal(signal.SIGTERM, _stop)
+    threading.Thread(target=_end_with_parent, daemon=True).start()
+
+
+def keep_to_one_thread() -> None:
+    """Let the numerical libraries use one thread in this process, whether they are loaded yet or not."""
+    os.environ.update(dict.fromkeys(THREAD_VARIABLES, "1"))
+    if "numba" in sys.modules:
+        sys.modules["numba"].set_num_threads(1)
+
+
+def _end_with_parent() -> None:
+    """Stop when the parent is killed; a worker would otherwise wait for work for ever, and hold its memory."""
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        parent.join()
+        os.kill(os.getpid(), signal.SIGTERM)
 
 
 def _stop(number: int, _frame: object) -> None:

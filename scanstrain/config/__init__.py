@@ -2,7 +2,7 @@
 """Options: strict models, TOML in, every fault of a file at once, starter file and schema out."""
 
 from scanstrain.config.batch_file import BatchConfig, ComparisonEntry, EpochEntry
-from scanstrain.config.load import check_batch, config_from_options, load_config, option_names
+from scanstrain.config.load import check_batch, config_from_options, load_config, option_names, sites_of
 from scanstrain.config.models import (
     CompareConfig,
     NeighbourhoodOptions,
@@ -10,6 +10,7 @@ from scanstrain.config.models import (
     StrainOptions,
 )
 from scanstrain.config.output import OutputOptions
+from scanstrain.config.patterns import Site
 
 __all__ = [
     "BatchConfig",
@@ -19,9 +20,11 @@ __all__ = [
     "NeighbourhoodOptions",
     "OutputOptions",
     "RegistrationOptions",
+    "Site",
     "StrainOptions",
     "check_batch",
     "config_from_options",
     "load_config",
     "option_names",
+    "sites_of",
 ]

@@ -17,6 +17,7 @@ from scanstrain.config.base import FilePath, Options
 from scanstrain.config.faults import Fault, contradiction, refuse, refuse_all
 from scanstrain.config.models import CompareConfig
 from scanstrain.config.output import OutputOptions
+from scanstrain.config.place import PlaceEntry, faults_of_places
 from scanstrain.errors import OptionError
 
 LABEL = r"^\w[\w.-]*$"
@@ -30,7 +31,10 @@ class EpochEntry(Options):
         description="Short name of the epoch, used in folder names and messages: letters, digits, dot, "
         "hyphen, underscore.",
     )
-    file: FilePath = Field(description="The LAS or LAZ file; a relative path starts at this configuration file.")
+    file: FilePath = Field(
+        description="The LAS or LAZ file; a relative path starts at this configuration file. * and ? stand for what "
+        "differs in names, and must lead to one file; {place} stands for the name of each [[place]]."
+    )
     date: dt.date | None = Field(
         default=None,
         description="Day of the scan, without quotes. No default: not needed, but it shows mixed-up epochs.",
@@ -53,8 +57,8 @@ class BatchOutputOptions(OutputOptions):
     """Where results go, and how they look."""
 
     folder: FilePath = Field(
-        description="Folder for the results, one sub-folder REFERENCE_to_CURRENT a comparison; a relative "
-        "path starts at this configuration file."
+        description="Folder for the results, one sub-folder REFERENCE_to_CURRENT a comparison, in one folder a place "
+        "where there are places; a relative path starts at this configuration file."
     )
 
 
@@ -81,6 +85,11 @@ class BatchConfig(CompareConfig):
     comparison: Annotated[tuple[ComparisonEntry, ...], Strict(False)] = Field(
         default=(), description="The pairs to compare. No default; if none is given, `comparisons` says which."
     )
+    place: Annotated[tuple[PlaceEntry, ...], Strict(False)] = Field(
+        default=(),
+        description="Places that were all scanned at these epochs, each with its own comparisons; the files of the "
+        "epochs then hold {place}.",
+    )
 
     @field_validator("epoch")
     @classmethod
@@ -96,6 +105,11 @@ class BatchConfig(CompareConfig):
         if "epoch" in info.data:
             refuse_all(list(_impossible_pairs(value, {entry.label: entry for entry in info.data["epoch"]})))
         return value
+
+    @model_validator(mode="after")
+    def _files_of_places(self) -> BatchConfig:
+        refuse_all(list(faults_of_places(self.place, tuple(entry.file for entry in self.epoch))))
+        return self
 
     @model_validator(mode="after")
     def _dates_that_show_a_season(self) -> BatchConfig:

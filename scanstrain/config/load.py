@@ -11,6 +11,7 @@ from typing import Any
 from scanstrain.config.batch_file import BatchConfig
 from scanstrain.config.faults import Fault, contradiction, find_faults
 from scanstrain.config.models import CompareConfig
+from scanstrain.config.patterns import Site, find_sites
 from scanstrain.config.starter import PLACEHOLDERS
 from scanstrain.config.toml_faults import line_numbers, line_of, read_toml
 from scanstrain.errors import OptionError, explain
@@ -22,12 +23,30 @@ def load_config(path: Path) -> BatchConfig:
     Raises
     ------
     OptionError
-        With every fault of the file, one a line, as `file:line: key: what is wrong`.
+        With every fault of the file, one a line, as `file:line: key: what is wrong`; a pattern that leads to no
+        file, or to several, is one.
     """
     text, data = read_toml(path)
     if faults := find_faults(BatchConfig, data):
         raise OptionError(_at_lines(path, text, faults))
-    return BatchConfig.model_validate(data).placed(path.absolute().parent)
+    config = BatchConfig.model_validate(data).placed(path.absolute().parent)
+    if faults := find_sites(config)[1]:
+        raise OptionError(_at_lines(path, text, faults))
+    return config
+
+
+def sites_of(config: BatchConfig) -> tuple[Site, ...]:
+    """Return the places of a batch with the files that are there; one without a name where it has no places.
+
+    Raises
+    ------
+    OptionError
+        A pattern leads to no file, or to several.
+    """
+    sites, faults = find_sites(config)
+    if faults:
+        raise OptionError("\n".join(f"{fault.key}: {fault.text}." for fault in faults))
+    return sites
 
 
 def check_batch(path: Path) -> list[str]:
@@ -44,18 +63,31 @@ def check_batch(path: Path) -> list[str]:
         As `load_config` does it, also for scans that are not there.
     """
     config = load_config(path)
+    faults: list[Fault] = []
+    lines: list[str] = []
+    names = []
+    for site in sites_of(config):
+        more, remarks = _absent(site, path)
+        faults += more
+        lines += remarks
+        pairs = [f"{reference.label}_to_{current.label}" for reference, current in site.batch.pairs()]
+        names += [f"{site.name}/{pair}" if site.name else pair for pair in pairs]
+    if faults:
+        raise OptionError(_at_lines(path, read_toml(path)[0], faults))
+    return [*lines, f"{path}: valid; {len(names)} to compare: {', '.join(names)}."]
+
+
+def _absent(site: Site, path: Path) -> tuple[list[Fault], list[str]]:
+    """Scans of a place that are not there: faults, and remarks on those that a starter file names by default."""
     faults, lines = [], []
-    for position, entry in enumerate(config.epoch):
+    for position, entry in enumerate(site.batch.epoch):
         if entry.file.name in PLACEHOLDERS and not entry.file.exists():
             lines.append(f"epoch {entry.label!r}: put the name of your scan in place of {entry.file.name}.")
         elif not entry.file.is_file():
             got = "a folder" if entry.file.is_dir() else "no such file"
             remedy = f"check the path, which starts at {path.absolute().parent}"
             faults.append(contradiction("a scan file", f"{got}, {entry.file}", remedy, key=("epoch", position, "file")))
-    if faults:
-        raise OptionError(_at_lines(path, read_toml(path)[0], faults))
-    names = [f"{reference.label}_to_{current.label}" for reference, current in config.pairs()]
-    return [*lines, f"{path}: valid; {len(names)} to compare: {', '.join(names)}."]
+    return faults, lines
 
 
 def _at_lines(path: Path, text: str, faults: list[Fault]) -> str:

@@ -59,6 +59,14 @@ class OutputOptions(Options):
         "megabytes a comparison.",
     )
 
+    keep_stages: bool = Field(
+        default=True,
+        description="Keep the results of registration, gauges and strain in .stages beside the result. Default true: "
+        "with other options only what depends on them is computed again. They take one byte a point of the reference "
+        "and some three kilobytes a gauge, far less than the clouds. A run that was stopped goes on where it was "
+        "either way.",
+    )
+
     @field_validator("colour_by")
     @classmethod
     def _known_attribute(cls, value: str) -> str:

@@ -19,6 +19,7 @@ from pydantic.fields import FieldInfo
 from scanstrain.config.batch_file import BatchConfig
 from scanstrain.config.faults import required
 from scanstrain.config.joint import JointEntry
+from scanstrain.config.place import PlaceEntry
 from scanstrain.config.trigger import TriggerEntry
 from scanstrain.config.zone import ZoneEntry
 from scanstrain.errors import OptionError, OutputError, explain
@@ -26,7 +27,7 @@ from scanstrain.errors import OptionError, OutputError, explain
 PLACEHOLDERS = ("first_scan.laz", "second_scan.laz")
 """Files that a starter names when it is given none; a check lets them pass with a word."""
 
-LISTS = ("epoch", "comparison", "zone", "joint", "trigger")
+LISTS = ("epoch", "comparison", "place", "zone", "joint", "trigger")
 """Tables that may stand several times."""
 
 WIDTH = 100
@@ -82,7 +83,12 @@ def starter_text(
             for option in model.model_fields:
                 lines += [*_option(model, option, values), ""]
             lines.pop()
-    for table, model, name in (("zone", ZoneEntry, "abutment"), ("joint", JointEntry, "ring 3")):
+    examples: tuple[tuple[str, type[BaseModel], str], ...] = (
+        ("place", PlaceEntry, "chainage_*"),
+        ("zone", ZoneEntry, "abutment"),
+        ("joint", JointEntry, "ring 3"),
+    )
+    for table, model, name in examples:
         lines += ["", *_list_entry(table, model, name)]
     lines += ["", *_list_entry("trigger", TriggerEntry, "movement")]
     return "\n".join(lines) + "\n"

@@ -8,6 +8,7 @@ exchanged at the end, so that it may be a mount point, or somebody's working dir
 from __future__ import annotations
 
 import errno
+import glob
 import os
 import shutil
 import uuid
@@ -19,7 +20,10 @@ from scanstrain.attributes import BY_NAME
 from scanstrain.errors import OutputError, ScanstrainError, explain
 
 TABLES = ("gauges.csv", "sections.csv", "wall.csv", "bulges.csv", "joints.csv")
-FIXED_NAMES = frozenset({"strain.laz", "strain.las", *TABLES, "summary.json", "registered.json", "report.html"})
+PARTIAL = ".partial"
+"""Ends the name of a folder that is being filled."""
+PAGES = ("summary.json", "registered.json", "report.html", "manifest.json")
+FIXED_NAMES = frozenset({"strain.laz", "strain.las", *TABLES, *PAGES})
 
 
 def is_ours(name: str) -> bool:
@@ -89,7 +93,7 @@ def finished_only(folder: Path, *, retire: Callable[[str], bool] | None = None) 
     """
     token = uuid.uuid4().hex[:8]
     exists = folder.exists()
-    work = folder / f".{token}.partial" if exists else folder.with_name(f".{folder.name}.{token}.partial")
+    work = folder / f".{token}{PARTIAL}" if exists else folder.with_name(f".{folder.name}.{token}{PARTIAL}")
     try:
         work.mkdir(parents=True)
         yield work
@@ -124,6 +128,18 @@ def _exchange(work: Path, folder: Path, retire: Callable[[str], bool] | None) ->
         for path in before.iterdir():
             path.rename(folder / path.name)
         raise
+
+
+def recover(folder: Path) -> None:
+    """Undo what a run that was killed left of its work on a folder; call it only while no other run is at work there.
+
+    Half-written files go. Where the exchange of an old result for a new one was cut short, the old one comes back.
+    """
+    beside = folder.parent.glob(f".{glob.escape(folder.name)}.*{PARTIAL}")
+    for work in [*beside, *folder.glob(f".*{PARTIAL}")]:
+        for path in [*work.glob("before/*")]:
+            path.replace(folder / path.name)
+        shutil.rmtree(work, ignore_errors=True)
 
 
 def _because(folder: Path, error: OSError) -> str:

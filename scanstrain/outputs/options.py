@@ -3,7 +3,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 from scanstrain.outputs.colour import Limits
 
@@ -24,6 +26,8 @@ class OutputOptions:
         Grey out places without a change beyond the false-discovery control.
     report : bool
         Write `report.html`.
+    request : mapping, optional
+        What was asked for, as plain JSON; goes into the manifest, by which a second run knows it again.
     """
 
     colour_by: str = "disp_n"
@@ -31,3 +35,4 @@ class OutputOptions:
     no_data: float | None = None
     only_significant: bool = False
     report: bool = True
+    request: Mapping[str, Any] | None = None

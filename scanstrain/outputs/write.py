@@ -4,14 +4,16 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from pathlib import Path
+from typing import Any
 
 from scanstrain.outputs.cloud import write_coloured_cloud, write_strain_cloud
 from scanstrain.outputs.colour import Limits, choose_scale
 from scanstrain.outputs.folder import check_folder, finished_only, is_ours
 from scanstrain.outputs.joint_table import write_joint_table
 from scanstrain.outputs.key import write_colour_key
+from scanstrain.outputs.manifest import write_manifest
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.registered import write_registered
 from scanstrain.outputs.report import write_report
@@ -38,6 +40,7 @@ OUTPUTS.add("joint table", write_joint_table)
 OUTPUTS.add("registered", write_registered)
 OUTPUTS.add("summary", write_summary)
 OUTPUTS.add("report", write_report)
+OUTPUTS.add("manifest", write_manifest)
 
 
 def write_result(
@@ -49,6 +52,7 @@ def write_result(
     no_data: float | None = None,
     only_significant: bool = False,
     report: bool = True,
+    request: Mapping[str, Any] | None = None,
 ) -> list[Path]:
     """Write a result into a folder.
 
@@ -69,6 +73,8 @@ def write_result(
         Grey out places without a change beyond the false-discovery control.
     report : bool
         Write `report.html`.
+    request : mapping, optional
+        What was asked for, as plain JSON; goes into `manifest.json`, by which a second run knows it again.
 
     Returns
     -------
@@ -83,7 +89,7 @@ def write_result(
         The folder is a file, holds an input in the place of an output, cannot be written to, or the disk is full.
         What stood there before stands there still.
     """
-    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report)
+    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report, request)
     # limits that do not fit are refused before anything is written
     choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits)
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]

@@ -17,8 +17,8 @@ PACKAGE = Path(scanstrain.__file__).parent
 MODULES = {".".join(path.relative_to(PACKAGE).with_suffix("").parts): path for path in PACKAGE.rglob("*.py")}
 
 LAYERS = (
-    ("errors", "attributes", "progress", "workers"),
-    ("registry",),
+    ("errors", "attributes", "workers", "program", "capacity", "clock"),
+    ("registry", "progress", "lock", "cluster"),
     ("linalg", "epoch"),
     ("zones", "cells", "series", "limits", "damage", "budget", "forecast"),
     ("structures",),
@@ -29,8 +29,11 @@ LAYERS = (
     ("outputs",),
     ("config", "inspection"),
     ("datum", "parts", "shape"),
+    ("stages",),
     ("pipeline",),
-    ("batch", "plugin", "proof"),
+    ("comparison", "plugin", "proof"),
+    ("jobs",),
+    ("batch",),
     ("evolution",),
     ("screens", "terminal"),
     ("plan_screens",),

@@ -1,0 +1,102 @@
+# SPDX-License-Identifier: MIT
+"""manifest.json: what a result was made from and with, and every file of it with its hash.
+
+A second run of the same thing compares it with what it would do, and with the files that are there.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from enum import Enum
+from pathlib import Path
+from typing import Any
+
+from scanstrain.io.files import sha256
+from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.strict import plain, write_json
+from scanstrain.program import identity
+from scanstrain.result import Result
+
+NAME = "manifest.json"
+FORMAT = 1
+
+
+class Standing(Enum):
+    """How an existing result stands to what is asked for."""
+
+    NONE = "nothing is there"
+    UP_TO_DATE = "up to date"
+    OTHER = "made from other scans or with other options"
+    OLDER = "made by another version"
+    INCOMPLETE = "not as it was written"
+
+
+def write_manifest(result: Result, folder: Path, options: OutputOptions) -> Path:
+    """Write `manifest.json`; it comes last, because it names all other files."""
+    epochs = {"reference": result.reference, "current": result.current}
+    return write_json(
+        {
+            "format": FORMAT,
+            "request": options.request,
+            "inputs": {name: {"file": epoch.provenance.path, "sha256": epoch.provenance.sha256}
+                       for name, epoch in epochs.items()},
+            "options": result.config.model_dump(mode="json"),
+            "software": identity(),
+            "outputs": {path.name: {"bytes": path.stat().st_size, "sha256": sha256(path)}
+                        for path in sorted(folder.iterdir()) if path.is_file() and path.name != NAME},
+        },
+        folder / NAME,
+    )  # fmt: skip
+
+
+def standing(folder: Path, request: Mapping[str, Any]) -> tuple[Standing, str]:
+    """Say whether a folder holds the finished result of a request already.
+
+    Parameters
+    ----------
+    folder : Path
+    request : mapping
+        What would be computed, as it was given to `write_result`; plain JSON.
+
+    Returns
+    -------
+    standing : Standing
+    detail : str
+        What is missing or changed, or which version it was; empty where there is nothing to say.
+    """
+    path = folder / NAME
+    if not path.exists():
+        there = (folder / "summary.json").exists()
+        return (Standing.OLDER, "a version that wrote no manifest") if there else (Standing.NONE, "")
+    try:
+        known = json.loads(path.read_text(encoding="utf-8"))
+        software, outputs = dict(known["software"]), dict(known["outputs"])
+        if known["format"] != FORMAT or software != identity():
+            return Standing.OLDER, f"version {software['scanstrain']}" + _sameness(software)
+        if known["request"] != plain(request):
+            return Standing.OTHER, ""
+        for name, facts in outputs.items():
+            if (why := _unlike(folder / Path(name).name, facts)) is not None:
+                return Standing.INCOMPLETE, f"{name} {why}"
+    except (OSError, ValueError, KeyError, TypeError, AttributeError):
+        return Standing.INCOMPLETE, f"{NAME} cannot be read"
+    return Standing.UP_TO_DATE, ""
+
+
+def _sameness(software: Mapping[str, str]) -> str:
+    """Name the libraries where the version of the program itself is the same."""
+    mine = identity()
+    if software["scanstrain"] != mine["scanstrain"]:
+        return ""
+    other = [name for name in mine if software.get(name) != mine[name] and name != "source"]
+    return f" with other {', '.join(other)}" if other else " with other modules"
+
+
+def _unlike(path: Path, facts: Mapping[str, Any]) -> str | None:
+    """Say how a file differs from what was written; None where it does not."""
+    if not path.is_file():
+        return "is missing"
+    if path.stat().st_size != facts["bytes"] or sha256(path) != facts["sha256"]:
+        return "was changed"
+    return None
