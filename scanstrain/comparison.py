@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from scanstrain.capacity import free_space, needed_space
 from scanstrain.clock import Progress
-from scanstrain.errors import OptionError, OutputError, explain
+from scanstrain.errors import InputFileError, OptionError, OutputError, explain
 from scanstrain.lock import locked
 
 if TYPE_CHECKING:  # these load NumPy, which must not happen before a worker has set its threads
@@ -134,7 +134,11 @@ def compare_to_folder(
     if fresh:
         forget(folder)
     check_space(folder, [expected_points(reference)])
-    store = _compute(reference, current, config, folder, request, labels, progress)
+    try:
+        store = _compute(reference, current, config, folder, request, labels, progress)
+    except InputFileError:
+        forget(folder)  # a scan that changed on the way may have left stages under the wrong key
+        raise
     if config.output.keep_stages:
         gather(folder)
     else:

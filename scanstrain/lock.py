@@ -108,14 +108,19 @@ def _create(path: Path, text: str) -> None:
 
 
 def _remove(path: Path, holder: dict[str, Any]) -> None:
-    """Take a dead lock away, unless somebody else was quicker and put a new one there."""
-    aside = path.with_name(f"{path.name}.{secrets.token_hex(4)}")
-    with suppress(FileNotFoundError):
-        path.rename(aside)
-        if _read(aside) != holder:
-            with suppress(OSError):
-                os.link(aside, path)
-        aside.unlink(missing_ok=True)
+    """Take a dead lock away, unless somebody else was quicker and put a new one there.
+
+    Whoever removes it holds the file itself locked between the last look and the removal, so that two cannot take
+    away one after the other a dead lock and the new one in its place.
+    """
+    with suppress(FileNotFoundError), path.open("rb") as stream:
+        with suppress(ImportError):  # not on Windows, where an open file cannot be removed anyway
+            import fcntl
+
+            fcntl.flock(stream, fcntl.LOCK_EX)
+        same = os.path.samestat(os.fstat(stream.fileno()), path.stat())
+        if same and _read(path) == holder:
+            path.unlink()
 
 
 def _read(path: Path) -> dict[str, Any] | None:
@@ -132,7 +137,8 @@ def _read(path: Path) -> dict[str, Any] | None:
 def _owner() -> dict[str, Any]:
     now = dt.datetime.now(dt.UTC).isoformat(timespec="seconds")
     number = os.getpid()
-    return {"process": number, "began": _beginning(number), "host": socket.gethostname(), "since": now}
+    token = secrets.token_hex(4)
+    return {"token": token, "process": number, "began": _beginning(number), "host": socket.gethostname(), "since": now}
 
 
 def _is_dead(holder: dict[str, Any]) -> bool:

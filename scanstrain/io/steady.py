@@ -45,7 +45,7 @@ def unchanged(files: Sequence[Path]) -> Iterator[None]:
     before = [_state(path) for path in files]
     try:
         yield
-    except OSError:
+    except (OSError, InputFileError):
         _compare(files, before)
         raise
     _compare(files, before)

@@ -12,6 +12,7 @@ from enum import Enum
 from pathlib import Path
 from typing import Any
 
+from scanstrain.errors import InputFileError, explain
 from scanstrain.io.files import sha256
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.strict import plain, write_json
@@ -33,8 +34,17 @@ class Standing(Enum):
 
 
 def write_manifest(result: Result, folder: Path, options: OutputOptions) -> Path:
-    """Write `manifest.json`; it comes last, because it names all other files."""
+    """Write `manifest.json`; it comes last, because it names all other files.
+
+    Raises
+    ------
+    InputFileError
+        A scan is no longer the one that was asked for.
+    """
     epochs = {"reference": result.reference, "current": result.current}
+    for name, epoch in epochs.items():
+        if options.request is not None:
+            _check_input(Path(epoch.provenance.path), options.request["inputs"][name])
     return write_json(
         {
             "format": FORMAT,
@@ -82,6 +92,13 @@ def standing(folder: Path, request: Mapping[str, Any]) -> tuple[Standing, str]:
     except (OSError, ValueError, KeyError, TypeError, AttributeError):
         return Standing.INCOMPLETE, f"{NAME} cannot be read"
     return Standing.UP_TO_DATE, ""
+
+
+def _check_input(path: Path, wanted: str) -> None:
+    """Refuse a result into which a scan went that was changed after it was hashed."""
+    if sha256(path) != wanted:
+        got = "one that was changed meanwhile"
+        raise InputFileError(explain(str(path), "a scan that stays as it is to the end", got, "run it again"))
 
 
 def _sameness(software: Mapping[str, str]) -> str:

@@ -44,7 +44,7 @@ def fake(monkeypatch):
     """Replace the comparison and the cloud writer; scans whose name holds a key of `broken` fail with its value."""
     made = types.SimpleNamespace(configs=[], broken={})
 
-    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None):
+    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, keep=None):
         made.configs.append((config, assume_same_crs))
         for step in ("registration", "neighbourhood", "strain") if progress else ():
             progress(step, 0.0)
@@ -57,6 +57,7 @@ def fake(monkeypatch):
     pipeline = types.ModuleType("scanstrain.pipeline")
     pipeline.compare_files = compare_files
     monkeypatch.setitem(sys.modules, "scanstrain.pipeline", pipeline)
+    monkeypatch.setattr("scanstrain.batch.usable_workers", lambda points: 1)
     monkeypatch.setattr("scanstrain.io.write_result_cloud", MADE["fake_write"])
     monkeypatch.setattr("scanstrain.outputs.report.write.report_page", MADE["fake_page"])
     return made

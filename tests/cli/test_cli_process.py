@@ -73,4 +73,6 @@ def test_ctrl_c_gives_130_and_one_sentence(tmp_path):
     process.send_signal(signal.SIGINT)
     _, err = process.communicate(timeout=60)
     assert process.returncode == 130
-    assert err.strip().splitlines() == ["Error: interrupted; nothing half-finished is left."]
+    assert err.strip().splitlines() == [
+        "Error: interrupted; nothing half-finished is left; the same command goes on where it was."
+    ]

@@ -1,6 +1,7 @@
 # SPDX-License-Identifier: MIT
 """A batch: which comparisons run, what happens when one fails, and that nothing runs into a wrong folder."""
 
+import hashlib
 import json
 import os
 import sys
@@ -31,7 +32,7 @@ def batch(tmp_path):
     def loaded(how="", labels="abc"):
         epochs = "".join(f'[[epoch]]\nlabel = "{label}"\nfile = "{label}.laz"\n' for label in labels)
         for label in labels:
-            (tmp_path / f"{label}.laz").touch()
+            (tmp_path / f"{label}.laz").write_text(f"scan {label}", encoding="utf-8")
         path = tmp_path / "batch.toml"
         path.write_text(TEXT.format(how=how) + epochs, encoding="utf-8")
         return load_config(path)
@@ -44,7 +45,7 @@ def calls(monkeypatch):
     """Replace the pipeline and the writer; return what they were called with. Scans named in `broken` fail."""
     made = types.SimpleNamespace(compared=[], written=[], broken={}, indexed=[])
 
-    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None):
+    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, keep=None):
         made.compared.append((reference.stem, current.stem, config, assume_same_crs))
         if progress:
             progress("registration", 0.0)
@@ -55,7 +56,7 @@ def calls(monkeypatch):
 
     def write_result(result, folder, **options):
         made.written.append((result, options))
-        folder.mkdir(parents=True)
+        folder.mkdir(parents=True, exist_ok=True)
         (folder / "summary.json").write_text(json.dumps({"of": result}), encoding="utf-8")
         return [folder / "summary.json"]
 
@@ -78,10 +79,14 @@ def test_every_comparison_runs_with_the_options_of_the_file(batch, calls, tmp_pa
     reference, current, config, assume_same_crs = calls.compared[0]
     assert (reference, current, assume_same_crs) == ("a", "b", True)
     assert config.strain.structure == "wall"
-    assert calls.written[0] == (
+    result, options = calls.written[0]
+    request = options.pop("request")
+    assert (result, options) == (
         "b",
         {"colour_by": "disp_n", "colour_limits": None, "no_data": -9999.0, "only_significant": False, "report": True},
     )
+    assert request["inputs"]["current"] == hashlib.sha256(b"scan b").hexdigest()
+    assert request["labels"] == [["a", None], ["b", None]]
 
 
 def test_a_comparison_that_fails_does_not_stop_the_others(batch, calls):
@@ -140,7 +145,8 @@ def test_workers_below_one_are_refused(batch, calls):
 def test_progress_names_the_comparison(batch, calls):
     steps = []
     run_batch(batch(), only=["b"], progress=lambda step, share: steps.append((step, share)))
-    assert steps == [("a_to_b: registration", 0.0), ("a_to_b: registration", 1.0)]
+    assert [step for step, _ in steps] == ["a_to_b: check", "a_to_b: registration", "a_to_b: write"]
+    assert [share for _, share in steps] == [0.0, 0.0, 0.9]
 
 
 def test_an_input_in_the_place_of_an_output_is_refused_before_anything_runs(batch, calls, tmp_path):
@@ -174,7 +180,7 @@ def test_outcomes_as_data_are_strict_json(batch, calls):
 
 
 def test_worker_processes_report_errors_as_outcomes(batch, tmp_path):
-    """Through real processes and whatever really reads scans: these files are empty, so every comparison fails."""
+    """Through real processes and whatever really reads scans: these files hold no points, so every comparison fails."""
     outcomes = run_batch(batch(), workers=2)
     assert [outcome.name for outcome in outcomes] == ["a_to_b", "a_to_c"]
     for outcome in outcomes:

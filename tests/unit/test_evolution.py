@@ -177,7 +177,7 @@ def test_a_season_is_fitted_where_it_is_asked_for(tmp_path):
 def test_a_batch_from_its_file_to_the_table(tmp_path, monkeypatch):
     """Through `run_batch` with comparisons made by hand, one of which fails."""
 
-    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None):
+    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, keep=None):
         if current.stem == "2":
             raise InputFileError("2.laz: required points; got none; export it again.")
         return compared(YEARS[int(current.stem)])
@@ -194,7 +194,7 @@ def test_a_batch_from_its_file_to_the_table(tmp_path, monkeypatch):
     monkeypatch.setattr("scanstrain.outputs.report.write_index", lambda outcomes, folder: None)
     lines = ['[output]\nfolder = "results"']
     for number, t in enumerate(YEARS):
-        (tmp_path / f"{number}.laz").touch()
+        (tmp_path / f"{number}.laz").write_text(f"scan {number}", encoding="utf-8")
         lines.append(f'[[epoch]]\nlabel = "e{number}"\nfile = "{number}.laz"\ndate = {day(t)}')
     path = tmp_path / "job.toml"
     path.write_text("\n".join(lines), encoding="utf-8")

@@ -37,7 +37,7 @@ def test_strain_cloud_gets_every_attribute_and_the_source(written, tmp_path):
     assert list(values) == list(result.points)
     assert [path.name for path in paths] == [
         "strain.laz", "strain_tilt.laz", "strain_tilt.png", "gauges.csv", "registered.json", "summary.json",
-        "report.html",
+        "report.html", "manifest.json",
     ]  # fmt: skip
     assert json.loads((tmp_path / "out" / "summary.json").read_text())["no_data"]["value"] == -9999.0
 

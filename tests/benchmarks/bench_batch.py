@@ -1,0 +1,180 @@
+# SPDX-License-Identifier: MIT
+"""Batches: two workers over one, a Dask cluster on loopback over local processes, and runs that are killed.
+
+python tests/benchmarks/bench_batch.py [speed] [kill] [--comparisons 4] [--points 60000] [--kills 50] [--seed 0]
+
+Machines are noisy: take the ratios, and run it on an idle one.
+"""
+
+import argparse
+import contextlib
+import json
+import os
+import random
+import runpy
+import shutil
+import signal
+import socket
+import subprocess
+import sys
+import tempfile
+import time
+from pathlib import Path
+
+import laspy
+import numpy as np
+
+print_machine = runpy.run_path(str(Path(__file__).with_name("bench_machine.py")))["print_machine"]
+PROGRAM = [sys.executable, "-m", "scanstrain"]
+ONE_THREAD = dict.fromkeys(("NUMBA_NUM_THREADS", "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"), "1")
+DENSITY = 10_000
+"""Points per square metre."""
+
+
+def write_scan(path, points, seed):
+    """A textured wall with a gentle relief; epochs differ by their seed and a small bulge."""
+    rng = np.random.default_rng(seed)
+    length = np.sqrt(points / DENSITY / 0.7)
+    x, z = rng.uniform(0, length, points), rng.uniform(0, 0.7 * length, points)
+    bulge = 3e-3 * seed * np.exp(-((x - length / 2) ** 2 + (z - 0.3) ** 2) / 0.05)
+    las = laspy.LasData(laspy.LasHeader(point_format=6, version="1.4"))
+    las.header.scales, las.header.offsets = [1e-5] * 3, [482310.0, 5391270.0, 100.0]
+    las.x, las.z = x + 482310.0, z + 100.0
+    las.y = 0.05 * np.sin(2 * x) * np.cos(3 * z) + bulge + 5391270.0 + rng.normal(0, 1e-3, points)
+    las.intensity = 2000 + 800 * np.sin(9 * x + 2 * z) * np.cos(7 * z - 3 * x) + rng.normal(0, 40, points)
+    las.write(path)
+
+
+def write_batch(folder, comparisons, points, *, report):
+    lines = [f'[output]\nfolder = "results"\nreport = {json.dumps(report)}', '[strain]\nstructure = "wall"',
+             "[neighbourhood]\ngauge_length = 0.3"]  # fmt: skip
+    for number in range(comparisons + 1):
+        write_scan(folder / f"{number}.laz", points, number)
+        lines.append(f'[[epoch]]\nlabel = "e{number}"\nfile = "{number}.laz"')
+    path = folder / "job.toml"
+    path.write_text("\n".join(lines), encoding="utf-8")
+    return path
+
+
+def timed(job, *arguments, env=None):
+    start = time.perf_counter()
+    command = [*PROGRAM, "run", str(job), "--fresh", "--quiet", *arguments]
+    subprocess.run(command, check=True, env={**os.environ, **(env or {})})
+    return time.perf_counter() - start
+
+
+@contextlib.contextmanager
+def cluster(workers):
+    with socket.socket() as found:
+        found.bind(("127.0.0.1", 0))
+        port = found.getsockname()[1]
+    address = f"tcp://127.0.0.1:{port}"
+    dask = [sys.executable, "-m", "dask"]
+    quiet = {"stdout": subprocess.DEVNULL, "stderr": subprocess.DEVNULL}
+    started = [
+        subprocess.Popen([*dask, "scheduler", "--host", "127.0.0.1", "--port", str(port), "--no-dashboard"], **quiet)
+    ]
+    started += [
+        subprocess.Popen(
+            [*dask, "worker", address, "--nthreads", "1", "--no-dashboard", "--host", "127.0.0.1"], **quiet
+        )
+        for _ in range(workers)
+    ]
+    try:
+        yield address
+    finally:
+        for process in reversed(started):
+            process.terminate()
+            process.wait()
+
+
+def bench_speed(folder, comparisons, points):
+    job = write_batch(folder, comparisons, points, report=True)
+    timed(job, "--only", "e1")  # compiles
+    one = timed(job, "--workers", "1", env=ONE_THREAD)
+    threads = timed(job, "--workers", "1")
+    two = timed(job, "--workers", "2")
+    with cluster(2) as address:
+        time.sleep(5)
+        far = timed(job, "--scheduler", address)
+        far = min(far, timed(job, "--scheduler", address))
+    print(f"{comparisons} comparisons of 2 x {points} points, report included")
+    print(f"  one process, one thread      {one:7.1f} s")
+    print(f"  one process, all threads     {threads:7.1f} s")
+    print(
+        f"  two processes                {two:7.1f} s   {one / two:.2f} x one thread, {threads / two:.2f} x all threads"
+    )
+    print(f"  Dask on loopback, 2 workers  {far:7.1f} s   {far / two:.2f} x the time of two processes")
+
+
+def results(folder):
+    """Bytes of all results; of the summary all but times and memory."""
+    found = {}
+    for path in sorted(folder.glob("*/*")):
+        if path.name == "summary.json":
+            content = json.loads(path.read_text(encoding="utf-8"))
+            del content["timing"]
+            found[path.relative_to(folder)] = content
+        elif path.is_file() and path.name != "manifest.json":
+            found[path.relative_to(folder)] = path.read_bytes()
+    return found
+
+
+def bench_kill(folder, kills, points, seed):
+    job = write_batch(folder, 1, points, report=False)
+    timed(job)
+    took = timed(job)
+    wanted = results(folder / "results")
+    rng, same, at_stage = random.Random(seed), 0, []
+    for _ in range(kills):
+        shutil.rmtree(folder / "results")
+        process = subprocess.Popen([*PROGRAM, "run", str(job), "--quiet", "--workers", "1"])
+        time.sleep(rng.uniform(0.1, took))
+        process.send_signal(signal.SIGKILL)
+        process.wait()
+        kept = sorted(path.stem for path in (folder / "results").rglob("*.stage"))
+        done = subprocess.run(
+            [*PROGRAM, "run", str(job), "--json", "--quiet", "--workers", "1"], capture_output=True, check=True
+        )
+        (comparison,) = json.loads(done.stdout)["comparisons"]
+        taken = (
+            "up to date"
+            if comparison["state"] == "up to date"
+            else ", ".join(comparison["stages"]["taken"]) or "nothing"
+        )
+        at_stage.append(taken)
+        left = [path.name for path in (folder / "results").rglob("*.part*")] + [
+            p.name for p in folder.glob(".results.lock")
+        ]
+        equal = results(folder / "results") == wanted and not left
+        same += equal
+        if not equal:
+            print(f"  DIFFERS: kept {kept}, taken {taken}, left {left}", flush=True)
+    print(f"killed {kills} times within {took:.1f} s and resumed: {same} of {kills} identical")
+    for what in dict.fromkeys(at_stage):
+        print(f"  resumed from {what}: {at_stage.count(what)}")
+
+
+def main():
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("parts", nargs="*", choices=["speed", "kill", []], default=["speed", "kill"])
+    parser.add_argument("--comparisons", type=int, default=4)
+    parser.add_argument("--points", type=int, default=60_000)
+    parser.add_argument("--kills", type=int, default=50)
+    parser.add_argument("--kill-points", type=int, default=4_000)
+    parser.add_argument("--seed", type=int, default=0)
+    given = parser.parse_args()
+    print_machine()
+    with tempfile.TemporaryDirectory() as folder:
+        if "speed" in given.parts:
+            place = Path(folder, "speed")
+            place.mkdir()
+            bench_speed(place, given.comparisons, given.points)
+        if "kill" in given.parts:
+            place = Path(folder, "kill")
+            place.mkdir()
+            bench_kill(place, given.kills, given.kill_points, given.seed)
+
+
+if __name__ == "__main__":
+    main()
