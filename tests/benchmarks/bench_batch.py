@@ -24,7 +24,7 @@ from pathlib import Path
 import laspy
 import numpy as np
 
-print_machine = runpy.run_path(str(Path(__file__).with_name("bench_machine.py")))["print_machine"]
+machine = runpy.run_path(str(Path(__file__).with_name("bench_machine.py")))["machine"]
 PROGRAM = [sys.executable, "-m", "scanstrain"]
 ONE_THREAD = dict.fromkeys(("NUMBA_NUM_THREADS", "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"), "1")
 DENSITY = 10_000
@@ -157,14 +157,14 @@ def bench_kill(folder, kills, points, seed):
 
 def main():
     parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("parts", nargs="*", choices=["speed", "kill", []], default=["speed", "kill"])
+    parser.add_argument("parts", nargs="*", default=["speed", "kill"])
     parser.add_argument("--comparisons", type=int, default=4)
     parser.add_argument("--points", type=int, default=60_000)
     parser.add_argument("--kills", type=int, default=50)
     parser.add_argument("--kill-points", type=int, default=4_000)
     parser.add_argument("--seed", type=int, default=0)
     given = parser.parse_args()
-    print_machine()
+    print(machine(), flush=True)
     with tempfile.TemporaryDirectory() as folder:
         if "speed" in given.parts:
             place = Path(folder, "speed")

@@ -297,7 +297,7 @@ def test_a_full_disk_is_said_and_leaves_nothing_half_written(scans, small_disk, 
     monkeypatch.setattr("scanstrain.comparison.free_space", lambda folder: 1e12)
     before = [scan.read_bytes() for scan in scans]
     folder = small_disk / "result"
-    with pytest.raises(OutputError, match="(?i)no space left"):
+    with pytest.raises(OutputError, match=r"(?i)no space left"):
         compare_to_folder(*scans, options(), folder)
     assert not folder.exists()
     assert not list(small_disk.rglob("*.part*"))

@@ -32,18 +32,18 @@ def test_a_lock_is_there_while_it_is_held_and_says_who_holds_it(tmp_path):
 
 
 def test_two_at_once_are_refused_with_a_sentence(tmp_path):
-    with locked(tmp_path / "results"), pytest.raises(OutputError, match=f"process {os.getpid()} at work there since"):
-        with locked(tmp_path / "results"):
-            pytest.fail("both hold it")
+    busy = f"process {os.getpid()} at work there since"
+    with locked(tmp_path / "results"), pytest.raises(OutputError, match=busy), locked(tmp_path / "results"):
+        pytest.fail("both hold it")
     with locked(tmp_path / "results"):
         pass
 
 
 def test_a_run_on_the_folder_above_holds_those_below(tmp_path):
     for inner in ("results/a_to_b", "results/place/a_to_b"):
-        with locked(tmp_path / "results"), pytest.raises(OutputError, match="results: required an output folder"):
-            with locked(tmp_path / inner):
-                pytest.fail("both hold it")
+        wanted = "results: required an output folder"
+        with locked(tmp_path / "results"), pytest.raises(OutputError, match=wanted), locked(tmp_path / inner):
+            pytest.fail("both hold it")
         assert not lock_path(tmp_path / inner).exists()
     with locked(tmp_path / "results" / "a_to_b"), pytest.raises(OutputError, match="a_to_b"):
         check_free(tmp_path / "results" / "a_to_b")

@@ -82,7 +82,8 @@ def changed(**options):
     ("options", "stages"),
     [
         ({"colour_by": "tilt"}, []), ({"no_data": -9999.0}, []), ({"report": False}, []), ({"keep_stages": False}, []),
-        ({"thickness": 0.3}, ["strain"]), ({"measure": "hencky"}, ["strain"]), ({"false_discovery_rate": 0.1}, ["strain"]),
+        ({"thickness": 0.3}, ["strain"]), ({"measure": "hencky"}, ["strain"]),
+        ({"false_discovery_rate": 0.1}, ["strain"]),
         ({"section_spacing": 1.0}, ["strain"]), ({"band": 0.5}, ["strain"]),
         ({"gauge_length": 0.5}, ["field", "strain"]), ({"min_points": 40}, ["field", "strain"]),
         ({"capture_range": 0.2}, list(STAGES)), ({"seed": 1}, list(STAGES)), ({"structure": "wall"}, list(STAGES)),
