@@ -18,6 +18,7 @@ import socket
 import subprocess
 import sys
 import tempfile
+import threading
 import time
 from pathlib import Path
 
@@ -76,12 +77,13 @@ def cluster(workers):
     ]
     started += [
         subprocess.Popen(
-            [*dask, "worker", address, "--nthreads", "1", "--no-dashboard", "--host", "127.0.0.1"], **quiet
+            [*dask, "worker", address, "--nthreads", "1", "--no-dashboard", "--no-nanny", "--host", "127.0.0.1"],
+            **quiet,
         )
         for _ in range(workers)
     ]
     try:
-        yield address
+        yield address, started
     finally:
         for process in reversed(started):
             process.terminate()
@@ -94,17 +96,25 @@ def bench_speed(folder, comparisons, points):
     one = timed(job, "--workers", "1", env=ONE_THREAD)
     threads = timed(job, "--workers", "1")
     two = timed(job, "--workers", "2")
-    with cluster(2) as address:
-        time.sleep(5)
+    wanted = results(folder / "results")
+    with cluster(2) as (address, started):
+        timed(job, "--scheduler", address, "--only", "e1")  # the workers load everything
         far = timed(job, "--scheduler", address)
-        far = min(far, timed(job, "--scheduler", address))
+        same = results(folder / "results") == wanted
+        killer = threading.Timer(far / 2, started[-1].kill)
+        killer.start()
+        alone = timed(job, "--scheduler", address)
+        same_alone = results(folder / "results") == wanted
     print(f"{comparisons} comparisons of 2 x {points} points, report included")
     print(f"  one process, one thread      {one:7.1f} s")
     print(f"  one process, all threads     {threads:7.1f} s")
     print(
         f"  two processes                {two:7.1f} s   {one / two:.2f} x one thread, {threads / two:.2f} x all threads"
     )
-    print(f"  Dask on loopback, 2 workers  {far:7.1f} s   {far / two:.2f} x the time of two processes")
+    print(
+        f"  Dask on loopback, 2 workers  {far:7.1f} s   {far / two:.2f} x the time of two processes, same bytes: {same}"
+    )
+    print(f"  one of them killed midway    {alone:7.1f} s   same bytes: {same_alone}")
 
 
 def results(folder):
