@@ -11,8 +11,8 @@ from pathlib import Path
 
 BASE_MEMORY = 600e6
 """Of a process with all libraries loaded and compiled [byte], measured."""
-MEMORY_A_POINT = 1000.0
-"""Peak of a comparison for each point of both scans [byte], measured from 0.1 to 2 million points, rounded up."""
+MEMORY_A_POINT = 700.0
+"""Peak of a comparison for each point of both scans [byte]: 555 measured with two scans of a million, rounded up."""
 USABLE = 0.8
 """Share of the free memory that may be planned with [1]; the rest is for the system and for estimates that are low."""
 
