@@ -180,7 +180,8 @@ def bench_kill(folder, kills, points, seed):
             f"  {number + 1}: resumed from {told.read_text()}{'' if equal else f', DIFFERS, left {left}'}", flush=True
         )
     print(
-        f"killed {kills} times within {took:.1f} s and resumed: {same} of {kills} identical; resumed from {dict(resumed)}"
+        f"killed {kills} times within {took:.1f} s and resumed: {same} of {kills} identical; "
+        f"resumed from {dict(resumed)}"
     )
 
 
