@@ -13,6 +13,8 @@ BASE_MEMORY = 600e6
 """Of a process with all libraries loaded and compiled [byte], measured."""
 MEMORY_A_POINT = 700.0
 """Peak of a comparison for each point of both scans [byte]: 555 measured with two scans of a million, rounded up."""
+GROUP = Path("/sys/fs/cgroup")
+"""Where Linux tells the limits on a group of processes (control group v2)."""
 USABLE = 0.8
 """Share of the free memory that may be planned with [1]; the rest is for the system and for estimates that are low."""
 
@@ -82,10 +84,9 @@ def _free_on_machine() -> float | None:
 
 def _free_in_group() -> float | None:
     """Return what a limit on this group of processes leaves, as containers and job schedulers set it."""
-    group = Path("/sys/fs/cgroup")
     try:
-        limit = (group / "memory.max").read_text(encoding="ascii").strip()
-        used = int((group / "memory.current").read_text(encoding="ascii"))
+        limit = (GROUP / "memory.max").read_text(encoding="ascii").strip()
+        used = int((GROUP / "memory.current").read_text(encoding="ascii"))
     except (OSError, ValueError):
         return None
     return None if limit == "max" else max(float(limit) - used, 0.0)
