@@ -40,6 +40,7 @@ def locked(folder: Path) -> Iterator[None]:
     folder = folder.absolute()
     path = lock_path(folder)
     mine = _owner()
+    made = [each for each in path.parents if not each.exists()]
     _take(path, folder, mine)
     try:
         for above in list(folder.parents)[:DEPTH]:
@@ -48,6 +49,9 @@ def locked(folder: Path) -> Iterator[None]:
     finally:
         if _read(path) == mine:
             path.unlink(missing_ok=True)
+        for each in made:
+            with suppress(OSError):  # it holds a result by now
+                each.rmdir()
 
 
 def check_free(folder: Path) -> None:

@@ -8,8 +8,8 @@ exchanged at the end, so that it may be a mount point, or somebody's working dir
 from __future__ import annotations
 
 import errno
-import glob
 import os
+import re
 import shutil
 import uuid
 from collections.abc import Callable, Iterable, Iterator
@@ -135,7 +135,10 @@ def recover(folder: Path) -> None:
 
     Half-written files go. Where the exchange of an old result for a new one was cut short, the old one comes back.
     """
-    beside = folder.parent.glob(f".{glob.escape(folder.name)}.*{PARTIAL}")
+    folder = folder.absolute()
+    # Other comparisons may be at work in the same parent, under names that begin alike: x_to_y and x_to_y.2.
+    mine = re.compile(rf"\.{re.escape(folder.name)}\.[0-9a-f]{{8}}{re.escape(PARTIAL)}")
+    beside = [path for path in folder.parent.glob(f".*{PARTIAL}") if mine.fullmatch(path.name)]
     for work in [*beside, *folder.glob(f".*{PARTIAL}")]:
         for path in [*work.glob("before/*")]:
             path.replace(folder / path.name)

@@ -31,4 +31,5 @@ def forget(folder: Path) -> None:
 
 
 def _beside(folder: Path) -> Path:
-    return folder.with_name(f".{folder.name}{NAME}")
+    place = folder.absolute()
+    return place.with_name(f".{place.name}{NAME}")

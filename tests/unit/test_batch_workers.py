@@ -6,7 +6,10 @@ import math
 import multiprocessing
 import operator
 import os
+import subprocess
+import sys
 import time
+from pathlib import Path
 
 import pytest
 
@@ -48,3 +51,35 @@ def test_an_interruption_ends_the_running_processes():
     while multiprocessing.active_children() and time.monotonic() - begun < 50:
         time.sleep(0.05)
     assert multiprocessing.active_children() == []
+
+
+def test_workers_end_with_a_parent_that_is_killed(tmp_path):
+    """They would otherwise wait for work for ever, and hold their memory."""
+    code = (
+        "import functools, operator, os, time\nfrom scanstrain.workers import map_in_processes\n"
+        "if __name__ == '__main__':\n"
+        "    work = [os.getpid, functools.partial(time.sleep, 600)]\n"
+        "    for _, answer in map_in_processes(operator.call, work, workers=2, lost=lambda item: None):\n"
+        "        print(answer, flush=True)\n"
+    )
+    script = tmp_path / "parent.py"
+    script.write_text(code, encoding="utf-8")
+    environment = {**os.environ, "PYTHONPATH": str(Path(__file__).parents[2])}
+    parent = subprocess.Popen([sys.executable, script], stdout=subprocess.PIPE, text=True, env=environment)
+    worker = int(parent.stdout.readline())
+    parent.kill()
+    parent.wait()
+    end = time.monotonic() + 30
+    while time.monotonic() < end and _runs(worker):
+        time.sleep(0.05)
+    assert not _runs(worker)
+    parent.stdout.close()
+
+
+def _runs(number):
+    try:
+        os.kill(number, 0)
+        state = Path(f"/proc/{number}/stat")
+        return not state.exists() or state.read_text().rpartition(")")[2].split()[0] != "Z"
+    except ProcessLookupError:
+        return False

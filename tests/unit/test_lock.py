@@ -31,6 +31,15 @@ def test_a_lock_is_there_while_it_is_held_and_says_who_holds_it(tmp_path):
     assert list(tmp_path.iterdir()) == []
 
 
+def test_folders_that_were_made_for_a_lock_go_with_it_unless_they_are_used(tmp_path):
+    with locked(tmp_path / "deep" / "down" / "results"):
+        pass
+    assert list(tmp_path.iterdir()) == []
+    with locked(tmp_path / "deep" / "down" / "results"):
+        (tmp_path / "deep" / "down" / "results").mkdir()
+    assert (tmp_path / "deep" / "down" / "results").exists()
+
+
 def test_two_at_once_are_refused_with_a_sentence(tmp_path):
     busy = f"process {os.getpid()} at work there since"
     with locked(tmp_path / "results"), pytest.raises(OutputError, match=busy), locked(tmp_path / "results"):

@@ -7,7 +7,7 @@ import os
 import pytest
 
 from scanstrain.errors import OptionError, OutputError
-from scanstrain.outputs.folder import check_folder, finished_only, is_ours
+from scanstrain.outputs.folder import check_folder, finished_only, is_ours, recover
 
 
 def names(folder):
@@ -136,3 +136,17 @@ def test_folder_without_permission_is_refused(tmp_path, monkeypatch):
     monkeypatch.setattr("scanstrain.outputs.folder.os.access", lambda path, mode: path != tmp_path)
     with pytest.raises(OutputError, match="no permission to write there; choose another"):
         check_folder(tmp_path / "out")
+
+
+def test_what_others_are_at_work_on_beside_is_left_alone(tmp_path):
+    for name in (
+        ".x_to_y.0123abcd.partial",
+        ".x_to_y.2.0123abcd.partial",
+        ".x_to_y.2.partial",
+        ".other.0123abcd.partial",
+    ):
+        (tmp_path / name).mkdir()
+    recover(tmp_path / "x_to_y")
+    assert {path.name for path in tmp_path.iterdir()} == {
+        ".x_to_y.2.0123abcd.partial", ".x_to_y.2.partial", ".other.0123abcd.partial",
+    }  # fmt: skip

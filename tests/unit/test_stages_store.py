@@ -1,6 +1,8 @@
 # SPDX-License-Identifier: MIT
 """The store of kept stages: what is taken, what is computed again, and that it never stops a run."""
 
+from pathlib import Path
+
 import numpy as np
 import pytest
 
@@ -141,3 +143,9 @@ def test_stages_move_into_the_folder_of_the_result_once_there_is_one(tmp_path):
     assert [path.name for path in stage_folder(folder).iterdir()] == ["field.stage"]
     forget(folder)
     assert list(folder.iterdir()) == []
+
+
+def test_the_present_folder_has_a_place_too(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    assert stage_folder(Path()).resolve() == tmp_path / ".stages"
+    gather(Path())
