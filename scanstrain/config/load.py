@@ -30,9 +30,10 @@ def load_config(path: Path) -> BatchConfig:
     if faults := find_faults(BatchConfig, data):
         raise OptionError(_at_lines(path, text, faults))
     config = BatchConfig.model_validate(data).placed(path.absolute().parent)
-    if faults := find_sites(config)[1]:
+    sites, faults = find_sites(config)
+    if faults:
         raise OptionError(_at_lines(path, text, faults))
-    return config
+    return config if config.place else sites[0].batch
 
 
 def sites_of(config: BatchConfig) -> tuple[Site, ...]:

@@ -1,7 +1,8 @@
 # SPDX-License-Identifier: MIT
 """Batches: two workers over one, a Dask cluster on loopback over local processes, and runs that are killed.
 
-python tests/benchmarks/bench_batch.py [speed] [kill] [--comparisons 4] [--points 60000] [--kills 50] [--seed 0]
+python tests/benchmarks/bench_batch.py [speed] [kill] [--comparisons 4] [--points 60000] [--plain]
+    [--kills 50] [--kill-points 4000] [--seed 0]
 
 Machines are noisy: take the ratios, and run it on an idle one.
 """
@@ -96,8 +97,8 @@ def cluster(workers):
             process.wait()
 
 
-def bench_speed(folder, comparisons, points):
-    job = write_batch(folder, comparisons, points, report=True)
+def bench_speed(folder, comparisons, points, *, report):
+    job = write_batch(folder, comparisons, points, report=report)
     timed(job, "--only", "e1")  # compiles
     one = timed(job, "--workers", "1", env=ONE_THREAD)
     threads = timed(job, "--workers", "1")
@@ -111,7 +112,7 @@ def bench_speed(folder, comparisons, points):
         killer.start()
         alone = timed(job, "--scheduler", address)
         same_alone = results(folder / "results") == wanted
-    print(f"{comparisons} comparisons of 2 x {points} points, report included")
+    print(f"{comparisons} comparisons of 2 x {points} points, report {'included' if report else 'left out'}")
     print(f"  one process, one thread      {one:7.1f} s")
     print(f"  one process, all threads     {threads:7.1f} s")
     print(
@@ -192,6 +193,7 @@ def main():
     parser.add_argument("--points", type=int, default=60_000)
     parser.add_argument("--kills", type=int, default=50)
     parser.add_argument("--kill-points", type=int, default=4_000)
+    parser.add_argument("--plain", action="store_true", help="without report.html")
     parser.add_argument("--seed", type=int, default=0)
     given = parser.parse_args()
     print(machine(), flush=True)
@@ -199,7 +201,7 @@ def main():
         if "speed" in given.parts:
             place = Path(folder, "speed")
             place.mkdir()
-            bench_speed(place, given.comparisons, given.points)
+            bench_speed(place, given.comparisons, given.points, report=not given.plain)
         if "kill" in given.parts:
             place = Path(folder, "kill")
             place.mkdir()

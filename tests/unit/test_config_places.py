@@ -81,6 +81,7 @@ def test_the_name_of_a_place_may_stand_twice_and_must_then_agree(batch):
 def test_a_pattern_without_places_leads_to_one_file(batch, tmp_path):
     path = batch(["2031-01_x.laz", "2031-06_x.laz", ".2031-06_y.laz"], places=(),
                  epochs=[("january", "2031-01_*.laz"), ("june", "2031-?6_*.laz")])  # fmt: skip
+    assert [entry.file.name for entry in load_config(path).epoch] == ["2031-01_x.laz", "2031-06_x.laz"]
     (job,) = plan_jobs(load_config(path))
     assert (job.name, job.folder) == ("january_to_june", tmp_path / "results" / "january_to_june")
     assert (job.reference.name, job.current.name) == ("2031-01_x.laz", "2031-06_x.laz")
