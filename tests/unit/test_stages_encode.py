@@ -95,6 +95,7 @@ class Trap:
         b"", b"PK", pickle.dumps(Trap()),
         made({"class": "Popen", "fields": {"args": "true"}}),
         made({"class": "SharedNoise", "fields": {"share": 0.1}}),
+        made({"class": "Shape", "fields": {"structure": "free"}}),
         made({"class": "SharedNoise", "fields": {"share": 0.1, "length": 0.2, "more": 1}}),
         made({"class": "SharedNoise", "fields": {"share": 0.1, "length": 0.2}, "more": 1}),
         made({"array": 0}), made({"array": 5}, a0=np.zeros(1)), made({"array": "0"}, a0=np.zeros(1)),
