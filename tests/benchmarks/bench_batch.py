@@ -40,11 +40,11 @@ DENSITY = 10_000
 
 
 def write_scan(path, points, seed):
-    """A textured wall with a gentle relief; epochs differ by their seed and a small bulge."""
+    """A textured wall with a gentle relief; every second epoch has a small bulge."""
     rng = np.random.default_rng(seed)
     length = np.sqrt(points / DENSITY / 0.7)
     x, z = rng.uniform(0, length, points), rng.uniform(0, 0.7 * length, points)
-    bulge = 3e-3 * seed * np.exp(-((x - length / 2) ** 2 + (z - 0.3) ** 2) / 0.05)
+    bulge = 3e-3 * (seed % 2) * np.exp(-((x - length / 2) ** 2 + (z - 0.3) ** 2) / 0.05)
     las = laspy.LasData(laspy.LasHeader(point_format=6, version="1.4"))
     las.header.scales, las.header.offsets = [1e-5] * 3, [482310.0, 5391270.0, 100.0]
     las.x, las.z = x + 482310.0, z + 100.0
