@@ -15,13 +15,7 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import make_cells, median_spacing
 from scanstrain.epoch import Epoch
-from scanstrain.neighbourhood.affine import (
-    CELLS_ACROSS,
-    Requirements,
-    gauge_status,
-    pair_of_textures,
-    units_of,
-)
+from scanstrain.neighbourhood.finish import gauge_status
 from scanstrain.neighbourhood.fit import POINTS
 from scanstrain.neighbourhood.gauges import turned_curvature
 from scanstrain.neighbourhood.joint_cuts import Cuts, cuts_at
@@ -29,7 +23,9 @@ from scanstrain.neighbourhood.joint_jumps import JointJumps, Side, jumps_between
 from scanstrain.neighbourhood.joint_lines import Joint, Trace, lay_on_surface, pieces_of
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
 from scanstrain.neighbourhood.result import AffineField, Status
+from scanstrain.neighbourhood.setting import CELLS_ACROSS, Requirements, units_of
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells
+from scanstrain.neighbourhood.textures import pair_of_textures
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
