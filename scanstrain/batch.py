@@ -99,20 +99,25 @@ def compare_to_folder(
     check_result_folder(folder, [reference, current])
     from scanstrain.outputs import write_result
     from scanstrain.pipeline import compare_files
+    from scanstrain.result import Result
 
     result = compare_files(
         reference, current, config, assume_same_crs=assume_same_crs, labels=labels, progress=progress
     )
     options = config.output
-    write_result(
-        result,
-        folder,
-        colour_by=options.colour_by,
-        colour_limits=options.colour_limits,
-        no_data=options.no_data_number,
-        only_significant=options.only_significant,
-        report=options.report,
-    )
+    try:
+        write_result(
+            result,
+            folder,
+            colour_by=options.colour_by,
+            colour_limits=options.colour_limits,
+            no_data=options.no_data_number,
+            only_significant=options.only_significant,
+            report=options.report,
+        )
+    finally:
+        if isinstance(result, Result):
+            result.close()
     summary: dict[str, Any] = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
     return summary
 

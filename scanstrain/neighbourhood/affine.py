@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import BLOCK_WIDTH, median_spacing
+from scanstrain.cells import BLOCK_WIDTH
 from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.finish import finish
 from scanstrain.neighbourhood.fitting import joined, some_of
@@ -96,21 +96,44 @@ def fit_affine(
     FitError
         No gauge anywhere could be fitted.
     """
-    spacing = max(median_spacing(reference.points), median_spacing(current.points))
-    extent = float(np.ptp(reference.points, axis=0).max())
-    setting = Setting(
+    source = InMemory(reference, current)
+    setting = setting_for(
+        source,
+        gauge_length=gauge_length,
+        gauge_spacing=gauge_spacing,
+        resolution=resolution,
+        use_intensity=use_intensity,
+        min_points=min_points,
+        required_displacement_sd=required_displacement_sd,
+        required_strain_sd=required_strain_sd,
+    )
+    return fit_pieces(source, setting, free_side=free_side, axis=axis, joints=joints, progress=progress)
+
+
+def setting_for(
+    source: Source,
+    *,
+    gauge_length: float,
+    gauge_spacing: float | None,
+    resolution: float | None,
+    use_intensity: bool,
+    min_points: int,
+    required_displacement_sd: float | None,
+    required_strain_sd: float | None,
+    spacing: float | None = None,
+) -> Setting:
+    """Check the options of `fit_affine` and choose what they leave open; `spacing` of the points [m] if it is known."""
+    spacing = source.spacing() if spacing is None else spacing
+    return Setting(
         gauge_length,
         gauge_spacing or gauge_length / 4,
-        cell_width(spacing, extent, gauge_length, resolution),
+        cell_width(spacing, source.extent(), gauge_length, resolution),
         use_intensity,
         min_points,
         Requirements(
             displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
             strain=required_strain_sd or REQUIRED_STRAIN_SD,
         ),
-    )
-    return fit_pieces(
-        InMemory(reference, current), setting, free_side=free_side, axis=axis, joints=joints, progress=progress
     )
 
 
@@ -171,7 +194,7 @@ def fit_pieces(
 def _lines(source: Source, setting: Setting, joints: Sequence[Joint]) -> Lines:
     """Lay the joints on the reference surface near them."""
     reach = 2 * setting.radius + BLOCKS * BLOCK_WIDTH * setting.width
-    near = [source.near(joint.line, reach)[0].points for joint in joints]
+    near = [source.near([joint.line], reach)[0].points for joint in joints]
     return lay_lines(joints, near, setting.width, setting.radius)
 
 

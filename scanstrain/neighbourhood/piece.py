@@ -10,7 +10,7 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import KEY_BITS, group, voxel_keys
+from scanstrain.cells import KEY_BITS, group, median_spacing, voxel_keys
 from scanstrain.epoch import Epoch
 from scanstrain.neighbourhood.intensity import Survey, survey
 
@@ -66,8 +66,14 @@ class Source(Protocol):
     def cut(self, box: Box, halo: float) -> tuple[Epoch, Epoch]:
         """Both epochs within a box and `halo` about it [m], points in their first order."""
 
-    def near(self, line: FloatArray, reach: float) -> tuple[Epoch, Epoch]:
-        """Both epochs within `reach` of a line (k, 3) [m], and somewhat farther."""
+    def near(self, lines: Sequence[FloatArray], reach: float) -> tuple[Epoch, Epoch]:
+        """Both epochs within `reach` of lines (k, 3) [m], and somewhat farther."""
+
+    def spacing(self) -> float:
+        """Point spacing of the coarser epoch [m]."""
+
+    def extent(self) -> float:
+        """Longest side of the reference epoch [m]."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,13 +110,21 @@ class InMemory:
         ours, theirs = self.reference, self.current
         return survey(ours.intensity, ours.setup), survey(theirs.intensity, theirs.setup)
 
-    def near(self, line: FloatArray, reach: float) -> tuple[Epoch, Epoch]:
-        """Both epochs about a line."""
+    def near(self, lines: Sequence[FloatArray], reach: float) -> tuple[Epoch, Epoch]:
+        """Both epochs about some lines."""
         ours, theirs = self.reference, self.current
         return (
-            part_of(ours, beside(ours.points, line, reach)),
-            part_of(theirs, beside(theirs.points, line, reach)),
+            part_of(ours, beside(ours.points, lines, reach)),
+            part_of(theirs, beside(theirs.points, lines, reach)),
         )
+
+    def spacing(self) -> float:
+        """Point spacing of the coarser epoch [m]."""
+        return max(median_spacing(self.reference.points), median_spacing(self.current.points))
+
+    def extent(self) -> float:
+        """Longest side of the reference epoch [m]."""
+        return float(np.ptp(self.reference.points, axis=0).max())
 
 
 def part_of(epoch: Epoch, chosen: NDArray[np.bool_]) -> Epoch:
@@ -125,13 +139,15 @@ def part_of(epoch: Epoch, chosen: NDArray[np.bool_]) -> Epoch:
     )
 
 
-def beside(points: FloatArray, line: FloatArray, reach: float) -> NDArray[np.bool_]:
-    """Say which points lie in a voxel of width `reach` [m] that a line (k, 3) passes through, or in one next to it."""
-    corner = np.r_[0.0, np.cumsum(np.linalg.norm(np.diff(line, axis=0), axis=1))]
-    along = np.linspace(0.0, corner[-1], int(np.ceil(2.0 * corner[-1] / reach)) + 2)
-    places = np.column_stack([np.interp(along, corner, column) for column in line.T])
+def beside(points: FloatArray, lines: Sequence[FloatArray], reach: float) -> NDArray[np.bool_]:
+    """Say which points lie in a voxel of width `reach` [m] that one of the lines (k, 3) meets, or in one next to it."""
+    places = []
+    for line in lines:
+        corner = np.r_[0.0, np.cumsum(np.linalg.norm(np.diff(line, axis=0), axis=1))]
+        along = np.linspace(0.0, corner[-1], int(np.ceil(2.0 * corner[-1] / reach)) + 2)
+        places.append(np.column_stack([np.interp(along, corner, column) for column in line.T]))
     steps = [(i << (2 * KEY_BITS)) + (j << KEY_BITS) + k for i in (-1, 0, 1) for j in (-1, 0, 1) for k in (-1, 0, 1)]
-    wanted = np.unique(voxel_keys(places, reach)[:, None] + np.array(steps))
+    wanted = np.unique(voxel_keys(np.concatenate(places), reach)[:, None] + np.array(steps))
     return np.isin(voxel_keys(points, reach), wanted)
 
 

@@ -20,12 +20,12 @@ from scanstrain.neighbourhood.setting import Setting
 
 IntArray = NDArray[np.int64]
 
-HALO = 2.0
+HALO = 2.5
 """So far about its own box a piece sees points, in gauge lengths: patches of the gauges beyond the border, which move
 the cells that its own gauges look at, are whole then."""
 SETUPS_HALO = 1.5
 """The same on top of it where intensities of several set-ups are levelled, each over a neighbourhood of its own."""
-RING = 1.0
+RING = 1.5
 """So far about its own box a piece fits gauges, in gauge lengths."""
 BLOCKS = 4.0
 """Points so far about a box decide on the cells in it, in block widths."""
