@@ -343,7 +343,7 @@ def median_spacing(points: FloatArray, *, sample: int = 5000) -> float:
     from scipy.spatial import cKDTree
 
     wanted = 8
-    drawn = points[_hashes(points) % np.uint64(max(1, len(points) // sample)) == 0]
+    drawn = points[point_hashes(points) % np.uint64(max(1, len(points) // sample)) == 0]
     if len(drawn) == 0:
         drawn = points
     distance, _ = cKDTree(points).query(drawn, k=min(4 * wanted, len(points)), workers=-1)
@@ -356,7 +356,7 @@ def median_spacing(points: FloatArray, *, sample: int = 5000) -> float:
     return float(np.median(radius) * np.sqrt(np.pi / wanted))
 
 
-def _hashes(points: FloatArray) -> NDArray[np.uint64]:
+def point_hashes(points: FloatArray) -> NDArray[np.uint64]:
     """Mix the bits of every point's coordinates (multiplicative hashing, Knuth)."""
     bits = np.ascontiguousarray(points, np.float64).view(np.uint64)
     mixed = np.zeros(len(points), np.uint64)

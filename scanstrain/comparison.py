@@ -172,16 +172,19 @@ def _compute(
         )
         if progress:
             progress("write", COMPUTING)
-        write_result(
-            result,
-            folder,
-            colour_by=options.colour_by,
-            colour_limits=options.colour_limits,
-            no_data=options.no_data_number,
-            only_significant=options.only_significant,
-            report=options.report,
-            request=request,
-        )
+        try:
+            write_result(
+                result,
+                folder,
+                colour_by=options.colour_by,
+                colour_limits=options.colour_limits,
+                no_data=options.no_data_number,
+                only_significant=options.only_significant,
+                report=options.report,
+                request=request,
+            )
+        finally:
+            result.close()
     return store
 
 

@@ -74,11 +74,17 @@ class Epoch:
 
     def moved(self, T: FloatArray) -> Epoch:
         """Return the epoch with its local points transformed by the 4x4 matrix `T`."""
-        return replace(self, points=self.points @ T[:3, :3].T + T[:3, 3])
+        return replace(self, points=moved_points(self.points, T))
 
     def shifted(self, origin: FloatArray) -> Epoch:
         """Return the same points relative to another origin [m]."""
         return replace(self, points=self.points + (self.origin - origin), origin=np.asarray(origin, float))
+
+
+def moved_points(points: FloatArray, T: FloatArray) -> FloatArray:
+    """Transform points (n, 3) by a 4x4 matrix, each the same to the last bit in whatever company it comes."""
+    x, y, z = points.T
+    return np.stack([T[i, 0] * x + T[i, 1] * y + T[i, 2] * z + T[i, 3] for i in range(3)], axis=1)
 
 
 def make_epoch(

@@ -26,7 +26,7 @@ MOSTLY = 0.5
 
 
 def gauges_of_zones(
-    field: AffineField, reference: Epoch, config: CompareConfig, unrolled: Unrolled | None
+    field: AffineField, reference: Epoch, config: CompareConfig, unrolled: Unrolled | None, *, thinning: int = 1
 ) -> dict[str, BoolArray]:
     """Say which gauges belong to each zone.
 
@@ -37,6 +37,8 @@ def gauges_of_zones(
     config : CompareConfig
     unrolled : Unrolled, optional
         Reference points on the structure laid flat.
+    thinning : int
+        One in how many of all reference points `reference` holds.
 
     Returns
     -------
@@ -50,7 +52,8 @@ def gauges_of_zones(
     from scanstrain.strain import share_around
 
     return {
-        zone.name: share_around(field, reference.points, mask_of((zone,), reference, unrolled)) >= MOSTLY
+        zone.name: share_around(field, reference.points, mask_of((zone,), reference, unrolled), thinning=thinning)
+        >= MOSTLY
         for zone in config.zones()
     }
 

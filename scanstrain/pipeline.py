@@ -6,39 +6,20 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
-
-import numpy as np
-from numpy.typing import NDArray
+from typing import Any
 
 from scanstrain.clock import Clock, Progress
 from scanstrain.config import CompareConfig, config_from_options
-from scanstrain.datum import check_setups, datum_options
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
-from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.result import Result
-from scanstrain.shape import Shape, places_on, sections_of, shape_of, wall_movement
-from scanstrain.zones import Unrolled
+from scanstrain.spread import values_at
+from scanstrain.steps import Material, aligned, at, fitted, registered, strained
+from scanstrain.tiles import thinned
 
-if TYPE_CHECKING:  # the stages compile when they are loaded
-    from scanstrain.neighbourhood.joint_jumps import JointJumps
-    from scanstrain.neighbourhood.joint_lines import Joint
-    from scanstrain.neighbourhood.result import AffineField
-    from scanstrain.registration.result import Registration
-    from scanstrain.strain.calibration import Calibration
-    from scanstrain.strain.result import StrainField
-
-FloatArray = NDArray[np.float64]
 EpochLabel = tuple[str, str | None]
 Keep = Callable[[str, Callable[[], Any]], Any]
 """Given the name of a stage and what computes it, returns its result: computed, or kept from an earlier run."""
-
-AUTO_SPACINGS = 60.0
-"""Gauge length of `gauge_length = "auto"`, in point spacings: some 2 800 points a gauge, which brings the noise of a
-normal displacement down to about a twenty-fifth of that of a point."""
-AUTO_SHARE = 0.25
-"""The same never exceeds this share of the object's extent."""
 
 
 def compute_always(_stage: str, compute: Callable[[], Any]) -> Any:
@@ -87,6 +68,8 @@ def compare_files(
     from scanstrain.io import check_same_frame, read_scan
 
     clock = Clock(progress)
+    if in_tiles(reference, current, config):
+        return _compare_tiled(reference, current, config, clock, keep, assume_same_crs=assume_same_crs, labels=labels)
     with clock.stage("read", 0.0):
         first = read_scan(reference)
         second = read_scan(current, origin=first.origin)
@@ -94,6 +77,59 @@ def compare_files(
     if labels:
         first, second = _named(first, *labels[0]), _named(second, *labels[1])
     return _compare(first, second, config, clock, notices, keep)
+
+
+def in_tiles(reference: Path, current: Path, config: CompareConfig) -> bool:
+    """Whether two files are worked on in tiles.
+
+    Raises
+    ------
+    OptionError
+        Tiles are asked for, and a file is no LAS or LAZ file.
+    """
+    from scanstrain.io.las import SUFFIXES
+    from scanstrain.io.las_mapped import count_points
+    from scanstrain.tiles import TILED_FROM
+
+    asked = config.neighbourhood.tiles
+    other = [path for path in (reference, current) if path.suffix.lower() not in SUFFIXES]
+    if asked is True and other:
+        got = other[0].name
+        raise OptionError(explain("tiles", "LAS or LAZ files", got, "export the scans as LAZ, or leave tiles out"))
+    if asked is False or other:
+        return False
+    return asked is True or max(count_points(path) for path in (reference, current)) >= TILED_FROM
+
+
+def _compare_tiled(
+    reference: Path,
+    current: Path,
+    config: CompareConfig,
+    clock: Clock,
+    keep: Keep,
+    *,
+    assume_same_crs: bool,
+    labels: tuple[EpochLabel, EpochLabel] | None,
+) -> Result:
+    """Compare with points, tiles and values on disk, in a folder that goes with the result."""
+    from tempfile import TemporaryDirectory
+
+    from scanstrain.io import check_same_frame
+    from scanstrain.io.las_mapped import read_mapped
+
+    scratch = TemporaryDirectory(prefix="scanstrain-tiles-")
+    try:
+        folder = Path(scratch.name)
+        with clock.stage("read", 0.0):
+            first = read_mapped(reference, folder / "reference")
+            second = read_mapped(current, folder / "current", origin=first.origin)
+            notices = check_same_frame(first, second, assume_same_crs=assume_same_crs)
+        if labels:
+            first, second = _named(first, *labels[0]), _named(second, *labels[1])
+        return replace(_compare(first, second, config, clock, notices, keep, folder), scratch=scratch)
+    except BaseException:
+        scratch.cleanup()
+        raise
 
 
 def compare_epochs(
@@ -118,22 +154,30 @@ def compare_epochs(
 
 
 def _compare(
-    reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock, notices: tuple[str, ...], keep: Keep
+    reference: Epoch,
+    current: Epoch,
+    config: CompareConfig,
+    clock: Clock,
+    notices: tuple[str, ...],
+    keep: Keep,
+    folder: Path | None = None,
 ) -> Result:
-    from scanstrain.strain import blend_to_points
-
-    found = keep("registration", lambda: _register(reference, current, config, clock))
-    shape, registration, seams, doubts, (aligned, current_aligned) = found
-    reference, current = _at(reference, aligned), _at(current, current_aligned)
-    unrolled = shape.unroll(reference.points)
-    moved = current.moved(registration.T_ref_cur)
-    affine, joints = keep("field", lambda: _field(reference, moved, shape, config, clock))
+    # What concerns the object as a whole is judged on points drawn from a large scan, in tiles or not.
+    few = thinned(reference), thinned(current)
+    found = keep("registration", lambda: registered(*few, config, clock))
+    shape, registration, seams, doubts, moved_setups = found
+    ours, theirs = (at(each, points) for each, points in zip(few, moved_setups, strict=True))
+    reference, current = aligned(reference, few[0], ours), aligned(current, few[1], theirs)
+    material = Material(reference, current, ours, registration.T_ref_cur, config, folder)
+    affine, joints = keep("field", lambda: fitted(material, shape, config, clock))
     affine, calibration, more_doubts, strain, zones, bodies, sections, wall = keep(
-        "strain", lambda: _strained(reference, moved, affine, registration, shape, unrolled, config, clock)
+        "strain", lambda: strained(material, affine, registration, shape, config, clock)
     )
     with clock.stage("points", 0.85):
-        points = blend_to_points(strain, reference.points)
-        points |= {"stable": registration.stable.astype(np.uint8), **places_on(unrolled)}
+        place = None if folder is None else folder / "values"
+        points = values_at(
+            strain, reference, shape, registration, config, place, lambda s: clock.say("points", 0.85 + 0.1 * s)
+        )
     clock.say("done", 1.0)
     targets = registration.targets.warnings if registration.targets else ()
     before = (*notices, *shape.warnings, *doubts, *targets, *registration.warnings)
@@ -157,142 +201,6 @@ def _compare(
         wall=wall,
         joints=joints,
     )
-
-
-def _register(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clock) -> tuple[Any, ...]:
-    """Run all that comes before the gauges; aligned set-ups are handed on as points, or None where nothing moved."""
-    from scanstrain.registration import register
-
-    align = config.registration.align_setups
-    with clock.stage("set-ups", 0.06):
-        first, own_seams, own_doubts = check_setups(reference, align=align)
-        second, seams, more_doubts = check_setups(current, align=align)
-    with clock.stage("structure", 0.08):
-        shape = shape_of(first, config)
-        unrolled = shape.unroll(first.points)
-    with clock.stage("registration", 0.1):
-        registration = register(first, second, **datum_options(first, config, unrolled))
-    aligned = tuple(None if new is old else new.points for new, old in ((first, reference), (second, current)))
-    return shape, registration, {"reference": own_seams, "current": seams}, (*own_doubts, *more_doubts), aligned
-
-
-def _at(epoch: Epoch, points: FloatArray | None) -> Epoch:
-    """Return the epoch with its set-ups aligned."""
-    return epoch if points is None else replace(epoch, points=points)
-
-
-def _field(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, clock: Clock) -> tuple[Any, ...]:
-    """Run the neighbourhood stage, joints included."""
-    with clock.stage("neighbourhood", 0.3):
-        affine = _fit(reference, moved, shape, config, clock)
-        return affine, _joints(reference, moved, affine, config)
-
-
-def _strained(
-    reference: Epoch,
-    moved: Epoch,
-    affine: AffineField,
-    registration: Registration,
-    shape: Shape,
-    unrolled: Unrolled | None,
-    config: CompareConfig,
-    clock: Clock,
-) -> tuple[Any, ...]:
-    """Run all that comes after the gauges but the way back to the points."""
-    from scanstrain.strain import calibrate
-
-    with clock.stage("strain", 0.8):
-        affine, calibration, doubts = calibrate(affine, registration, reference.points)
-        strain = _strain(affine, registration, calibration, shape, config)
-        zones = gauges_of_zones(affine, reference, config, unrolled)
-        bodies = bodies_of(affine, registration, zones)
-    with clock.stage("sections", 0.83):
-        sections = sections_of(shape, reference, moved, registration, config)
-        wall = wall_movement(shape, affine, registration, config)
-    return affine, calibration, doubts, strain, zones, bodies, sections, wall
-
-
-def _fit(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, clock: Clock) -> AffineField:
-    """Run the neighbourhood stage with its options."""
-    from scanstrain.neighbourhood import fit_affine
-
-    options, free_side = config.neighbourhood, config.strain.free_side
-    return fit_affine(
-        reference,
-        moved,
-        gauge_length=_number(options.gauge_length) or auto_gauge_length(reference, moved),
-        gauge_spacing=_number(options.gauge_spacing),
-        resolution=_number(options.resolution),
-        use_intensity=options.use_intensity,
-        min_points=options.min_points,
-        required_displacement_sd=_number(options.required_displacement_sd),
-        required_strain_sd=_number(options.required_strain_sd),
-        free_side=None if free_side is None else np.array(free_side) - reference.origin,
-        axis=shape.guide(),
-        joints=_joint_lines(reference, config),
-        progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
-    )
-
-
-def _joint_lines(reference: Epoch, config: CompareConfig) -> tuple[Joint, ...]:
-    from scanstrain.neighbourhood.joint_lines import Joint
-
-    origin = reference.origin.tolist()
-    return tuple(Joint(each.name, np.array(each.local_line(origin)), each.width) for each in config.joint)
-
-
-def _joints(reference: Epoch, moved: Epoch, affine: AffineField, config: CompareConfig) -> tuple[JointJumps, ...]:
-    """Measure what the joints did that the user named."""
-    if not config.joint:
-        return ()
-    from scanstrain.neighbourhood.joints import measure_joints
-
-    options = config.neighbourhood
-    return measure_joints(
-        reference,
-        moved,
-        affine,
-        _joint_lines(reference, config),
-        use_intensity=options.use_intensity,
-        min_points=options.min_points,
-        required_displacement_sd=_number(options.required_displacement_sd),
-        required_strain_sd=_number(options.required_strain_sd),
-    )
-
-
-def _strain(
-    affine: AffineField, registration: Registration, calibration: Calibration, shape: Shape, config: CompareConfig
-) -> StrainField:
-    """Run the strain stage with its options."""
-    from scanstrain.strain import compute_strain
-
-    options = config.strain
-    return compute_strain(
-        affine,
-        registration=registration,
-        measure=options.measure,
-        structure=options.structure,
-        thickness=options.thickness,
-        axis=shape.directions(affine.position),
-        false_discovery_rate=options.false_discovery_rate,
-        known={"stable": calibration.steady, **places_on(shape.unroll(affine.position))},
-    )
-
-
-def auto_gauge_length(reference: Epoch, current: Epoch) -> float:
-    """Choose a gauge length [m] from the point spacing and the extent, to two digits."""
-    from scanstrain.cells import median_spacing
-
-    spacing = max(median_spacing(reference.points), median_spacing(current.points))
-    length = min(AUTO_SPACINGS * spacing, AUTO_SHARE * float(np.ptp(reference.points, axis=0).max()))
-    if not length > 0:
-        raise OptionError(explain("gauge_length", "scans with distinct points", "coincident ones", "export them again"))
-    return float(f"{length:.2g}")
-
-
-def _number(value: float | str) -> float | None:
-    """Turn the word auto into None."""
-    return None if isinstance(value, str) else float(value)
 
 
 def _named(epoch: Epoch, label: str, date: str | None) -> Epoch:

@@ -6,6 +6,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 from dataclasses import field as default
+from tempfile import TemporaryDirectory
 from typing import Any
 
 import numpy as np
@@ -66,6 +67,8 @@ class Result:
         Movement of the face of a wall and of its parts.
     joints : tuple of JointJumps
         What the joints did that the user named.
+    scratch : optional
+        Holds the files of arrays that do not live in memory.
     """
 
     reference: Epoch
@@ -85,6 +88,12 @@ class Result:
     sections: tuple[Section, ...] = ()
     wall: WallResult | None = None
     joints: tuple[JointJumps, ...] = ()
+    scratch: TemporaryDirectory[str] | None = None
+
+    def close(self) -> None:
+        """Remove the files behind the arrays of a result from tiles, which cannot be used after that."""
+        if self.scratch is not None:
+            self.scratch.cleanup()
 
     @property
     def gauge_positions(self) -> FloatArray:

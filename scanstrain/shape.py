@@ -144,34 +144,61 @@ def places_on(unrolled: Unrolled | None) -> dict[str, NDArray[np.generic]]:
 
 
 def sections_of(
-    shape: Shape, reference: Epoch, current: Epoch, registration: Registration, config: CompareConfig
+    shape: Shape,
+    points: tuple[FloatArray, FloatArray],
+    registration: Registration,
+    config: CompareConfig,
+    thickness: float | None = None,
 ) -> tuple[Section, ...]:
     """Cut sections through both epochs of a tunnel; none through anything else.
 
     Parameters
     ----------
     shape : Shape
-    reference, current : Epoch
-        `current` already registered.
+    points : pair of ndarray of shape (n, 3)
+        Of both epochs, the current one registered [m].
     registration : Registration
         Its error is part of that of movements, not of lengths.
     config : CompareConfig
+    thickness : float, optional
+        Of a slice [m], where `points` are only those near sections.
     """
     if shape.axis is None:
         return ()
     from scanstrain.structures import cut_sections
 
     options = config.tunnel
-    spacing = options.section_spacing
+    given = thickness if isinstance(options.section_thickness, str) else options.section_thickness
     return cut_sections(
         shape.axis,
-        reference.points,
-        current.points,
-        spacing=auto_spacing(shape.axis.radius) if isinstance(spacing, str) else spacing,
-        thickness=None if isinstance(options.section_thickness, str) else options.section_thickness,
+        *points,
+        spacing=_section_spacing(shape.axis, config),
+        thickness=given,
         chords=options.chords,
         datum=registration.displacement_covariance,
     )
+
+
+def near_sections(
+    shape: Shape, config: CompareConfig, spacing: float
+) -> tuple[Callable[[FloatArray], NDArray[np.int64]], float] | None:
+    """Return what says which places (n, 3) are near a section, and the thickness of slices [m]; None without an axis.
+
+    `spacing` is that of the points of the coarser epoch [m].
+    """
+    if shape.axis is None:
+        return None
+    from scanstrain.structures.sections import section_chainages, slice_thickness
+
+    axis, asked = shape.axis, config.tunnel.section_thickness
+    thickness = slice_thickness(spacing) if isinstance(asked, str) else asked
+    chainages = section_chainages(axis, _section_spacing(axis, config), thickness)
+    return lambda places: axis.near(places, chainages, thickness / 2), thickness
+
+
+def _section_spacing(axis: Axis, config: CompareConfig) -> float:
+    spacing = config.tunnel.section_spacing
+    return auto_spacing(axis.radius) if isinstance(spacing, str) else spacing
 
 
 def auto_spacing(radius: float) -> float:

@@ -23,6 +23,10 @@ Hour = Annotated[float, Field(ge=0, le=12)]
 Chords = Annotated[tuple[Annotated[tuple[Hour, Hour], Strict(False)], ...], Strict(False)]
 
 
+FEWEST_IN_TILE = 10_000
+"""Points of a tile below which it would be all border."""
+
+
 class RegistrationOptions(Options):
     """How the current epoch is brought into the reference frame."""
 
@@ -130,6 +134,23 @@ class NeighbourhoodOptions(Options):
         description="Largest standard error at which an in-plane strain counts as observable [1]. Default auto:"
         " 0.001, because a vaguer one cannot tell cracking from nothing.",
     )
+    tiles: bool | Auto = Field(
+        default="auto",
+        description="Work on the scans in tiles, from disk, so that memory does not grow with them; LAS and LAZ only."
+        " Default auto: from six million points a scan, because below that one piece is quicker.",
+    )
+    tile_points: int | Auto = Field(
+        default="auto",
+        description="Points of one scan in a tile and about it [1]. Default auto: 1.8 million, which take some 2.5 GB"
+        " of memory.",
+    )
+
+    @field_validator("tile_points")
+    @classmethod
+    def _enough_for_a_tile(cls, value: int | str) -> int | str:
+        if isinstance(value, int) and value < FEWEST_IN_TILE:
+            refuse(f"at least {FEWEST_IN_TILE}", f"{value}", "make it larger or leave it out")
+        return value
 
     @field_validator("gauge_spacing", "resolution")
     @classmethod

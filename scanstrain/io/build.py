@@ -60,10 +60,10 @@ def build_epoch(raw: RawScan, *, origin: ArrayLike | None, label: str | None) ->
         raw.coordinates *= factors
     screening = screen(raw.coordinates, without_value=raw.without_value, withheld=raw.withheld)
     total, kept = len(screening.kept), len(screening.kept) - screening.dropped
-    _check_kept(raw.path, total, kept, screening.notices)
+    check_kept(raw.path, total, kept, screening.notices)
     everything = kept == total
     chosen: Any = slice(None) if everything else screening.kept
-    notices = raw.notices + raw.frame.notices + screening.notices + _step_notices(raw.step * max(factors))
+    notices = raw.notices + raw.frame.notices + screening.notices + step_notices(raw.step * max(factors))
     provenance = Provenance(
         path=str(raw.path), sha256=sha256(raw.path), crs=raw.frame.wkt, unit=raw.frame.unit, date=raw.date,
         file_points=total, dropped_points=total - kept, notices=notices, header=raw.header,
@@ -82,7 +82,8 @@ def build_epoch(raw: RawScan, *, origin: ArrayLike | None, label: str | None) ->
     return replace(epoch, label=raw.path.stem if label is None else label)
 
 
-def _check_kept(path: Path, total: int, kept: int, notices: tuple[str, ...]) -> None:
+def check_kept(path: Path, total: int, kept: int, notices: tuple[str, ...]) -> None:
+    """Refuse a file of which too few points serve."""
     if 2 * kept < total:
         got = "; ".join(notices) + f" of {total}"
         raise InputFileError(explain(str(path), "a scan of which most points serve", got, "export the scan again"))
@@ -102,7 +103,8 @@ def _varying(values: NDArray[np.generic] | None, chosen: Any) -> NDArray[np.floa
     return np.asarray(part, np.float32)
 
 
-def _step_notices(step: float) -> tuple[str, ...]:
+def step_notices(step: float) -> tuple[str, ...]:
+    """Say so where coordinates are stored in coarse steps [m]."""
     if step <= COARSE_STEP * (1 + 1e-9):
         return ()
     return (

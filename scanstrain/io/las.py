@@ -5,7 +5,9 @@ from __future__ import annotations
 
 import datetime as dt
 import struct
+from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -44,19 +46,37 @@ def read_las(path: Path, *, origin: ArrayLike | None = None, label: str | None =
         header counts, the coordinates are degrees, or too few points serve (see `scanstrain.io.screening`).
     """
     header = read_header(path)
-    return build_epoch(_read_points(header), origin=origin, label=label)
+    return build_epoch(read_points(header), origin=origin, label=label)
 
 
-def _read_points(header: LasHeader) -> RawScan:
+def _in_memory(_name: str, shape: tuple[int, ...], dtype: Any) -> NDArray[Any]:
+    return np.zeros(shape, dtype)
+
+
+def read_points(header: LasHeader, make: Callable[[str, tuple[int, ...], Any], NDArray[Any]] = _in_memory) -> RawScan:
+    """Read what an epoch needs of every point of a checked file.
+
+    Parameters
+    ----------
+    header : LasHeader
+    make : callable
+        Makes an array by its name, shape and type, in memory or elsewhere.
+
+    Raises
+    ------
+    InputFileError
+        As of `read_las`.
+    """
     source_fields(header)
     frame = read_frame(header)  # both refuse a file before its points are read
     dtype = lay.record_dtype(header.point_format, header.record_length)
     wide = lay.has_wide_flags(header.point_format)
     n = header.count
-    xyz = np.empty((n, 3))
-    intensity, setup = np.empty(n, np.uint16), np.empty(n, np.uint16)
-    classification, withheld, lost = np.empty(n, np.uint8), np.zeros(n, bool), np.zeros(n, bool)
-    colour = np.empty((n, 3), np.uint16) if "rgb" in (dtype.names or ()) else None
+    xyz = make("points", (n, 3), np.float64)
+    intensity, setup = make("intensity", (n,), np.uint16), make("setup", (n,), np.uint16)
+    classification = make("classification", (n,), np.uint8)
+    withheld, lost = np.zeros(n, bool), np.zeros(n, bool)
+    colour = make("colour", (n, 3), np.uint16) if "rgb" in (dtype.names or ()) else None
     field, bit = WITHHELD_BIT[wide]
     for start, records in pieces(header, fields=GEOMETRY):
         points = records.view(dtype)

@@ -15,6 +15,7 @@ from scanstrain.attributes import ATTRIBUTES, BY_NAME
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
 from scanstrain.io.las_extra import ExtraField, describe
+from scanstrain.mapped import release
 from scanstrain.registry import unknown_name
 
 
@@ -31,6 +32,7 @@ class StoredValues:
         if name == "rgb":
             return part
         part = part.astype(BY_NAME[name].numpy_dtype)
+        release(self.values[name])
         if part.dtype.kind == "f":
             part[np.isnan(part)] = self.no_data
         return part
@@ -69,6 +71,7 @@ def check_values(
         array = np.asarray(given)
         _check_shape(source, name, array.shape, (count,))
         _check_range(name, array, no_data)
+        release(array)
         checked[name] = array
     if colour is not None:
         rgb = np.asarray(colour)

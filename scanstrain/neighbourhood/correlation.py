@@ -8,6 +8,7 @@ it over many patches of the whole scan: a robust mean, so that a place that defo
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -16,7 +17,7 @@ from numpy.typing import NDArray
 
 from scanstrain.neighbourhood.differences import PATCH, difference_forms, unit_noise
 from scanstrain.neighbourhood.fit import SCALE_GREY, SCALE_NORMAL, VALID, VARIANCE
-from scanstrain.neighbourhood.result import Correlation, SharedNoise
+from scanstrain.neighbourhood.result import SharedNoise
 from scanstrain.neighbourhood.sandwich import correlated_covariance
 
 if TYPE_CHECKING:
@@ -131,56 +132,94 @@ def _own_part(scale: float, part: Components, ratio: float) -> float:
     return max(min(scale, 1.0), scale - ratio * float(part.shared.sum())) / scale
 
 
-def count_correlation(level: Level, state: Estimate, table: FloatArray, fine: IntArray) -> Correlation | None:
-    """Measure the noise that neighbours share, and replace the covariances of `state` where there is any.
+@dataclass(frozen=True, slots=True)
+class Shared:
+    """Noise that neighbouring points share, as measured on a sample of a scan.
 
     Parameters
     ----------
-    level : Level
-        The finest one.
-    state : Estimate
-        After the last fit; its `covariance` and `data_sd` change, its values do not.
-    table : ndarray of shape (c, 24)
+    described : tuple of SharedNoise
+        Of height and, on textured surfaces, of intensity.
+    lengths : ndarray of shape (c,)
+        Correlation lengths [m].
+    shares : ndarray of shape (2, c)
+        Variance of each component over that of a single point, for both kinds of rows.
+    own : ndarray of shape (2,)
+        Part of the variance factor that is noise of its own for every point.
+    """
+
+    described: tuple[SharedNoise, ...]
+    lengths: FloatArray
+    shares: FloatArray
+    own: FloatArray
+
+
+def measure_shared(
+    levels: Sequence[Level], states: Sequence[Estimate], tables: Sequence[FloatArray], fine: Sequence[IntArray]
+) -> Shared | None:
+    """Measure the noise that neighbours share.
+
+    Parameters
+    ----------
+    levels : sequence of Level
+        The finest one of every piece of the sample.
+    states : sequence of Estimate
+        After the last fit.
+    tables : sequence of ndarray of shape (c, 24)
         Observations of that fit, one row a reference cell.
-    fine : ndarray of shape (g,)
+    fine : sequence of ndarray of shape (g,)
         Numbers of the gauges with a sound fit.
 
     Returns
     -------
-    Correlation or None
+    Shared or None
         None where too few gauges tell.
     """
-    gauge_length = 2.0 * level.radius
-    lengths = gauge_length * np.array(LADDER)
-    chosen = fine[:: max(1, len(fine) // PATCHES)]
-    if len(chosen) < FEWEST_PATCHES:
+    first, count = levels[0], sum(map(len, fine))
+    lengths = 2.0 * first.radius * np.array(LADDER)
+    step = max(1, count // PATCHES)
+    judged = [
+        (level, state, some[::step]) for level, state, some in zip(levels, states, fine, strict=True) if len(some)
+    ]
+    chosen = sum(len(some) for _, _, some in judged)
+    if chosen < FEWEST_PATCHES:
         return None
-    q, T = difference_forms(level, state, chosen, lengths, SQUARES)
-    area = len(fine) * level.spacing**2
-    overlap = len(chosen) * np.pi * (PATCH * level.radius) ** 2 / area
+    forms = [difference_forms(level, state, some, lengths, SQUARES) for level, state, some in judged]
+    q, T = (np.concatenate(each) for each in zip(*forms, strict=True))
+    area = count * first.spacing**2
+    overlap = chosen * np.pi * (PATCH * first.radius) ** 2 / area
     parts = [fit_components(q[:, kind], T[:, kind], overlap=overlap) for kind in range(q.shape[1])]
-    before = np.einsum("gii->gi", state.covariance)[fine].copy()
-    if any(part.shared.any() for part in parts):
-        _replace(level, state, table, parts, lengths)
-    after = np.einsum("gii->gi", state.covariance)[fine]
-    factor = np.sqrt(np.median(after / np.maximum(before, 1e-300), axis=0))
-    described = [_described(part, lengths) for part in parts]
-    return Correlation(described[0], described[1] if level.textured else None, tuple(float(f) for f in factor))
+    own, shares = np.ones(2), np.zeros((2, len(lengths)))
+    for kind, part in enumerate(parts):
+        ratio = [
+            (unit_noise(level)[:, kind] / table[:, VARIANCE + 2 + kind])[table[:, VALID] > 0]
+            for level, table in zip(levels, tables, strict=True)
+        ]
+        scales = np.concatenate([state.info[:, (SCALE_NORMAL, SCALE_GREY)[kind]] for state in states])
+        own[kind] = _own_part(float(np.nanmedian(scales)), part, float(np.median(np.concatenate(ratio))))
+        shares[kind] = part.shared
+    return Shared(tuple(_described(part, lengths) for part in parts), lengths, shares, own)
 
 
-def _replace(level: Level, state: Estimate, table: FloatArray, parts: list[Components], lengths: FloatArray) -> None:
-    """Run the sandwich over all gauges."""
+def count_shared(level: Level, state: Estimate, table: FloatArray, shared: Shared) -> None:
+    """Replace the covariances of `state` where there is shared noise; its values stay.
+
+    Parameters
+    ----------
+    level : Level
+        The finest one of a piece.
+    state, table : Estimate, ndarray of shape (c, 24)
+        As of `measure_shared`.
+    shared : Shared
+    """
+    if not shared.shares.any():
+        return
     g, unit = level.gauges, unit_noise(level)
     scales = np.ascontiguousarray(state.info[:, [SCALE_NORMAL, SCALE_GREY]])
-    own, shares = np.ones(2), np.zeros((2, len(lengths)))
-    valid = table[:, VALID] > 0
-    for kind, part in enumerate(parts):
-        ratio = float(np.median(unit[valid, kind] / table[valid, VARIANCE + 2 + kind]))
-        own[kind] = _own_part(float(np.nanmedian(scales[:, kind])), part, ratio)
-        shares[kind] = part.shared
     order, key, start = level.hash
     correlated_covariance(
         g.origin, g.frame, g.curvature, level.radius, level.sheet_gate, level.weak, state.required, level.nuisance,
-        level.capacity, level.textured, key, start, table[order], unit[order], state.gains, state.held, scales, own,
-        lengths, shares, SQUARES, level.cuts.pieces, level.cuts.start, state.covariance, state.data_sd,
+        level.capacity, level.textured, key, start, table[order], unit[order], state.gains, state.held, scales,
+        shared.own, shared.lengths, shared.shares, SQUARES, level.cuts.pieces, level.cuts.start, state.covariance,
+        state.data_sd,
     )  # fmt: skip

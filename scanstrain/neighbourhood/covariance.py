@@ -9,22 +9,17 @@ textured wall may stand on a bare floor: with the wall's covariance the floor's 
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.cells import Cells
-from scanstrain.neighbourhood.smooth import SmoothSurface, gather
+from scanstrain.neighbourhood.pairs import Pairs, pool
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-LAGS = 6.0
-"""Longest lag of the variogram, in cells: the distances over which a local prediction weighs its neighbours."""
-BINS = 10
 _SHORT, _LONG = 3, 4
 """Bins at the two ends of the variogram whose difference shows structure."""
 _TABLE = 512
@@ -32,8 +27,6 @@ SIGNIFICANT = 4.0
 """A structured term counts where the rise of the variogram exceeds this many of its standard errors."""
 _FEWEST = 6
 """Blocks that a region needs before its own variogram is believed."""
-SAMPLED = 20_000
-"""About so many blocks give their pairs: enough for the local variograms of any scan that fits in memory."""
 FLOOR = 1e-6
 """Least noise variance over sill: keeps the prediction well conditioned where a scan has no noise at all."""
 _LEAST_GAMMA = 1e-6
@@ -92,82 +85,6 @@ class Covariance:
         return values, step
 
 
-@numba.njit(cache=True, nogil=True, parallel=True)
-def _pair_sums(
-    origin: FloatArray, frame: FloatArray, curvature: FloatArray, support: IntArray, reach: float, gate: float,
-    key: IntArray, start: IntArray, size: float, position: FloatArray, intensity: FloatArray, count: FloatArray,
-    out: FloatArray,
-) -> None:  # fmt: skip
-    """Per block and lag bin: pairs, noise share, half squared differences of height and of intensity, lag (sums).
-
-    A pair has its first cell in the block, the second anywhere within a block width.
-    """
-    bins = out.shape[1]
-    stride = max(1, len(key) // SAMPLED)
-    for turn in numba.prange((len(key) + stride - 1) // stride):
-        b = turn * stride
-        if support[b] < 6:
-            continue
-        cells = np.empty(1024, np.int64)
-        s, t, h, own = np.empty(1024), np.empty(1024), np.empty(1024), np.empty(1024, np.bool_)
-        found = gather(origin[b, 0], origin[b, 1], origin[b, 2], size, key, start, size, position, cells)
-        m = 0
-        for r in range(found):
-            c = cells[r]
-            d0, d1, d2 = position[c, 0] - origin[b, 0], position[c, 1] - origin[b, 1], position[c, 2] - origin[b, 2]
-            x = d0 * frame[b, 0, 0] + d1 * frame[b, 1, 0] + d2 * frame[b, 2, 0]
-            y = d0 * frame[b, 0, 1] + d1 * frame[b, 1, 1] + d2 * frame[b, 2, 1]
-            z = d0 * frame[b, 0, 2] + d1 * frame[b, 1, 2] + d2 * frame[b, 2, 2]
-            z -= 0.5 * curvature[b, 0] * x * x + curvature[b, 1] * x * y + 0.5 * curvature[b, 2] * y * y
-            if abs(z) < gate:
-                cells[m], s[m], t[m], h[m] = c, x, y, z
-                own[m] = start[b] <= c < start[b + 1]
-                m += 1
-        for i in range(m):
-            if not own[i]:
-                continue
-            for j in range(m):
-                if i == j or (own[j] and j > i):
-                    continue
-                r = np.sqrt((s[i] - s[j]) ** 2 + (t[i] - t[j]) ** 2)
-                k = int(r / reach * bins)
-                if k >= bins:
-                    continue
-                ci, cj = cells[i], cells[j]
-                out[b, k, 0] += 1.0
-                out[b, k, 1] += 0.5 * (1.0 / count[ci] + 1.0 / count[cj])
-                out[b, k, 2] += 0.5 * (h[i] - h[j]) ** 2
-                if len(intensity):
-                    out[b, k, 3] += 0.5 * (intensity[ci] - intensity[cj]) ** 2
-                out[b, k, 4] += r
-
-
-def _regions(centre: FloatArray, normal: FloatArray, width: float) -> tuple[IntArray, IntArray]:
-    """Number the region of every block, and list the neighbours of every region.
-
-    A region is a voxel of `width` and one of three main directions of the normal, so that a floor is not judged
-    together with the wall that stands on it. Neighbours, shape (r, 27), hold -1 where there is none.
-    """
-    facing = np.abs(normal).argmax(axis=1)
-    place = np.floor(centre / width).astype(np.int64)
-    place -= place.min(axis=0) - 1
-    extent = place.max(axis=0) + 2
-    code = ((facing * extent[0] + place[:, 0]) * extent[1] + place[:, 1]) * extent[2] + place[:, 2]
-    unique, region = np.unique(code, return_inverse=True)
-    steps = [(i * extent[1] + j) * extent[2] + k for i in (-1, 0, 1) for j in (-1, 0, 1) for k in (-1, 0, 1)]
-    wanted = unique[:, None] + np.array(steps)
-    found = np.minimum(np.searchsorted(unique, wanted), len(unique) - 1)
-    return region, np.where(unique[found] == wanted, found, -1)
-
-
-def _pool(values: FloatArray, region: IntArray, neighbours: IntArray) -> FloatArray:
-    """Sum block values over regions and their neighbours."""
-    flat = values.reshape(len(values), -1)
-    sums = np.stack([np.bincount(region, column, len(neighbours)) for column in flat.T], axis=1)
-    padded = np.vstack([sums, np.zeros(sums.shape[1])])
-    return padded[neighbours].sum(axis=1).reshape(len(neighbours), *values.shape[1:])
-
-
 def _rise(sums: FloatArray, column: int) -> FloatArray:
     """Rise of each block's variogram from short to long lags, per unit noise share; NaN where pairs are missing."""
     short, long = sums[:, :_SHORT].sum(axis=1), sums[:, -_LONG:].sum(axis=1)
@@ -181,7 +98,7 @@ def _significant(rise: FloatArray, region: IntArray, neighbours: IntArray) -> ND
     """Regions where the mean rise over the blocks exceeds `SIGNIFICANT` of its standard errors."""
     known = np.isfinite(rise)
     value = np.where(known, rise, 0.0)
-    n, total, squares = _pool(np.stack([known, value, value**2], axis=1).astype(float), region, neighbours).T
+    n, total, squares = pool(np.stack([known, value, value**2], axis=1).astype(float), region, neighbours).T
     mean = total / np.maximum(n, 1)
     error = np.sqrt(np.maximum(squares / np.maximum(n, 1) - mean**2, 0.0) / np.maximum(n, 1))
     return (n >= _FEWEST) & (mean > SIGNIFICANT * error)
@@ -216,21 +133,87 @@ def fit_correlation(lag: FloatArray, share: FloatArray, gamma: FloatArray, weigh
     return best[1], best[2]
 
 
-def _local(
-    pooled: FloatArray, column: int, family: str, length: float, structured: NDArray[np.bool_]
-) -> tuple[FloatArray, FloatArray]:
-    """Noise and sill of every region by weighted least squares; sill 0 where no structure shows."""
+@dataclass(frozen=True, slots=True)
+class Structure:
+    """What height or intensity have in common over the whole scan.
+
+    Parameters
+    ----------
+    family, length : str, float
+        Of the correlation function; the length in m.
+    unit : float
+        Variance of the scan: in units of it no weight can overflow.
+    farthest : float
+        Longest mean lag [m].
+    least : float
+        Least noise variance that is believed, in units.
+    """
+
+    family: str
+    length: float
+    unit: float = 1.0
+    farthest: float = 1.0
+    least: float = 0.0
+
+
+def measure_structure(parts: Sequence[Pairs], column: int) -> Structure:
+    """Common correlation from the places that show structure, and the bounds on what is local.
+
+    Parameters
+    ----------
+    parts : sequence of Pairs
+        Pieces of one scan.
+    column : int
+        `HEIGHT` or `GREY`.
+    """
+    structured = [_structured(part, column) for part in parts]
+    anywhere = any(each.any() for each in structured)
+    total = np.sum(
+        [
+            part.sums[some[part.region]].sum(axis=0) if anywhere else part.sums.sum(axis=0)
+            for part, some in zip(parts, structured, strict=True)
+        ],
+        axis=0,
+    )
+    used = total[:, 0] > 50
+    family, length = "matern32", 1.0
+    if anywhere and used.sum() >= 4:
+        pairs = total[used, 0]
+        lag, gamma = total[used, 4] / pairs, total[used, column] / pairs
+        # In units of the largest semivariance, so that a scan without noise cannot make a weight infinite.
+        gamma = gamma / max(float(gamma.max()), 1e-300)
+        weight = pairs / np.maximum(gamma, _LEAST_GAMMA) ** 2 / lag
+        family, length = fit_correlation(lag, total[used, 1] / pairs, gamma, weight)
+    pooled = np.concatenate([part.pooled for part in parts])
+    known = pooled[pooled[:, :, 0].any(axis=1)]
+    if not len(known):
+        return Structure(family, length)
+    unit = max(float(np.median(known[:, :, column].sum(axis=1) / known[:, :, 1].sum(axis=1))), 1e-30)
+    farthest = float((pooled[:, :, 4] / np.maximum(pooled[:, :, 0], 1.0)).max())
+    common = Structure(family, length, unit, farthest)
+    noise = _solve(pooled, column, np.concatenate(structured), common)[0]
+    believed = noise[(noise > 0) & pooled[:, :, 0].any(axis=1)]
+    least = LEAST_NOISE * float(np.median(believed)) if len(believed) else 0.0
+    return Structure(family, length, unit, farthest, least)
+
+
+def _structured(part: Pairs, column: int) -> NDArray[np.bool_]:
+    return _significant(_rise(part.sums, column), part.region, part.neighbours)
+
+
+def _solve(
+    pooled: FloatArray, column: int, structured: NDArray[np.bool_], common: Structure
+) -> tuple[FloatArray, FloatArray, FloatArray, NDArray[np.bool_]]:
+    """Noise of every region, noise without structure, and what the sill follows from, all in units."""
     known = pooled[:, :, 0] > 0
     pairs = np.where(known, pooled[:, :, 0], 1.0)
     share, lag = pooled[:, :, 1] / pairs, pooled[:, :, 4] / pairs
     some = known.any(axis=1)
-    if not some.any():
-        return np.zeros(len(pooled)), np.zeros(len(pooled))
-    # In units of the scan's own variance and lag, no weight can overflow.
-    unit = max(float(np.median(pooled[some, :, column].sum(axis=1) / pooled[some, :, 1].sum(axis=1))), 1e-30)
-    gamma = pooled[:, :, column] / pairs / unit
-    rise = 1.0 - FAMILIES[family](lag / length)
-    weight = np.where(known, pairs / np.maximum(gamma, _LEAST_GAMMA) ** 2 / np.maximum(lag / lag.max(), 1e-3), 0.0)
+    gamma = pooled[:, :, column] / pairs / common.unit
+    rise = 1.0 - FAMILIES[common.family](lag / common.length)
+    weight = np.where(
+        known, pairs / np.maximum(gamma, _LEAST_GAMMA) ** 2 / np.maximum(lag / common.farthest, 1e-3), 0.0
+    )
     square = np.where(some, (pooled[:, :, 0] * share**2).sum(axis=1), 1.0)
     flat = (pooled[:, :, 0] * share * gamma).sum(axis=1) / square
     ss, sr, rr = (weight * share**2).sum(1), (weight * share * rise).sum(1), (weight * rise**2).sum(1)
@@ -238,59 +221,15 @@ def _local(
     determinant = ss * rr - sr**2
     use = structured & (determinant > 1e-12 * ss * rr)
     noise = np.where(use, (sg * rr - rg * sr) / np.where(use, determinant, 1.0), flat)
-    believed = noise[(noise > 0) & some]
-    least = LEAST_NOISE * float(np.median(believed)) if len(believed) else 0.0
-    noise = np.maximum(noise, least)
+    return noise, flat, np.stack([rg, sr, rr]), use
+
+
+def local_covariance(part: Pairs, column: int, common: Structure) -> Covariance:
+    """Noise and sill about every block by weighted least squares; sill 0 where no structure shows."""
+    noise, flat, (rg, sr, rr), use = _solve(part.pooled, column, _structured(part, column), common)
+    noise = np.maximum(noise, common.least)
     sill = np.where(use, np.maximum((rg - noise * sr) / np.where(use, rr, 1.0), 0.0), 0.0)
-    noise = np.where(sill > 0, np.maximum(noise, FLOOR * sill), np.maximum(flat, least))
-    return noise * unit, sill * unit
-
-
-def measure_covariance(
-    cells: Cells, surface: SmoothSurface, *, gate: float, region_width: float
-) -> tuple[Covariance, Covariance | None]:
-    """Measure the covariance of height over the smooth surface and of intensity.
-
-    Parameters
-    ----------
-    cells : Cells
-        One epoch.
-    surface : SmoothSurface
-        Smooth surface at the blocks of `cells`.
-    gate : float
-        Heights beyond this are clutter and left out [m].
-    region_width : float
-        Noise and sill are pooled over about three times this width [m].
-
-    Returns
-    -------
-    height, intensity : Covariance
-        Variances in m^2 and in squared intensity units; intensity is None where the cells have none.
-    """
-    grey = cells.intensity if cells.intensity is not None else np.empty(0)
-    sums = np.zeros((len(cells.key), BINS, 5))
-    _pair_sums(
-        surface.origin, surface.frame, surface.curvature, surface.support, LAGS * cells.resolution, gate, cells.key,
-        cells.start, cells.block_size, cells.position, grey, cells.count, sums,
-    )  # fmt: skip
-    region, neighbours = _regions(cells.centre, surface.frame[:, :, 2], region_width)
-    pooled = _pool(sums, region, neighbours)
-    models = [_model(sums, pooled, region, neighbours, column) for column in ((2, 3) if len(grey) else (2,))]
-    return models[0], models[1] if len(grey) else None
-
-
-def _model(sums: FloatArray, pooled: FloatArray, region: IntArray, neighbours: IntArray, column: int) -> Covariance:
-    """Common correlation from the places that show structure, then local noise and sill."""
-    structured = _significant(_rise(sums, column), region, neighbours)
-    total = sums[structured[region]].sum(axis=0) if structured.any() else sums.sum(axis=0)
-    used = total[:, 0] > 50
-    family, length = "matern32", 1.0
-    if structured.any() and used.sum() >= 4:
-        pairs = total[used, 0]
-        lag, gamma = total[used, 4] / pairs, total[used, column] / pairs
-        # In units of the largest semivariance, so that a scan without noise cannot make a weight infinite.
-        gamma = gamma / max(float(gamma.max()), 1e-300)
-        weight = pairs / np.maximum(gamma, _LEAST_GAMMA) ** 2 / lag
-        family, length = fit_correlation(lag, total[used, 1] / pairs, gamma, weight)
-    noise, sill = _local(pooled, column, family, length, structured)
-    return Covariance(family, length, noise[region], sill[region])
+    noise = np.where(sill > 0, np.maximum(noise, FLOOR * sill), np.maximum(flat, common.least))
+    return Covariance(
+        common.family, common.length, (noise * common.unit)[part.region], (sill * common.unit)[part.region]
+    )

@@ -3,13 +3,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 
 import numba
 import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import Cells, group, voxel_keys
+from scanstrain.neighbourhood.piece import Box
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface
 
 FloatArray = NDArray[np.float64]
@@ -33,8 +35,25 @@ def _thin(first: IntArray, second: IntArray, n: int) -> NDArray[np.bool_]:
     return kept
 
 
-def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
-    """Spread gauges evenly over the surface.
+@dataclass(frozen=True, slots=True)
+class Candidates:
+    """Places where gauges could stand, one a voxel of a third of the spacing.
+
+    Parameters
+    ----------
+    key : ndarray of shape (k,)
+        Packed index of the voxels.
+    place, normal : ndarray of shape (k, 3)
+        The cell nearest to the middle of the voxel's cells [m], and the plane normal there.
+    """
+
+    key: IntArray
+    place: FloatArray
+    normal: FloatArray
+
+
+def candidates_in(cells: Cells, spacing: float, box: Box) -> Candidates:
+    """Find the candidates of the voxels whose middle lies in a box.
 
     Parameters
     ----------
@@ -42,15 +61,10 @@ def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
         Reference epoch.
     spacing : float
         Wanted distance between neighbouring gauges [m].
-
-    Returns
-    -------
-    places, normals : ndarray of shape (g, 3)
-        Cell positions that serve as gauge places [m] and the plane normals there.
+    box : Box
     """
-    from scipy.spatial import cKDTree
-
-    order, _, start = group(voxel_keys(cells.position, spacing / _CANDIDATES))
+    width = spacing / _CANDIDATES
+    order, key, start = group(voxel_keys(cells.position, width))
     size = np.diff(start)
     mean = np.add.reduceat(cells.position[order], start[:-1]) / size[:, None]
     distance = ((cells.position[order] - np.repeat(mean, size, axis=0)) ** 2).sum(axis=1)
@@ -58,11 +72,35 @@ def place_gauges(cells: Cells, spacing: float) -> tuple[FloatArray, FloatArray]:
     near = np.round(distance / spacing**2, 9)
     rank = np.lexsort((*cells.position[order].T, near, np.repeat(np.arange(len(size)), size)))
     chosen = order[rank[start[:-1]]]
-    places = cells.position[chosen]
+    inside = box.holds((np.floor(cells.position[chosen] / width) + 0.5) * width)
+    chosen = chosen[inside]
+    return Candidates(key[inside], cells.position[chosen], cells.normal[cells.block[chosen]])
+
+
+def choose_gauges(found: Sequence[Candidates], spacing: float) -> tuple[FloatArray, FloatArray]:
+    """Spread gauges evenly over the surface.
+
+    Parameters
+    ----------
+    found : sequence of Candidates
+        Of all pieces of the surface.
+    spacing : float
+        Wanted distance between neighbouring gauges [m].
+
+    Returns
+    -------
+    places, normals : ndarray of shape (g, 3)
+        Gauge places [m] and the plane normals there.
+    """
+    from scipy.spatial import cKDTree
+
+    order = np.argsort(np.concatenate([each.key for each in found]), kind="stable")
+    places = np.concatenate([each.place for each in found])[order]
+    normals = np.concatenate([each.normal for each in found])[order]
     pairs = cKDTree(places).query_pairs(_CROWDED * spacing, output_type="ndarray")
     pairs = pairs[np.lexsort((pairs[:, 1], pairs[:, 0]))]
     kept = _thin(np.ascontiguousarray(pairs[:, 0], np.int64), np.ascontiguousarray(pairs[:, 1], np.int64), len(places))
-    return places[kept], cells.normal[cells.block[chosen[kept]]]
+    return places[kept], normals[kept]
 
 
 def straight_guide(direction: FloatArray, places: FloatArray) -> Guide:
@@ -76,10 +114,10 @@ def straight_guide(direction: FloatArray, places: FloatArray) -> Guide:
     return guide
 
 
-def free_side_signs(
+def look_out(
     places: FloatArray, normals: FloatArray, free_side: FloatArray | None, axis: Guide | None
-) -> tuple[NDArray[np.float64], tuple[str, ...]]:
-    """Signs that turn normals to the free side.
+) -> tuple[FloatArray, tuple[str, ...]]:
+    """Directions to which normals are turned.
 
     With a `free_side` point every normal looks towards it; with a tunnel axis towards that; with neither, towards the
     middle of the bounding box of the places, or, for a near-plane where the middle says nothing, all to one side,
@@ -87,28 +125,27 @@ def free_side_signs(
 
     Returns
     -------
-    signs : ndarray of shape (g,)
-        +1 or -1.
+    look : ndarray of shape (g, 3)
+        Any length.
     warnings : tuple of str
     """
     middle = (places.min(axis=0) + places.max(axis=0)) / 2
     target = free_side if free_side is not None else middle if axis is None else axis(places)[0]
     look = target - places
-    signs = np.where((normals * look).sum(axis=1) < 0, -1.0, 1.0)
     if free_side is not None or axis is not None:
-        return signs, ()
-    turned = normals * signs[:, None]
+        return look, ()
+    turned = normals * np.where((normals * look).sum(axis=1) < 0, -1.0, 1.0)[:, None]
     mean = turned.mean(axis=0)
     _, vectors = np.linalg.eigh(normals.T @ normals)
     common = vectors[:, 2]
     if np.mean(np.abs(normals @ common)) > 0.9 and np.linalg.norm(mean) < 0.9:
         common = common * (1.0 if common[np.argmax(np.abs(common))] > 0 else -1.0)
         side = ", ".join(f"{c:+.2f}" for c in common)
-        return np.where(normals @ common < 0, -1.0, 1.0), (
+        return np.tile(common, (len(places), 1)), (
             f"The free side of the surface is not given and the points lie near one plane: positive normal "
             f"displacement was taken along ({side}). Give free_side to fix the sign.",
         )
-    return signs, ()
+    return look, ()
 
 
 def turn_frames(frame: FloatArray, signs: NDArray[np.float64], along: FloatArray | None) -> FloatArray:
@@ -140,20 +177,30 @@ def turn_frames(frame: FloatArray, signs: NDArray[np.float64], along: FloatArray
 
 
 def frames_at(
-    places: FloatArray, normals: FloatArray, support: Cells, free_side: FloatArray | None, axis: Guide | None
-) -> tuple[SmoothSurface, tuple[str, ...]]:
+    places: FloatArray, normals: FloatArray, support: Cells, look: FloatArray, along: FloatArray | None
+) -> SmoothSurface:
     """Fit the smooth surface at the gauges and turn its frames to the structure.
+
+    Parameters
+    ----------
+    places, normals : ndarray of shape (g, 3)
+        Of the gauges.
+    support : Cells
+        As of `smooth.support_cells`.
+    look : ndarray of shape (g, 3)
+        As of `look_out`.
+    along : ndarray of shape (g, 3) or None
+        As of `turn_frames`.
 
     Returns
     -------
     SmoothSurface
         With `frame` columns (a1, a2, n) and `curvature` in that frame.
-    warnings : tuple of str
     """
     fitted = smooth_surface(places, normals, support)
-    signs, warnings = free_side_signs(fitted.origin, fitted.frame[:, :, 2], free_side, axis)
-    frame = turn_frames(fitted.frame, signs, None if axis is None else axis(fitted.origin)[1])
-    return SmoothSurface(fitted.origin, frame, turned_curvature(fitted, frame), fitted.support), warnings
+    signs = np.where((fitted.frame[:, :, 2] * look).sum(axis=1) < 0, -1.0, 1.0)
+    frame = turn_frames(fitted.frame, signs, along)
+    return SmoothSurface(fitted.origin, frame, turned_curvature(fitted, frame), fitted.support)
 
 
 def turned_curvature(fitted: SmoothSurface, frame: FloatArray) -> FloatArray:

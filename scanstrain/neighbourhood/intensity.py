@@ -10,6 +10,9 @@ them out twice would only add the noise of the level.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from dataclasses import dataclass
+
 import numba
 import numpy as np
 from numpy.typing import NDArray
@@ -30,8 +33,11 @@ MIN_SHARED = 200
 """Voxels that two set-ups must share before their difference is judged."""
 _RIDGE = 0.02
 """Ridge on slopes and curvatures, in neighbourhood radii: keeps narrow strips of points well posed."""
-_BLEND = 4
-"""Neighbourhoods that are blended at a point, so that the level has no steps."""
+_BLEND, _FARTHEST = 4, 1.5
+"""Neighbourhoods that are blended at a point, so that the level has no steps, and how far away they may be [radii]: a
+piece of a scan holds no others."""
+SURVEYED = 2_000_000
+"""Points that are looked at to judge the intensity of a whole epoch."""
 
 
 @numba.njit(cache=True, nogil=True)
@@ -77,6 +83,8 @@ def _levels(
         row = np.empty(6)
         total = level = 0.0
         for q in range(near.shape[1]):
+            if q > 0 and distance[p, q] > _FARTHEST * radius:
+                break
             b = near[p, q]
             _terms(points[p, 0], points[p, 1], points[p, 2], centre[b], normal[b], radius, row)
             w = 1.0 / (distance[p, q] ** 2 + 0.01 * radius * radius) ** 2
@@ -104,32 +112,112 @@ def _local_level(points: FloatArray, values: FloatArray, places: FloatArray, wid
     return np.where(distance[:, 0] <= np.sqrt(3) * width, level, np.nan)
 
 
-def _remove_offsets(
-    points: FloatArray, texture: FloatArray, setup: NDArray[np.uint16], width: float, fine: float
-) -> None:
-    """Take the slow differences between set-ups out of `texture`, judged in small voxels that several of them share.
+@dataclass(frozen=True, slots=True)
+class _Shared:
+    """Small voxels of a cloud and what each set-up shows in them."""
 
-    Inside such a voxel the texture is the same, so what differs is level: this is far sharper than comparing
-    levels over neighbourhoods that each set-up samples in its own way.
+    which: IntArray
+    centre: FloatArray
+    mean: FloatArray
+    seen: NDArray[np.bool_]
+
+    def pairs(self, number: int) -> NDArray[np.bool_]:
+        """Voxels that a set-up shares with another one."""
+        return np.asarray((self.seen.sum(axis=1) > 1) & self.seen[:, number])
+
+
+def _share(
+    points: FloatArray, texture: FloatArray, setup: NDArray[np.uint16], numbers: NDArray[np.uint16], fine: float
+) -> _Shared:
+    """Average every set-up in small voxels: inside one the texture is the same, so what differs is level.
+
+    This is far sharper than comparing levels over neighbourhoods that each set-up samples in its own way.
     """
     order, _, start = group(voxel_keys(points, fine))
     voxel = np.empty(len(points), np.int64)
     voxel[order] = np.repeat(np.arange(len(start) - 1), np.diff(start))
-    numbers, which = np.unique(setup, return_inverse=True)
+    which = np.searchsorted(numbers, setup)
     shape = (len(start) - 1, len(numbers))
     flat = voxel * len(numbers) + which
     count = np.bincount(flat, minlength=shape[0] * shape[1]).reshape(shape)
     mean = np.bincount(flat, texture, minlength=shape[0] * shape[1]).reshape(shape) / np.maximum(count, 1)
     centre = np.stack([np.bincount(voxel, points[:, a]) for a in range(3)], axis=1) / np.diff(start)[:, None]
-    seen = count > 0
-    common = (mean * seen).sum(axis=1) / seen.sum(axis=1)
-    shared = seen.sum(axis=1) > 1
-    for number in range(len(numbers)):
-        pairs = shared & seen[:, number]
-        if pairs.sum() < MIN_SHARED:
+    return _Shared(which, centre, mean, count > 0)
+
+
+@dataclass(frozen=True, slots=True)
+class Survey:
+    """What must be known of the intensity of a whole epoch before any piece of it can be used.
+
+    Parameters
+    ----------
+    setups : ndarray of shape (k,)
+        Numbers of the set-ups, ascending; fewer than two where the intensity serves as it is.
+    linear : bool
+        Whether texture scales with its level.
+    floors : ndarray of shape (k,)
+        Smallest level that is divided by, for each set-up.
+    """
+
+    setups: NDArray[np.uint16]
+    linear: bool
+    floors: FloatArray
+
+
+def survey(intensity: NDArray[np.floating] | None, setup: NDArray[np.uint16] | None) -> Survey | None:
+    """Judge the intensity (n,) and the set-ups (n,) of a whole epoch; None where there is nothing to see."""
+    if intensity is None or not np.isfinite(intensity).all() or not np.ptp(intensity) > 0:
+        return None
+    every = max(1, len(intensity) // SURVEYED)
+    raw = np.asarray(intensity[::every], np.float64)
+    linear = float(np.mean(raw > 0)) >= _POSITIVE_SHARE
+    if setup is None:
+        return Survey(np.zeros(0, np.uint16), linear, np.zeros(0))
+    numbers, of = np.unique(setup), setup[::every]
+    medians = [float(np.median(raw[of == number])) if (of == number).any() else 0.0 for number in numbers]
+    return Survey(numbers, linear, _FLOOR * np.array(medians))
+
+
+def texture_of(epoch: Epoch, known: Survey, width: float) -> FloatArray:
+    """Intensity of a piece of an epoch; from several set-ups the deviation from each one's local level."""
+    raw = np.asarray(epoch.intensity, np.float64)
+    if epoch.setup is None or len(known.setups) < 2:
+        return raw
+    out = np.empty(len(raw))
+    for setup, floor in zip(known.setups, known.floors, strict=True):
+        own = np.flatnonzero(epoch.setup == setup)
+        if not len(own):
             continue
-        own = np.flatnonzero(which == number)
-        offset = _local_level(centre[pairs], (mean[:, number] - common)[pairs], points[own], width)
+        level = _local_level(epoch.points[own], raw[own], epoch.points[own], width)
+        out[own] = raw[own] / np.maximum(level, floor) - 1.0 if known.linear else raw[own] - level
+    return out
+
+
+def comparable_setups(
+    pieces: Sequence[Epoch], textures: Sequence[FloatArray], known: Survey, fine: float
+) -> NDArray[np.uint16]:
+    """Numbers of the set-ups that share enough with others to be compared, over all pieces."""
+    total = np.zeros(len(known.setups), np.int64)
+    for epoch, texture in zip(pieces, textures, strict=True):
+        if epoch.setup is not None and len(known.setups) > 1 and len(epoch):
+            shared = _share(epoch.points, texture, epoch.setup, known.setups, fine)
+            total += [int(shared.pairs(number).sum()) for number in range(len(known.setups))]
+    return known.setups[total >= MIN_SHARED]
+
+
+def remove_offsets(
+    epoch: Epoch, texture: FloatArray, known: Survey, compared: NDArray[np.uint16], width: float, fine: float
+) -> None:
+    """Take the slow differences between set-ups out of `texture`, judged where several of them see the same."""
+    if epoch.setup is None or len(known.setups) < 2 or not len(epoch):
+        return
+    shared = _share(epoch.points, texture, epoch.setup, known.setups, fine)
+    common = (shared.mean * shared.seen).sum(axis=1) / shared.seen.sum(axis=1)
+    for number in np.flatnonzero(np.isin(known.setups, compared)).tolist():
+        pairs, own = shared.pairs(number), np.flatnonzero(shared.which == number)
+        if not pairs.any() or not len(own):
+            continue
+        offset = _local_level(shared.centre[pairs], (shared.mean[:, number] - common)[pairs], epoch.points[own], width)
         texture[own] -= np.nan_to_num(offset)
 
 
@@ -152,23 +240,9 @@ def comparable_intensity(epoch: Epoch, width: float, fine: float) -> FloatArray 
         the plain deviation where intensities are signed or logarithmic. None without intensity, or where it does
         not vary.
     """
-    if epoch.intensity is None:
+    known = survey(epoch.intensity, epoch.setup)
+    if known is None:
         return None
-    raw = np.asarray(epoch.intensity, np.float64)
-    if not np.isfinite(raw).all() or not np.ptp(raw) > 0:
-        return None
-    setups = [] if epoch.setup is None else list(np.unique(epoch.setup))
-    if epoch.setup is None or len(setups) < 2:
-        return raw
-    linear = float(np.mean(raw > 0)) >= _POSITIVE_SHARE
-    out = np.empty(len(raw))
-    for setup in setups:
-        own = np.flatnonzero(epoch.setup == setup)
-        level = _local_level(epoch.points[own], raw[own], epoch.points[own], width)
-        if linear:
-            level = np.maximum(level, _FLOOR * float(np.median(raw[own])))
-            out[own] = raw[own] / level - 1.0
-        else:
-            out[own] = raw[own] - level
-    _remove_offsets(epoch.points, out, epoch.setup, width, fine)
+    out = texture_of(epoch, known, width)
+    remove_offsets(epoch, out, known, comparable_setups([epoch], [out], known, fine), width, fine)
     return out

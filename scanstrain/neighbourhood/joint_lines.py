@@ -142,18 +142,23 @@ def lay_on_surface(joint: Joint, cells: Cells, radius: float) -> Trace:
         on = (distance < radius) & (fitted.support >= 6)
     run = _longest_run(on)
     if len(run) < 2:
-        raise OptionError(
-            explain(
-                f"joint {joint.name!r}",
-                f"a line within {radius:.2f} m of the surface",
-                "no point of the reference epoch near it",
-                "give its corners on the surface, in file coordinates",
-            )
-        )
+        raise off_surface(joint, radius)
     normal = fitted.frame[run][:, :, 2]
     # Normals of blocks have any sign: each is turned to the one before.
     turns = np.sign(np.einsum("ma,ma->m", normal[1:], normal[:-1]))
     return Trace(along[run], fitted.origin[run], normal * np.r_[1.0, np.cumprod(turns)][:, None])
+
+
+def off_surface(joint: Joint, radius: float) -> OptionError:
+    """Say that a line does not lie on the surface."""
+    return OptionError(
+        explain(
+            f"joint {joint.name!r}",
+            f"a line within {radius:.2f} m of the surface",
+            "no point of the reference epoch near it",
+            "give its corners on the surface, in file coordinates",
+        )
+    )
 
 
 def pieces_of(

@@ -15,27 +15,26 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import make_cells, median_spacing
 from scanstrain.epoch import Epoch
-from scanstrain.neighbourhood.affine import (
-    CELLS_ACROSS,
-    Requirements,
-    gauge_status,
-    pair_of_textures,
-    units_of,
-)
+from scanstrain.neighbourhood.finish import gauge_status
 from scanstrain.neighbourhood.fit import POINTS
 from scanstrain.neighbourhood.gauges import turned_curvature
 from scanstrain.neighbourhood.joint_cuts import Cuts, cuts_at
 from scanstrain.neighbourhood.joint_jumps import JointJumps, Side, jumps_between
 from scanstrain.neighbourhood.joint_lines import Joint, Trace, lay_on_surface, pieces_of
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
+from scanstrain.neighbourhood.piece import beside, part_of
 from scanstrain.neighbourhood.result import AffineField, Status
+from scanstrain.neighbourhood.setting import CELLS_ACROSS, Requirements, units_of
 from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells
+from scanstrain.neighbourhood.textures import pair_of_textures
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 
 HALF_DISC = np.sqrt(2.0)
 """Radius of the half disc of one side, in radii of a gauge: it covers as much surface as a whole gauge."""
+NEAR = 10.0
+"""Points so far from a line matter to it at all, in radii of a gauge."""
 REACH = 1.25
 """Points so far from the line are used, in radii of the half disc: its predictions need some border."""
 TURNS = 3
@@ -85,6 +84,7 @@ def measure_joints(
     min_points: int = 30,
     required_displacement_sd: float | None = None,
     required_strain_sd: float | None = None,
+    spacing: float | None = None,
 ) -> tuple[JointJumps, ...]:
     """Opening, slip, step and hinge angle along every joint.
 
@@ -103,6 +103,8 @@ def measure_joints(
         Fewest matched cells of a side.
     required_displacement_sd, required_strain_sd : float, optional
         As of `fit_affine`, for each side.
+    spacing : float, optional
+        Of the points of the coarser epoch [m], where the epochs hold only what is near the joints.
 
     Returns
     -------
@@ -119,7 +121,7 @@ def measure_joints(
         displacement=required_displacement_sd or plain.displacement,
         strain=required_strain_sd or plain.strain,
     )
-    spacing = max(median_spacing(reference.points), median_spacing(current.points))
+    spacing = spacing or max(median_spacing(reference.points), median_spacing(current.points))
     width = max(spacing, field.gauge_length / CELLS_ACROSS)
     cells = make_cells(reference.points, width)
     traces = [_to_free_side(lay_on_surface(joint, cells, field.gauge_length / 2), field) for joint in joints]
@@ -166,16 +168,8 @@ def _measure(
 
 
 def _near(epoch: Epoch, line: FloatArray, reach: float) -> Epoch:
-    """Return the points of an epoch in the box about a line, with their intensity and set-up."""
-    box = ((epoch.points > line.min(axis=0) - reach) & (epoch.points < line.max(axis=0) + reach)).all(axis=1)
-    return replace(
-        epoch,
-        points=epoch.points[box],
-        intensity=None if epoch.intensity is None else epoch.intensity[box],
-        setup=None if epoch.setup is None else epoch.setup[box],
-        colour=None,
-        classification=None,
-    )
+    """Return the points of an epoch about a line, with their intensity and set-up."""
+    return part_of(epoch, beside(epoch.points, [line], reach))
 
 
 def _nearest(places: FloatArray, points: FloatArray) -> NDArray[np.int64]:

@@ -3,6 +3,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -10,11 +11,12 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import Cells, group, make_cells, voxel_keys
 from scanstrain.neighbourhood import fit
-from scanstrain.neighbourhood.covariance import Covariance, measure_covariance
+from scanstrain.neighbourhood.covariance import Covariance, Structure, local_covariance, measure_structure
 from scanstrain.neighbourhood.joint_cuts import Cuts, keep_visible, no_cuts
+from scanstrain.neighbourhood.pairs import GREY, HEIGHT, Pairs, count_pairs, stride_of
 from scanstrain.neighbourhood.predict import Predictor, build_predictor
 from scanstrain.neighbourhood.rows import Comparison, Rows, block_density
-from scanstrain.neighbourhood.smooth import SmoothSurface, smooth_surface, support_cells, typical_height
+from scanstrain.neighbourhood.smooth import SmoothSurface, heights, smooth_surface, support_cells
 from scanstrain.neighbourhood.warp import blend, nearest_gauges
 
 FloatArray = NDArray[np.float64]
@@ -70,16 +72,97 @@ class Estimate:
         self.values, self.covariance, self.info = np.full((g, 12), np.nan), np.zeros((g, 12, 12)), np.zeros((g, 6))
         self.data_sd = np.full((g, 12), np.inf)
 
+    @classmethod
+    def joined(cls, parts: Sequence[Estimate]) -> Estimate:
+        """Put the gauges of several estimates one behind the other."""
+        held, gains = np.concatenate([part.held for part in parts]), np.concatenate([part.gains for part in parts])
+        out = cls(held, gains, parts[0].required)
+        for name in ("values", "covariance", "data_sd", "info"):
+            setattr(out, name, np.concatenate([getattr(part, name) for part in parts]))
+        return out
+
+    def some(self, chosen: NDArray[np.int64]) -> Estimate:
+        """Return the estimate of some gauges."""
+        out = Estimate(self.held[chosen], self.gains[chosen], self.required)
+        for name in ("values", "covariance", "data_sd", "info"):
+            setattr(out, name, getattr(self, name)[chosen])
+        return out
+
+
+@dataclass(frozen=True, slots=True)
+class Bare:
+    """Cells and smooth surface of one piece of an epoch, before its noise is judged."""
+
+    cells: Cells
+    smooth: SmoothSurface
+
+
+@dataclass(frozen=True, slots=True)
+class SurfaceModel:
+    """What all pieces of one epoch at one level have in common.
+
+    Parameters
+    ----------
+    gate : float
+        Cells farther than this from the smooth surface are clutter [m].
+    stride : int
+        One in so many blocks gives its pairs.
+    height : Structure
+    grey : Structure or None
+        Of intensity.
+    """
+
+    gate: float
+    stride: int
+    height: Structure
+    grey: Structure | None
+
+
+def make_bare(points: FloatArray, intensity: FloatArray | None, resolution: float, support_radius: float) -> Bare:
+    """Cut one piece of an epoch into cells of one resolution [m], smooth over `support_radius` [m]."""
+    cells = make_cells(points, resolution, intensity=intensity)
+    return Bare(cells, smooth_surface(cells.centre, cells.normal, support_cells(cells.position, support_radius)))
+
+
+def model_surfaces(pieces: Sequence[Bare], region: float) -> tuple[SurfaceModel, list[Surface]]:
+    """Judge what pieces of one epoch have in common, noise over `region` [m], and model each of them."""
+    off = np.concatenate(
+        [
+            heights(each.cells.position, each.cells.block, s.origin, s.frame, s.curvature)
+            for each in pieces
+            for s in [each.smooth]
+        ]
+    )
+    # A robust standard deviation of cells about their smooth surface: relief and noise, without clutter.
+    typical = 1.4826 * float(np.median(np.abs(off)))
+    gate = CLUTTER * typical + 0.1 * pieces[0].cells.resolution
+    stride = stride_of(sum(len(each.cells.key) for each in pieces))
+    pairs = [_pairs(each, gate, stride, region) for each in pieces]
+    grey = None if pieces[0].cells.intensity is None else measure_structure(pairs, GREY)
+    model = SurfaceModel(gate, stride, measure_structure(pairs, HEIGHT), grey)
+    return model, [_surface(each, part, model) for each, part in zip(pieces, pairs, strict=True)]
+
+
+def surface_with(piece: Bare, model: SurfaceModel, region: float) -> Surface:
+    """Model one piece of an epoch of which the common part is known."""
+    return _surface(piece, _pairs(piece, model.gate, model.stride, region), model)
+
 
 def make_surface(
     points: FloatArray, intensity: FloatArray | None, resolution: float, support_radius: float, region: float
 ) -> Surface:
-    """Model one epoch at one resolution [m], smooth over `support_radius` [m], noise judged over `region` [m]."""
-    cells = make_cells(points, resolution, intensity=intensity)
-    smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, support_radius))
-    gate = CLUTTER * typical_height(cells, smooth) + 0.1 * resolution
-    height, grey = measure_covariance(cells, smooth, gate=gate, region_width=region)
-    return Surface(cells, smooth, height, grey, gate)
+    """Model an epoch by itself at one resolution [m], smooth over `support_radius` [m], noise over `region` [m]."""
+    return model_surfaces([make_bare(points, intensity, resolution, support_radius)], region)[1][0]
+
+
+def _pairs(piece: Bare, gate: float, stride: int, region: float) -> Pairs:
+    return count_pairs(piece.cells, piece.smooth, gate=gate, region_width=region, stride=stride)
+
+
+def _surface(piece: Bare, pairs: Pairs, model: SurfaceModel) -> Surface:
+    height = local_covariance(pairs, HEIGHT, model.height)
+    grey = None if model.grey is None else local_covariance(pairs, GREY, model.grey)
+    return Surface(piece.cells, piece.smooth, height, grey, model.gate)
 
 
 class Level:
@@ -93,9 +176,11 @@ class Level:
         radius: float,
         spacing: float,
         cuts: Cuts | None = None,
+        textured: bool | None = None,
     ) -> None:
         self.reference, self.gauges, self.radius, self.spacing = reference, gauges, radius, spacing
-        textured = reference.textured and current.textured
+        # A piece of a textured scan may show nothing by itself.
+        textured = reference.textured and current.textured if textured is None else textured
         self.textured = textured
         cells = reference.cells
         density = block_density(cells)[cells.block], block_density(current.cells)

@@ -223,12 +223,6 @@ def heights(
     return out
 
 
-def typical_height(cells: Cells, surface: SmoothSurface) -> float:
-    """Robust standard deviation of cells about their smooth surface [m]: relief and noise, without clutter."""
-    off = heights(cells.position, cells.block, surface.origin, surface.frame, surface.curvature)
-    return float(1.4826 * np.median(np.abs(off)))
-
-
 def support_cells(position: FloatArray, radius: float) -> Cells:
     """Make the cells on which `smooth_surface` fits over a radius [m]."""
     return make_cells(position, radius / (REACH * BLOCK_WIDTH))

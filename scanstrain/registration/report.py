@@ -12,7 +12,7 @@ from scanstrain.epoch import Epoch
 from scanstrain.registration.covariance import estimate, full_covariance, physical
 from scanstrain.registration.match import nearest
 from scanstrain.registration.options import Options
-from scanstrain.registration.result import Registration, StableGround
+from scanstrain.registration.result import Registration, StableBlocks, StableGround
 from scanstrain.registration.scale import scale_ppm
 from scanstrain.registration.stable import Ground
 from scanstrain.registration.start import GivenStart, held_covariance
@@ -58,6 +58,10 @@ def assemble(work: Work, whole: Surface, reference: Epoch, options: Options, sta
     scale, scale_sd = (
         scale_ppm(fit, work.patch, work.patches, work.metric, work.strong) if work.scale_known else (np.nan, np.nan)
     )
+    blocks = _stable_blocks(work)
+    stable = on_stable_ground(blocks, reference.points)
+    if options.candidates is not None:
+        stable &= options.candidates
     overlap = _overlap(whole, work.current, fit.T_ref_grid)
     ground = _stable_ground(work.ground, options)
     return Registration(
@@ -66,7 +70,8 @@ def assemble(work: Work, whole: Surface, reference: Epoch, options: Options, sta
         pivot=work.metric.pivot,
         covariance=physical(covariance, work.metric),
         rms=float(np.sqrt((fit.weight * fit.rows.residual**2).sum() / fit.weight.sum())),
-        stable=_stable_points(work, reference.points, options),
+        stable=stable,
+        blocks=blocks,
         overlap=overlap,
         scale_ppm=scale,
         scale_ppm_sd=scale_sd,
@@ -118,18 +123,20 @@ def _block_of_points(points: FloatArray, keys: NDArray[np.int64], size: float) -
     return out
 
 
-def _stable_points(work: Work, points: FloatArray, options: Options) -> BoolArray:
-    """Points in a stable patch, without those in blocks that were left out as odd or found no partner."""
+def _stable_blocks(work: Work) -> StableBlocks:
+    """Blocks in a stable patch, without those that were left out as odd or found no partner."""
     surface, rows = work.reference, work.fit.rows
     ground = np.zeros(work.patches, bool)
     ground[work.patch[rows.block[work.fit.weight > 0]]] = True
     good = ground[work.patch] & (surface.state != USABLE)
     good[rows.block] = work.fit.weight > 0
-    block = _block_of_points(points, surface.cells.key, surface.width)
-    stable = (block >= 0) & good[block]
-    if options.candidates is not None:
-        stable &= options.candidates
-    return np.asarray(stable)
+    return StableBlocks(surface.cells.key, surface.width, good)
+
+
+def on_stable_ground(blocks: StableBlocks, points: FloatArray) -> BoolArray:
+    """Say which points (n, 3) lie in stable blocks."""
+    block = _block_of_points(points, blocks.key, blocks.width)
+    return np.asarray((block >= 0) & blocks.good[block])
 
 
 def _stable_ground(ground: Ground | None, options: Options) -> StableGround | None:

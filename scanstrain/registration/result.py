@@ -58,6 +58,25 @@ class StableGround:
 
 
 @dataclass(frozen=True, slots=True)
+class StableBlocks:
+    """Stable ground in cubes.
+
+    Parameters
+    ----------
+    key : ndarray of shape (b,), int64
+        Packed index of the cubes that hold reference points, ascending.
+    width : float
+        Of a cube [m].
+    good : ndarray of shape (b,), bool
+        Whether a cube is on stable ground.
+    """
+
+    key: NDArray[np.int64]
+    width: float
+    good: NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True)
 class Registration:
     """The rigid motion from the current epoch into the reference frame, and how well it is known.
 
@@ -89,6 +108,8 @@ class Registration:
         Where the fine fit began: "identity", "coarse", "file", "targets" or "given".
     targets : TargetFit or None
         The targets that the start comes from, in file coordinates.
+    blocks : StableBlocks, optional
+        The same ground for points that were not part of the registration.
     """
 
     T_ref_cur: FloatArray
@@ -108,6 +129,7 @@ class Registration:
     targets: TargetFit | None = None
     texture_directions: tuple[WeakDirection, ...] = ()
     warnings: tuple[str, ...] = ()
+    blocks: StableBlocks | None = None
 
     @property
     def stable_fraction(self) -> float:

@@ -67,7 +67,7 @@ class Calibration:
 
 
 def calibrate(
-    field: AffineField, registration: Registration, points: FloatArray
+    field: AffineField, registration: Registration, points: FloatArray, *, thinning: int = 1
 ) -> tuple[AffineField, Calibration, tuple[str, ...]]:
     """Scale the covariance of a field so that stable ground shows unit spread.
 
@@ -78,6 +78,8 @@ def calibrate(
         Its `stable` tells the ground, its covariance is part of what a gauge there may show.
     points : ndarray of shape (n, 3)
         Reference points, in the order of `registration.stable`, local coordinates [m].
+    thinning : int
+        One in how many of all reference points they are.
 
     Returns
     -------
@@ -86,7 +88,7 @@ def calibrate(
     calibration : Calibration
     warnings : tuple of str
     """
-    steady = share_around(field, points, registration.stable) >= WHOLLY_STABLE
+    steady = share_around(field, points, registration.stable, thinning=thinning) >= WHOLLY_STABLE
     established, ground = _ground(field, registration, steady)
     fewest = FEWEST_PATCHES if established else FEWEST_AT_ALL
     values = np.concatenate([field.displacement, field.gradient.reshape(-1, 6), field.hessian], axis=1)
@@ -130,7 +132,9 @@ def _patches(field: AffineField, gauges: NDArray[np.bool_]) -> float:
     return float(gauges.sum() * (field.gauge_spacing / field.gauge_length) ** 2)
 
 
-def share_around(field: AffineField, points: FloatArray, belongs: NDArray[np.bool_]) -> FloatArray:
+def share_around(
+    field: AffineField, points: FloatArray, belongs: NDArray[np.bool_], *, thinning: int = 1
+) -> FloatArray:
     """Share of the points within a gauge radius that belong to something, from an even sample of some hundred a gauge.
 
     Parameters
@@ -139,6 +143,8 @@ def share_around(field: AffineField, points: FloatArray, belongs: NDArray[np.boo
     points : ndarray of shape (n, 3)
         Local coordinates [m].
     belongs : ndarray of shape (n,), bool
+    thinning : int
+        One in how many of all reference points are given.
 
     Returns
     -------
@@ -147,7 +153,7 @@ def share_around(field: AffineField, points: FloatArray, belongs: NDArray[np.boo
     """
     from scipy.spatial import cKDTree
 
-    step = max(1, int(np.median(field.points[field.status == Status.FINE])) // 200)
+    step = max(1, int(np.median(field.points[field.status == Status.FINE])) // (200 * thinning))
     sample, known = points[::step], belongs[::step]
     tree, gauges = cKDTree(sample), cKDTree(field.position)
     pairs = gauges.sparse_distance_matrix(tree, field.gauge_length / 2, output_type="ndarray")

@@ -135,7 +135,7 @@ def cut_sections(
     _check(spacing, thickness, chords)
     if thickness is None:
         thickness = max(slice_thickness(median_spacing(points)) for points in (reference, current))
-    chainages = _chainages(axis, spacing, thickness)
+    chainages = section_chainages(axis, spacing, thickness)
     named = {**DIAMETERS, **{chord_name(pair): pair for pair in chords}}
     places, frames = axis.at(chainages)[0], axis.frames(chainages)
     before = _outlines(axis, reference, chainages, thickness)
@@ -155,7 +155,7 @@ def slice_thickness(spacing: float) -> float:
     return max(MIN_THICKNESS, PER_PIECE * spacing**2 / ARC)
 
 
-def _chainages(axis: Axis, spacing: float, thickness: float) -> FloatArray:
+def section_chainages(axis: Axis, spacing: float, thickness: float) -> FloatArray:
     """Multiples of the spacing whose slices keep clear of the ends, or the middle where there are none."""
     clear = 0.5 * thickness + END * axis.radius
     first, last = np.ceil(clear / spacing), np.floor((axis.length - clear) / spacing)

@@ -7,8 +7,15 @@ import numpy as np
 import pytest
 
 from scanstrain.cells import make_cells
-from scanstrain.neighbourhood.covariance import FAMILIES, Covariance, fit_correlation, measure_covariance
+from scanstrain.neighbourhood.covariance import (
+    FAMILIES,
+    Covariance,
+    fit_correlation,
+    local_covariance,
+    measure_structure,
+)
 from scanstrain.neighbourhood.level import Level, make_surface
+from scanstrain.neighbourhood.pairs import GREY, HEIGHT, count_pairs
 from scanstrain.neighbourhood.predict import krige, lookup
 from scanstrain.neighbourhood.smooth import smooth_surface, support_cells
 from scanstrain.neighbourhood.solve import solve_in_place
@@ -145,6 +152,11 @@ def test_prediction_variance_is_that_of_ordinary_kriging(kriged):
     assert variance == pytest.approx(expected.mean(), rel=0.02)
 
 
+def measured_covariances(cells, smooth):
+    pairs = count_pairs(cells, smooth, gate=0.01, region_width=0.2, stride=1)
+    return [local_covariance(pairs, kind, measure_structure([pairs], kind)) for kind in (HEIGHT, GREY)]
+
+
 def test_measured_covariance_of_known_noise_and_texture():
     """Noise of height and intensity, and the sill of both, of a wall drawn with known ones."""
     wall = Wall(3.0, 3.0)
@@ -157,7 +169,7 @@ def test_measured_covariance_of_known_noise_and_texture():
     grey = 1500 + texture(q) + rng.normal(0, 30.0, len(q))
     cells = make_cells(points, 0.008, intensity=grey)
     smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, 0.15))
-    height, intensity = measure_covariance(cells, smooth, gate=0.01, region_width=0.2)
+    height, intensity = measured_covariances(cells, smooth)
     assert np.sqrt(np.median(height.noise)) == pytest.approx(5e-4, rel=0.1)
     assert np.sqrt(np.median(intensity.noise)) == pytest.approx(30.0, rel=0.2)
     # The correlation at half a correlation length, which the sill and the family share between them.
@@ -173,7 +185,7 @@ def test_even_reflectance_shows_no_structure():
     points = wall.points(q) + rng.normal(0, 5e-4, (len(q), 1)) * wall.frames(q)[:, :, 2]
     cells = make_cells(points, 0.01, intensity=1500 + rng.normal(0, 30.0, len(q)))
     smooth = smooth_surface(cells.centre, cells.normal, support_cells(cells.position, 0.15))
-    _, intensity = measure_covariance(cells, smooth, gate=0.01, region_width=0.2)
+    _, intensity = measured_covariances(cells, smooth)
     assert (intensity.sill == 0).mean() > 0.98
     assert np.sqrt(np.median(intensity.noise)) == pytest.approx(30.0, rel=0.05)
 

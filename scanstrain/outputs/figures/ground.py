@@ -81,7 +81,7 @@ def stable_gauges(result: Result) -> BoolArray:
 
     points = result.reference.points
     step = max(1, len(points) // MOST_POINTS)
-    strain, stable = result.strain, result.registration.stable[::step]
+    strain, stable = result.strain, np.asarray(result.points["stable"])[::step] > 0
     # every point speaks for its nearest gauge only
     distance, gauge = cKDTree(strain.position).query(points[::step])
     near = distance <= strain.gauge_length / 2
