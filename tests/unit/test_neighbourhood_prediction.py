@@ -101,10 +101,10 @@ def kriged():
     share = 1.0 / rng.integers(1, 4, 40)
     values = 100.0 + rng.normal(0, 2, 40)
     table, step = Covariance("matern52", LENGTH, np.ones(1), np.ones(1)).table(0.15)
-    weights, L = np.empty(64), np.empty((64, 64))
+    weights, work = np.empty(64), np.empty((64, 69))
     probe = 0.01
     offset, variance, _, _ = krige(
-        xy[:, 0].copy(), xy[:, 1].copy(), values, share, 40, table, step, NOISE, SILL, probe, weights, L
+        xy[:, 0].copy(), xy[:, 1].copy(), values, share, 40, table, step, NOISE, SILL, probe, weights, work
     )
 
     def ours(places):
