@@ -140,14 +140,9 @@ def _covariances(
     out: FloatArray,
 ) -> None:  # fmt: skip
     """Covariances of the values at the places (s, t) with that at (a, c)."""
-    last = len(table) - 1
     for i in range(len(out)):
         dx, dy = s[i] - a, t[i] - c
-        place = (dx * dx + dy * dy) / step
-        row = min(int(place), last - 1)
-        part = place - row
-        value = table[row, 0] * (1.0 - part) + table[row + 1, 0] * part
-        out[i] = constant + (sill * value if place < last else 0.0)
+        out[i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
 
 
 @numba.njit(cache=True, nogil=True, fastmath=LANES)
