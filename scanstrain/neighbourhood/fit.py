@@ -12,7 +12,7 @@ square. So one prior standard deviation means the same for all, and the equation
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import math
 
 import numba
 import numpy as np
@@ -54,22 +54,22 @@ CELLS, MATCHED, POINTS, SCALE_NORMAL, SCALE_GREY, COVER = range(6)
 
 
 def _tukey_moments(cut: float) -> tuple[float, float]:
-    """For Gaussian residuals: weighted over plain variance, and sandwich over weighted-normal covariance."""
-    from scipy.integrate import quad
-    from scipy.stats import norm
+    """For Gaussian residuals: weighted over plain variance, and sandwich over weighted-normal covariance.
 
-    def mean(f: Callable[[float], float]) -> float:
-        return float(quad(lambda r: f(r) * norm.pdf(r), -cut, cut)[0])
+    In closed form, by M_k = (2 k - 1) M_(k-1) - 2 c^(2 k - 1) phi(c) for the moments of r^(2 k) within the cut-off c.
+    """
+    moments = [math.erf(cut / math.sqrt(2.0))]
+    rim = math.exp(-0.5 * cut * cut) / math.sqrt(2.0 * math.pi)
+    for k in range(1, 6):
+        moments.append((2 * k - 1) * moments[-1] - 2.0 * cut ** (2 * k - 1) * rim)
 
-    def weight(r: float) -> float:
-        return (1 - (r / cut) ** 2) ** 2
+    def mean(first: int, *coefficients: float) -> float:
+        """Mean of r^(2 first) times a polynomial in (r / c)^2."""
+        return sum(c * moments[first + k] / cut ** (2 * k) for k, c in enumerate(coefficients))
 
-    def slope(r: float) -> float:
-        return (1 - (r / cut) ** 2) * (1 - 5 * (r / cut) ** 2)
-
-    mean_weight = mean(weight)
-    shrink = mean(lambda r: weight(r) * r * r) / mean_weight
-    return shrink, mean(lambda r: (weight(r) * r) ** 2) / mean(slope) ** 2 * mean_weight
+    # w = (1 - q)^2, its product with r^2, (w r)^2 and (w r)' in powers of q = (r / c)^2
+    weight, squares = mean(0, 1.0, -2.0, 1.0), mean(1, 1.0, -2.0, 1.0)
+    return squares / weight, mean(1, 1.0, -4.0, 6.0, -4.0, 1.0) / mean(0, 1.0, -6.0, 5.0) ** 2 * weight
 
 
 TUKEY_SHRINK, TUKEY_INFLATE = _tukey_moments(TUKEY)
@@ -330,7 +330,11 @@ def fit_gauges(
         if m < min_cells:
             continue
         n = UNKNOWNS if textured else MOTION
-        surface, grey, data = np.empty((MOTION, m)), np.empty((len(GREY_UNKNOWNS), m if textured else 0)), np.empty((6, m))
+        surface, grey, data = (
+            np.empty((MOTION, m)),
+            np.empty((len(GREY_UNKNOWNS), m if textured else 0)),
+            np.empty((6, m)),
+        )
         observation_rows(members[:m], o, f, radius, table, gains[g], surface, grey, data)
         N, b, x = np.zeros((UNKNOWNS, UNKNOWNS)), np.zeros(UNKNOWNS), np.zeros(UNKNOWNS)
         x[:MOTION] = held[g]

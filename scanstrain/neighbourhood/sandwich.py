@@ -149,7 +149,11 @@ def correlated_covariance(
             if table[members[r], VALID] != 0.0:
                 members[m] = members[r]
                 m += 1
-        surface, grey, data = np.empty((MOTION, m)), np.empty((len(GREY_UNKNOWNS), m if textured else 0)), np.empty((6, m))
+        surface, grey, data = (
+            np.empty((MOTION, m)),
+            np.empty((len(GREY_UNKNOWNS), m if textured else 0)),
+            np.empty((6, m)),
+        )
         observation_rows(members[:m], o, f, radius, table, gains[g], surface, grey, data)
         place, units, w = np.empty((m, 2), np.int64), np.empty((2, m)), np.empty(m)
         for r in range(m):

@@ -139,7 +139,7 @@ def reduce_rows(W: FloatArray, m: int, extra: int) -> bool:
 
 @numba.njit(cache=True, nogil=True, fastmath=LANES)
 def back_rows(W: FloatArray, m: int, x: FloatArray) -> None:
-    """Solve U x' = y for every right side that `reduce_rows` left behind the factor, into the rows of `x` (extra, m)."""
+    """Solve U x' = y for the right sides that `reduce_rows` left behind the factor, into the rows of `x` (extra, m)."""
     for i in range(m - 1, -1, -1):
         row = W[i, i + 1 : m]
         inverse_pivot = 1.0 / W[i, i]
