@@ -210,8 +210,8 @@ def reweight(
     cut = 1.0 / (TUKEY * TUKEY * max(scale, 1e-12))
     total = weighted = 0.0
     for r in range(m):
-        q = max(1.0 - e[r] * cut, 0.0)
-        k = q * q
+        q = 1.0 - e[r] * cut
+        k = q * q if q > 0.0 else 0.0
         w[r] = k / variance[r]
         total += k
         weighted += k * e[r]
