@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.cells import KEY_BITS, group, voxel_keys
-from scanstrain.neighbourhood.fit import in_frame, members_of
+from scanstrain.neighbourhood.fit import members_of, placed, turned
 from scanstrain.neighbourhood.joint_cuts import keep_own_side
 from scanstrain.neighbourhood.rows import LEAST_NOISE
 from scanstrain.neighbourhood.solve import solve_in_place
@@ -108,14 +108,14 @@ def _square_sums(
     found = members_of(o, f, k, radius, gate, key, start, table, members)
     for r in range(keep_own_side(o, f, pieces, table, members, found)):
         row = table[members[r]]
-        x, y, _ = in_frame(row[_POSITION : _POSITION + 3] - o, f)
-        facing = in_frame(row[_NORMAL : _NORMAL + 3], f)[2]
+        x, y, _ = placed(table, members[r], o, f)
+        facing = row[_NORMAL] * f[0, 2] + row[_NORMAL + 1] * f[1, 2] + row[_NORMAL + 2] * f[2, 2]
         s = sums[square_of(x, radius, across), square_of(y, radius, across)]
         s[0] += 1.0
         # Of the motion, the part along the normal of the smooth patch stays in: it is nearly a quadratic. What a slide
         # does through the slope of relief is taken out, since it looks like relief.
         s[1] += row[_VALUE] if facing > 0.0 else -row[_VALUE]
-        u, v, w = in_frame(row[_MOTION : _MOTION + 3], f)
+        u, v, w = turned(row[_MOTION], row[_MOTION + 1], row[_MOTION + 2], f)
         p, q = x + 0.5 * u, y + 0.5 * v
         slope, across_slope = k[0] * p + k[1] * q, k[1] * p + k[2] * q
         s[1] += (w - slope * u - across_slope * v) / np.sqrt(1.0 + slope**2 + across_slope**2)

@@ -12,7 +12,7 @@ square. So one prior standard deviation means the same for all, and the equation
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import math
 
 import numba
 import numpy as np
@@ -20,13 +20,15 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import KEY_BITS, find_key, pack
 from scanstrain.neighbourhood.joint_cuts import keep_own_side
-from scanstrain.neighbourhood.solve import accumulate, inverse, solve_in_place
+from scanstrain.neighbourhood.solve import LANES, accumulate, inverse, solve_in_place
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 UNKNOWNS = 14
 MOTION = 12
+GREY_UNKNOWNS = np.array([0, 1, 2, 3, 4, 5, 6, 7, 8, 12, 13])
+"""Unknowns of which intensity rows depend: all but the second derivatives of the normal part."""
 TUKEY = 6.0
 """Cut-off of the redescending weight in standard deviations: 98 % efficient, blind to gross errors."""
 ROUNDS = 2
@@ -52,36 +54,42 @@ CELLS, MATCHED, POINTS, SCALE_NORMAL, SCALE_GREY, COVER = range(6)
 
 
 def _tukey_moments(cut: float) -> tuple[float, float]:
-    """For Gaussian residuals: weighted over plain variance, and sandwich over weighted-normal covariance."""
-    from scipy.integrate import quad
-    from scipy.stats import norm
+    """For Gaussian residuals: weighted over plain variance, and sandwich over weighted-normal covariance.
 
-    def mean(f: Callable[[float], float]) -> float:
-        return float(quad(lambda r: f(r) * norm.pdf(r), -cut, cut)[0])
+    In closed form, by M_k = (2 k - 1) M_(k-1) - 2 c^(2 k - 1) phi(c) for the moments of r^(2 k) within the cut-off c.
+    """
+    moments = [math.erf(cut / math.sqrt(2.0))]
+    rim = math.exp(-0.5 * cut * cut) / math.sqrt(2.0 * math.pi)
+    for k in range(1, 6):
+        moments.append((2 * k - 1) * moments[-1] - 2.0 * cut ** (2 * k - 1) * rim)
 
-    def weight(r: float) -> float:
-        return (1 - (r / cut) ** 2) ** 2
+    def mean(first: int, *coefficients: float) -> float:
+        """Mean of r^(2 first) times a polynomial in (r / c)^2."""
+        return sum(c * moments[first + k] / cut ** (2 * k) for k, c in enumerate(coefficients))
 
-    def slope(r: float) -> float:
-        return (1 - (r / cut) ** 2) * (1 - 5 * (r / cut) ** 2)
-
-    mean_weight = mean(weight)
-    shrink = mean(lambda r: weight(r) * r * r) / mean_weight
-    return shrink, mean(lambda r: (weight(r) * r) ** 2) / mean(slope) ** 2 * mean_weight
+    # w = (1 - q)^2, its product with r^2, (w r)^2 and (w r)' in powers of q = (r / c)^2
+    weight, squares = mean(0, 1.0, -2.0, 1.0), mean(1, 1.0, -2.0, 1.0)
+    return squares / weight, mean(1, 1.0, -4.0, 6.0, -4.0, 1.0) / mean(0, 1.0, -6.0, 5.0) ** 2 * weight
 
 
 TUKEY_SHRINK, TUKEY_INFLATE = _tukey_moments(TUKEY)
 """Constants of the redescending weight for Gaussian residuals (closed-form integrals)."""
 
 
-@numba.njit(cache=True, nogil=True)
-def in_frame(v: FloatArray, f: FloatArray) -> tuple[float, float, float]:
-    """Components of a vector in the columns of `f`."""
+@numba.njit(cache=True, nogil=True, inline="always")
+def turned(x: float, y: float, z: float, f: FloatArray) -> tuple[float, float, float]:
+    """Components of the vector (x, y, z) in the columns of `f`; single numbers, since an array a cell costs more."""
     return (
-        v[0] * f[0, 0] + v[1] * f[1, 0] + v[2] * f[2, 0],
-        v[0] * f[0, 1] + v[1] * f[1, 1] + v[2] * f[2, 1],
-        v[0] * f[0, 2] + v[1] * f[1, 2] + v[2] * f[2, 2],
+        x * f[0, 0] + y * f[1, 0] + z * f[2, 0],
+        x * f[0, 1] + y * f[1, 1] + z * f[2, 1],
+        x * f[0, 2] + y * f[1, 2] + z * f[2, 2],
     )
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def placed(table: FloatArray, c: int, o: FloatArray, f: FloatArray) -> tuple[float, float, float]:
+    """Place of row `c` of a table, which begins with places, in the frame `f` at `o`."""
+    return turned(table[c, 0] - o[0], table[c, 1] - o[1], table[c, 2] - o[2], f)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -98,11 +106,11 @@ def members_of(
         if b < 0:
             continue
         for c in range(start[b], start[b + 1]):
-            x, y, z = in_frame(table[c, POSITION : POSITION + 3] - o, f)
+            x, y, z = placed(table, c, o, f)
             if x * x + y * y > radius * radius:
                 continue
             z -= 0.5 * k[0] * x * x + k[1] * x * y + 0.5 * k[2] * y * y
-            facing = in_frame(table[c, NORMAL : NORMAL + 3], f)[2]
+            facing = table[c, NORMAL] * f[0, 2] + table[c, NORMAL + 1] * f[1, 2] + table[c, NORMAL + 2] * f[2, 2]
             if abs(z) < gate and abs(facing) > SAME_SHEET and m < len(out):
                 out[m] = c
                 m += 1
@@ -124,25 +132,27 @@ def _keep_matched(
         members[m] = c
         m += 1
         points += table[c, COUNT]
-        x, y, _ = in_frame(table[c, POSITION : POSITION + 3] - o, f)
+        x, y, _ = placed(table, c, o, f)
         half = 0.4999 * COVER_BINS
         cover[int((x / radius + 1.0) * half), int((y / radius + 1.0) * half)] = True
     info[CELLS], info[MATCHED], info[POINTS], info[COVER] = total, m, points, cover.sum() / _DISC_BINS
     return m
 
 
-@numba.njit(cache=True, nogil=True)
-def _design(s: tuple[float, float, float], x: tuple[float, float, float], radius: float, a: FloatArray, r: int) -> None:
-    """Derivatives of s.u(x) by the motion unknowns into column `r`.
+@numba.njit(cache=True, nogil=True, inline="always")
+def _design(
+    s: tuple[float, float, float], x1: float, x2: float, x3: float, curved: bool, a: FloatArray, r: int
+) -> None:  # fmt: skip
+    """Derivatives of s.u(x) by the motion unknowns into column `r`; second derivatives only where `curved`.
 
     The height coordinate enters because a tilt turns it into the plane: without it a pure rotation of a curved
     patch would not be an exact solution.
     """
-    x1, x2, x3 = x[0] / radius, x[1] / radius, x[2] / radius
     a[0, r], a[1, r], a[2, r] = s[0], s[1], s[2]
     a[3, r], a[4, r], a[5, r], a[6, r] = s[0] * x1, s[0] * x2, s[1] * x1, s[1] * x2
     a[7, r], a[8, r] = s[2] * x1 - s[0] * x3, s[2] * x2 - s[1] * x3
-    a[9, r], a[10, r], a[11, r] = 0.5 * s[2] * x1 * x1, s[2] * x1 * x2, 0.5 * s[2] * x2 * x2
+    if curved:
+        a[9, r], a[10, r], a[11, r] = 0.5 * s[2] * x1 * x1, s[2] * x1 * x2, 0.5 * s[2] * x2 * x2
 
 
 @numba.njit(cache=True, nogil=True)
@@ -150,7 +160,10 @@ def observation_rows(
     members: IntArray, o: FloatArray, f: FloatArray, radius: float, table: FloatArray, gain: float,
     surface: FloatArray, grey: FloatArray, data: FloatArray,
 ) -> None:  # fmt: skip
-    """Fill surface rows (12, m), intensity rows (14, m) and `data`: two right sides, two variances, two spreads."""
+    """Fill surface rows (12, m), intensity rows (11, m) and `data`: two right sides, two variances, two spreads.
+
+    Intensity says nothing of second derivatives, so its rows leave them out; see `GREY_UNKNOWNS`.
+    """
     m = len(members)
     textured = grey.shape[1] > 0
     mean = 0.0
@@ -158,22 +171,24 @@ def observation_rows(
         mean += table[members[r], GREY] / m
     for r in range(m):
         c = members[r]
-        x = in_frame(table[c, POSITION : POSITION + 3] - o, f)
-        s, moved = table[c, SLOPE : SLOPE + 3], table[c, MOVED : MOVED + 3]
-        _design(in_frame(s, f), x, radius, surface, r)
-        data[0, r] = s[0] * moved[0] + s[1] * moved[1] + s[2] * moved[2] - table[c, MISFIT]
+        x, y, z = placed(table, c, o, f)
+        x, y, z = x / radius, y / radius, z / radius
+        s0, s1, s2 = table[c, SLOPE], table[c, SLOPE + 1], table[c, SLOPE + 2]
+        u0, u1, u2 = table[c, MOVED], table[c, MOVED + 1], table[c, MOVED + 2]
+        _design(turned(s0, s1, s2, f), x, y, z, True, surface, r)
+        data[0, r] = s0 * u0 + s1 * u1 + s2 * u2 - table[c, MISFIT]
         data[2, r], data[4, r] = table[c, VARIANCE], table[c, VARIANCE + 2]
         if textured:
-            g = gain * table[c, GREY_SLOPE : GREY_SLOPE + 3]
-            _design(in_frame(g, f), x, radius, grey, r)
-            grey[9, r] = grey[10, r] = grey[11, r] = 0.0
-            grey[12, r], grey[13, r] = table[c, GREY] - mean, 1.0
-            along = g[0] * moved[0] + g[1] * moved[1] + g[2] * moved[2]
-            data[1, r] = table[c, OWN_GREY] - gain * table[c, GREY] + along
+            s0, s1, s2 = (
+                gain * table[c, GREY_SLOPE], gain * table[c, GREY_SLOPE + 1], gain * table[c, GREY_SLOPE + 2],
+            )  # fmt: skip
+            _design(turned(s0, s1, s2, f), x, y, z, False, grey, r)
+            grey[9, r], grey[10, r] = table[c, GREY] - mean, 1.0
+            data[1, r] = table[c, OWN_GREY] - gain * table[c, GREY] + s0 * u0 + s1 * u1 + s2 * u2
             data[3, r], data[5, r] = table[c, VARIANCE + 1], table[c, VARIANCE + 3]
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
 def reweight(
     rows: FloatArray, rhs: FloatArray, spread: FloatArray, variance: FloatArray, x: FloatArray, scale: float,
     start: bool, spent: int, w: FloatArray,
@@ -185,20 +200,21 @@ def reweight(
     n, m = rows.shape
     e = rhs.copy()
     for i in range(n):
+        value, row = x[i], rows[i]
         for r in range(m):
-            e[r] -= rows[i, r] * x[i]
+            e[r] -= row[r] * value
     for r in range(m):
-        e[r] /= np.sqrt(spread[r])
+        e[r] = e[r] * e[r] / spread[r]
     if start:
-        scale = (1.4826 * np.median(np.abs(e))) ** 2
-    cut = TUKEY * TUKEY * max(scale, 1e-12)
+        scale = 1.4826**2 * np.median(e)
+    cut = 1.0 / (TUKEY * TUKEY * max(scale, 1e-12))
     total = weighted = 0.0
     for r in range(m):
-        q = 1.0 - e[r] * e[r] / cut
+        q = 1.0 - e[r] * cut
         k = q * q if q > 0.0 else 0.0
         w[r] = k / variance[r]
         total += k
-        weighted += k * e[r] * e[r]
+        weighted += k * e[r]
     return max(weighted / max(total - spent, 1.0) / TUKEY_SHRINK, 1e-12)
 
 
@@ -215,8 +231,13 @@ def _normal_equations(
     scales[0] = reweight(surface, data[0], data[4], data[2], x[:MOTION], scales[0], start, 6, w)
     accumulate(surface, data[0], w / scales[0], N, b)
     if grey.shape[1]:
-        scales[1] = reweight(grey, data[1], data[5], data[3], x, scales[1], start, 8, w)
-        accumulate(grey, data[1], w / scales[1], N, b)
+        scales[1] = reweight(grey, data[1], data[5], data[3], x[GREY_UNKNOWNS], scales[1], start, 8, w)
+        part, right = np.zeros((len(grey), len(grey))), np.zeros(len(grey))
+        accumulate(grey, data[1], w / scales[1], part, right)
+        for i in range(len(grey)):
+            b[GREY_UNKNOWNS[i]] += right[i]
+            for j in range(i + 1):
+                N[GREY_UNKNOWNS[i], GREY_UNKNOWNS[j]] += part[i, j]
     for i in range(MOTION):
         N[i, i] += 1.0 / weak**2
 
@@ -309,7 +330,11 @@ def fit_gauges(
         if m < min_cells:
             continue
         n = UNKNOWNS if textured else MOTION
-        surface, grey, data = np.empty((MOTION, m)), np.empty((UNKNOWNS, m if textured else 0)), np.empty((6, m))
+        surface, grey, data = (
+            np.empty((MOTION, m)),
+            np.empty((len(GREY_UNKNOWNS), m if textured else 0)),
+            np.empty((6, m)),
+        )
         observation_rows(members[:m], o, f, radius, table, gains[g], surface, grey, data)
         N, b, x = np.zeros((UNKNOWNS, UNKNOWNS)), np.zeros(UNKNOWNS), np.zeros(UNKNOWNS)
         x[:MOTION] = held[g]

@@ -19,12 +19,14 @@ from numpy.typing import NDArray
 from scanstrain.cells import BLOCK_WIDTH, KEY_BITS, Cells, find_key, pack
 from scanstrain.neighbourhood.covariance import Covariance
 from scanstrain.neighbourhood.smooth import SmoothSurface
-from scanstrain.neighbourhood.solve import LANES, backward, factor, forward
+from scanstrain.neighbourhood.solve import LANES, back_rows, reduce_rows
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 MAX_NEIGHBOURS = 64
+PROBES = 4
+"""Places, one cell apart, at which the error of a prediction is judged."""
 MARGIN = 1.5
 """Cells kept around a block so that its border is predicted from both sides, in cells."""
 _CONSTANT = 100.0
@@ -133,61 +135,72 @@ def _neighbours(
 
 
 @numba.njit(cache=True, nogil=True, fastmath=LANES)
+def _covariances(
+    s: FloatArray, t: FloatArray, a: float, c: float, table: FloatArray, step: float, sill: float, constant: float,
+    out: FloatArray,
+) -> None:  # fmt: skip
+    """Covariances of the values at the places (s, t) with that at (a, c)."""
+    for i in range(len(out)):
+        dx, dy = s[i] - a, t[i] - c
+        out[i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
+
+
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
 def krige(
     s: FloatArray, t: FloatArray, values: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float,
-    noise: float, sill: float, probe: float, weights: FloatArray, L: FloatArray,
+    noise: float, sill: float, probe: float, weights: FloatArray, W: FloatArray,
 ) -> tuple[float, float, float, float]:  # fmt: skip
     """Solve one ordinary kriging system.
 
     Fills `weights` with the sill times K^-1 (values), to be multiplied with correlations; returns the constant and
-    what `_prediction_error` says for probes at (+-probe, +-probe).
+    what `_prediction_error` says for probes at (+-probe, +-probe). The values and the probes' covariances stand as
+    right sides behind K in `W`, which holds at least m rows of m + 5, so that one pass factors and solves.
     """
     constant = _CONSTANT * (sill + noise)
     for i in range(m):
-        for j in range(i):
-            dx, dy = s[i] - s[j], t[i] - t[j]
-            L[i, j] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
-        L[i, i] = sill + constant + noise * share[i]
-    if not factor(L, m):
+        _covariances(s[i:m], t[i:m], s[i], t[i], table, step, sill, constant, W[i, i:m])
+        W[i, i] = sill + constant + noise * share[i]
+        W[i, m] = values[i]
+    side = np.empty(m)
+    for p in range(PROBES):
+        a, b = probe * (2 * (p % 2) - 1), probe * (2 * (p // 2) - 1)
+        _covariances(s[:m], t[:m], a, b, table, step, sill, constant, side)
+        for i in range(m):
+            W[i, m + 1 + p] = side[i]
+    if not reduce_rows(W, m, 1 + PROBES):
         weights[:m] = 0.0
         return values[:m].mean(), np.inf, np.inf, np.inf
-    weights[:m] = values[:m]
-    forward(L, weights, m)
-    backward(L, weights, m)
-    offset = constant * weights[:m].sum()
+    solved = np.empty((1 + PROBES, m))
+    back_rows(W, m, solved)
+    offset = 0.0
     for i in range(m):
-        weights[i] *= sill
-    return (offset, *_prediction_error(s, t, share, m, table, step, noise, sill, constant, probe, L))
+        offset += solved[0, i]
+        weights[i] = sill * solved[0, i]
+    return (constant * offset, *_prediction_error(share, m, table, step, noise, sill, constant, probe, W, solved))
 
 
 @numba.njit(cache=True, nogil=True, fastmath=LANES)
 def _prediction_error(
-    s: FloatArray, t: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float, noise: float, sill: float,
-    constant: float, probe: float, L: FloatArray,
+    share: FloatArray, m: int, table: FloatArray, step: float, noise: float, sill: float, constant: float,
+    probe: float, W: FloatArray, solved: FloatArray,
 ) -> tuple[float, float, float]:  # fmt: skip
     """Prediction variance, what unresolved structure adds per row to the variance of a sum over many rows, noise alone.
 
     Judged at four probes one cell apart. Neighbouring rows miss the same structure, so to the variance of one row
     come its covariances with the four nearest and four diagonal neighbours, as far as these cells are filled.
     """
-    y, weights = np.empty((4, m)), np.empty((4, m))
-    for p in range(4):
-        a, b = probe * (2 * (p % 2) - 1), probe * (2 * (p // 2) - 1)
-        for i in range(m):
-            dx, dy = s[i] - a, t[i] - b
-            y[p, i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
-        forward(L, y[p], m)
-        weights[p] = y[p]
-        backward(L, weights[p], m)
     variance = own = side = diagonal = 0.0
-    for p in range(4):
+    for p in range(PROBES):
+        ours = solved[1 + p]
         for q in range(p + 1):
             apart = (p % 2 != q % 2) + (p // 2 != q // 2)
             total = sill * lookup(table, 0, 4.0 * apart * probe * probe, step) + constant
             through = 0.0
+            theirs = solved[1 + q]
             for i in range(m):
-                total -= y[p, i] * y[q, i]
-                through += weights[p, i] * weights[q, i] * noise * share[i]
+                total -= W[i, m + 1 + p] * W[i, m + 1 + q]
+                through += ours[i] * theirs[i] * share[i]
+            through *= noise
             if apart == 0:
                 variance += 0.25 * max(total, through)
                 own += 0.25 * max(total - through, 0.0)
@@ -226,7 +239,7 @@ def _solve_blocks(
             continue
         cells = np.empty(MAX_NEIGHBOURS, np.int64)
         s, t, h = np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS), np.empty(MAX_NEIGHBOURS)
-        L = np.empty((MAX_NEIGHBOURS, MAX_NEIGHBOURS))
+        W = np.empty((m, m + 1 + PROBES))
         _neighbours(b, reach, gate, key, start, origin, frame, curvature, position, cells, s, t, h)
         share, grey, w = np.empty(m), np.empty(m), np.empty(m)
         for i in range(m):
@@ -234,14 +247,14 @@ def _solve_blocks(
             st[first[b] + i, 0], st[first[b] + i, 1] = s[i], t[i]
         probe = 0.5 * size / BLOCK_WIDTH
         constant[b, 0], variance[b, 0], unresolved[b, 0], through[b, 0] = krige(
-            s, t, h, share, m, height_table, step, noise[b, 0], sill[b, 0], probe, w, L
+            s, t, h, share, m, height_table, step, noise[b, 0], sill[b, 0], probe, w, W
         )
         weights_h[first[b] : first[b] + m] = w
         if len(intensity):
             for i in range(m):
                 grey[i] = intensity[cells[i]]
             constant[b, 1], variance[b, 1], unresolved[b, 1], through[b, 1] = krige(
-                s, t, grey, share, m, intensity_table, step, noise[b, 1], sill[b, 1], probe, w, L
+                s, t, grey, share, m, intensity_table, step, noise[b, 1], sill[b, 1], probe, w, W
             )
             weights_i[first[b] : first[b] + m] = w
 
@@ -308,6 +321,29 @@ def choose_block(x: float, y: float, z: float, key: IntArray, first: IntArray, s
     return best
 
 
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
+def _weighted(
+    places: FloatArray, weights: FloatArray, s: float, t: float, table: FloatArray, step: float
+) -> tuple[float, float, float, float]:
+    """Sum of weights times correlations with (s, t), its two derivatives, and the nearest place's squared distance."""
+    last = len(table) - 1
+    value = along = across = 0.0
+    nearest = 1e300
+    for r in range(len(weights)):
+        a, c = s - places[r, 0], t - places[r, 1]
+        q = a * a + c * c
+        nearest = min(nearest, q)
+        place = q / step
+        row = min(int(place), last - 1)
+        part = place - row
+        w = weights[r] if place < last else 0.0
+        value += w * (table[row, 0] * (1.0 - part) + table[row + 1, 0] * part)
+        slope = w * (table[row, 1] * (1.0 - part) + table[row + 1, 1] * part)
+        along += slope * a
+        across += slope * c
+    return value, along, across, nearest
+
+
 @numba.njit(cache=True, nogil=True)
 def predict_at(
     b: int, x: float, y: float, z: float, origin: FloatArray, frame: FloatArray, curvature: FloatArray, first: IntArray,
@@ -326,29 +362,14 @@ def predict_at(
     k11, k12, k22 = curvature[b, 0], curvature[b, 1], curvature[b, 2]
     m = constant[b, 0] + 0.5 * k11 * s * s + k12 * s * t + 0.5 * k22 * t * t
     ms, mt = k11 * s + k12 * t, k12 * s + k22 * t
+    low, high = first[b], first[b + 1]
+    places, mine = st[low:high], weights_h[low:high]
+    du, dus, dut, nearest = _weighted(places, mine, s, t, height_table, step)
+    m, ms, mt = m + du, ms + dus, mt + dut
     grey, gs, gt = constant[b, 1], 0.0, 0.0
-    textured = len(weights_i) > 0
-    nearest = 1e300
-    for r in range(first[b], first[b + 1]):
-        a, c = s - st[r, 0], t - st[r, 1]
-        q = a * a + c * c
-        nearest = min(nearest, q)
-        place = q / step
-        i = int(place)
-        if i >= len(height_table) - 1:
-            continue
-        part = place - i
-        k = height_table[i, 0] * (1.0 - part) + height_table[i + 1, 0] * part
-        dk = height_table[i, 1] * (1.0 - part) + height_table[i + 1, 1] * part
-        m += weights_h[r] * k
-        ms += weights_h[r] * dk * a
-        mt += weights_h[r] * dk * c
-        if textured:
-            k = intensity_table[i, 0] * (1.0 - part) + intensity_table[i + 1, 0] * part
-            dk = intensity_table[i, 1] * (1.0 - part) + intensity_table[i + 1, 1] * part
-            grey += weights_i[r] * k
-            gs += weights_i[r] * dk * a
-            gt += weights_i[r] * dk * c
+    if len(weights_i) > 0:
+        du, gs, gt, _ = _weighted(places, weights_i[low:high], s, t, intensity_table, step)
+        grey += du
     out[0] = h - m
     for a in range(3):
         out[1 + a] = frame[b, a, 2] - ms * frame[b, a, 0] - mt * frame[b, a, 1]

@@ -12,22 +12,26 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.neighbourhood.fit import (
+    GREY_UNKNOWNS,
     LEAST_SCALE,
     MOTION,
     TUKEY_INFLATE,
     UNKNOWNS,
     VALID,
-    in_frame,
     members_of,
     observation_rows,
+    placed,
     reweight,
 )
 from scanstrain.neighbourhood.joint_cuts import keep_own_side
 from scanstrain.neighbourhood.solve import accumulate, inverse
-from scanstrain.neighbourhood.squares import spread, square_of, taps
+from scanstrain.neighbourhood.squares import add_scaled, spread, square_of, taps
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
+
+SURFACE_UNKNOWNS = np.arange(MOTION)
+"""Unknowns of which surface rows depend: all motion."""
 
 
 @numba.njit(cache=True, nogil=True)
@@ -56,21 +60,23 @@ def shared_middle(
         s = w[r] * np.sqrt(unit[r])
         for i in range(n):
             sums[place[r, 0], place[r, 1], i] += s * rows[i, r]
-    A = sums.reshape(across * across, n)
     out = np.zeros((n, n))
     for k in range(len(lengths)):
         if shares[k] > 0.0:
             spread(sums, taps(lengths[k], width), smooth)
-            out += shares[k] * (A.T @ smooth.reshape(across * across, n))
+            for p in range(across):
+                for q in range(across):
+                    for i in range(n):
+                        add_scaled(shares[k] * sums[p, q, i], smooth[p, q], out[i])
     return out
 
 
 @numba.njit(cache=True, nogil=True)
 def _add(
     rows: FloatArray, rhs: FloatArray, w: FloatArray, own: float, unit: FloatArray, place: IntArray, across: int,
-    width: float, lengths: FloatArray, shares: FloatArray, N: FloatArray, B: FloatArray,
+    width: float, lengths: FloatArray, shares: FloatArray, unknown: IntArray, N: FloatArray, B: FloatArray,
 ) -> None:  # fmt: skip
-    """Add rows of one kind to the normal equations and to the middle of the sandwich."""
+    """Add rows of one kind, which depend on the unknowns `unknown`, to the equations and the middle of the sandwich."""
     n = len(rows)
     part, unused = np.zeros((n, n)), np.zeros(n)
     accumulate(rows, rhs, w, part, unused)
@@ -78,8 +84,8 @@ def _add(
     for i in range(n):
         for j in range(n):
             value = part[i, j] if j <= i else part[j, i]
-            N[i, j] += value
-            B[i, j] += own * value + shared[i, j]
+            N[unknown[i], unknown[j]] += value
+            B[unknown[i], unknown[j]] += own * value + shared[i, j]
 
 
 @numba.njit(cache=True, nogil=True)
@@ -143,27 +149,38 @@ def correlated_covariance(
             if table[members[r], VALID] != 0.0:
                 members[m] = members[r]
                 m += 1
-        surface, grey, data = np.empty((MOTION, m)), np.empty((UNKNOWNS, m if textured else 0)), np.empty((6, m))
+        surface, grey, data = (
+            np.empty((MOTION, m)),
+            np.empty((len(GREY_UNKNOWNS), m if textured else 0)),
+            np.empty((6, m)),
+        )
         observation_rows(members[:m], o, f, radius, table, gains[g], surface, grey, data)
         place, units, w = np.empty((m, 2), np.int64), np.empty((2, m)), np.empty(m)
         for r in range(m):
-            x, y, _ = in_frame(table[members[r], :3] - o, f)
+            x, y, _ = placed(table, members[r], o, f)
             place[r, 0], place[r, 1] = square_of(x, radius, across), square_of(y, radius, across)
             units[0, r], units[1, r] = unit[members[r], 0], unit[members[r], 1]
             # Blocks take the signs of their normals at random; what they share has one sign.
             if surface[2, r] < 0.0:
                 data[0, r] = -data[0, r]
-                surface[:, r] = -surface[:, r]
+                for i in range(MOTION):
+                    surface[i, r] = -surface[i, r]
         N, B, x_now = np.zeros((UNKNOWNS, UNKNOWNS)), np.zeros((UNKNOWNS, UNKNOWNS)), np.zeros(UNKNOWNS)
         x_now[:MOTION] = held[g]
         width = 2.0 * radius / across
         reweight(surface, data[0], data[4], data[2], x_now[:MOTION], scales[g, 0], False, 6, w)
-        _add(surface, data[0], w / scales[g, 0], own[0], units[0], place, across, width, lengths, shares[0], N, B)
+        _add(
+            surface, data[0], w / scales[g, 0], own[0], units[0], place, across, width, lengths, shares[0],
+            SURFACE_UNKNOWNS, N, B,
+        )  # fmt: skip
         smallest = scales[g, 0]
         if textured:
             smallest = min(smallest, scales[g, 1])
-            reweight(grey, data[1], data[5], data[3], x_now, scales[g, 1], False, 8, w)
-            _add(grey, data[1], w / scales[g, 1], own[1], units[1], place, across, width, lengths, shares[1], N, B)
+            reweight(grey, data[1], data[5], data[3], x_now[GREY_UNKNOWNS], scales[g, 1], False, 8, w)
+            _add(
+                grey, data[1], w / scales[g, 1], own[1], units[1], place, across, width, lengths, shares[1],
+                GREY_UNKNOWNS, N, B,
+            )  # fmt: skip
         for i in range(MOTION):
             N[i, i] += 1.0 / weak**2
             B[i, i] += 1.0 / weak**2

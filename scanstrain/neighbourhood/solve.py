@@ -13,6 +13,9 @@ FloatArray = NDArray[np.float64]
 # run and for any number of threads, since each system is summed by one thread. NaN keeps its meaning.
 LANES = {"reassoc", "contract", "nsz"}
 
+PIECE = 256
+"""Columns that are summed at a time: fourteen rows of them stay in the nearest cache (32 kB)."""
+
 
 @numba.njit(cache=True, nogil=True, fastmath=LANES)
 def forward(L: FloatArray, b: FloatArray, n: int) -> None:
@@ -82,16 +85,67 @@ def inverse(A: FloatArray, n: int, out: FloatArray) -> bool:
 def accumulate(rows: FloatArray, rhs: FloatArray, w: FloatArray, N: FloatArray, b: FloatArray) -> None:
     """Add the weighted normal equations of `rows` (n, m) to the lower triangle of `N` and to `b`."""
     n, m = rows.shape
-    weighted = np.empty(m)
-    for i in range(n):
-        for r in range(m):
-            weighted[r] = w[r] * rows[i, r]
-        s = 0.0
-        for r in range(m):
-            s += weighted[r] * rhs[r]
-        b[i] += s
-        for j in range(i + 1):
+    weighted = np.empty(PIECE)
+    # Slices, because a compiler that knows that no index is negative sums in vector lanes: four times faster.
+    for low in range(0, m, PIECE):
+        size = min(PIECE, m - low)
+        weight, right = w[low : low + size], rhs[low : low + size]
+        for i in range(n):
+            row = rows[i, low : low + size]
             s = 0.0
-            for r in range(m):
-                s += weighted[r] * rows[j, r]
-            N[i, j] += s
+            for r in range(size):
+                value = weight[r] * row[r]
+                weighted[r] = value
+                s += value * right[r]
+            b[i] += s
+            for j in range(i + 1):
+                row = rows[j, low : low + size]
+                s = 0.0
+                for r in range(size):
+                    s += weighted[r] * row[r]
+                N[i, j] += s
+
+
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
+def reduce_rows(W: FloatArray, m: int, extra: int) -> bool:
+    """Cholesky factor of the upper triangle of `W[:m, :m]`, and what it makes of the right sides behind it.
+
+    With K = U'U, the triangle becomes U and the columns m to m + extra become U'^-1 times them, row by row in one
+    pass. False where K is not positive.
+    """
+    wide = m + extra
+    for i in range(m):
+        row = W[i, i:wide]
+        k = 0
+        while k + 3 < i:
+            r0, r1, r2, r3 = W[k, i:wide], W[k + 1, i:wide], W[k + 2, i:wide], W[k + 3, i:wide]
+            f0, f1, f2, f3 = r0[0], r1[0], r2[0], r3[0]
+            for j in range(len(row)):
+                row[j] -= f0 * r0[j] + f1 * r1[j] + f2 * r2[j] + f3 * r3[j]
+            k += 4
+        while k < i:
+            r0 = W[k, i:wide]
+            f0 = r0[0]
+            for j in range(len(row)):
+                row[j] -= f0 * r0[j]
+            k += 1
+        if not row[0] > 0.0:
+            return False
+        f0 = 1.0 / np.sqrt(row[0])
+        for j in range(len(row)):
+            row[j] *= f0
+    return True
+
+
+@numba.njit(cache=True, nogil=True, fastmath=LANES)
+def back_rows(W: FloatArray, m: int, x: FloatArray) -> None:
+    """Solve U x' = y for the right sides that `reduce_rows` left behind the factor, into the rows of `x` (extra, m)."""
+    for i in range(m - 1, -1, -1):
+        row = W[i, i + 1 : m]
+        inverse_pivot = 1.0 / W[i, i]
+        for p in range(len(x)):
+            known = x[p, i + 1 : m]
+            s = W[i, m + p]
+            for k in range(len(row)):
+                s -= row[k] * known[k]
+            x[p, i] = s * inverse_pivot

@@ -44,20 +44,25 @@ def spread(values: FloatArray, weights: FloatArray, out: FloatArray) -> None:
     """Filter `values` (n, n, k) along both axes into `out`."""
     size, layers = values.shape[0], values.shape[2]
     half = np.zeros(values.shape)
-    reach = len(weights)
+    # Squares in a row follow each other in memory, so a shift along the row is one long run, and so is a whole row.
     for i in range(size):
-        for j in range(size):
-            for jj in range(max(0, j - reach + 1), min(size, j + reach)):
-                t = weights[abs(jj - j)]
-                for k in range(layers):
-                    half[i, j, k] += t * values[i, jj, k]
+        row, into = values[i].reshape(size * layers), half[i].reshape(size * layers)
+        add_scaled(weights[0], row, into)
+        for d in range(1, min(len(weights), size)):
+            add_scaled(weights[d], row[d * layers :], into[: (size - d) * layers])
+            add_scaled(weights[d], row[: (size - d) * layers], into[d * layers :])
     out[:] = 0.0
     for i in range(size):
-        for ii in range(max(0, i - reach + 1), min(size, i + reach)):
-            t = weights[abs(ii - i)]
-            for j in range(size):
-                for k in range(layers):
-                    out[i, j, k] += t * half[ii, j, k]
+        into = out[i].reshape(size * layers)
+        for ii in range(max(0, i - len(weights) + 1), min(size, i + len(weights))):
+            add_scaled(weights[abs(ii - i)], half[ii].reshape(size * layers), into)
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def add_scaled(factor: float, values: FloatArray, out: FloatArray) -> None:
+    """Add a multiple of `values` to `out`."""
+    for k in range(len(out)):
+        out[k] += factor * values[k]
 
 
 @numba.njit(cache=True, nogil=True)

@@ -5,6 +5,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
 
@@ -27,6 +28,13 @@ from scanstrain.result import Result
 
 Writer = Callable[[Result, Path, OutputOptions], Path | None]
 """Writes one file into a folder and returns it, or None where the result has nothing for it."""
+
+BESIDE = ("strain cloud", "coloured cloud")
+"""Written one after the other in a thread beside the rest: the compressor lets go of the interpreter, which meanwhile
+draws the figures of the report."""
+
+LAST = "manifest"
+"""Names all other files, so it is written when they are there."""
 
 OUTPUTS: Registry[Writer] = Registry("output")
 OUTPUTS.add("strain cloud", write_strain_cloud)
@@ -95,5 +103,16 @@ def write_result(
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]
     target = check_folder(folder, inputs=[source for source in sources if source])
     with finished_only(target, retire=is_ours) as work:
-        written = [OUTPUTS[name](result, work, options) for name in OUTPUTS]
+        written = _write_all(result, work, options)
     return [target / path.name for path in written if path is not None]
+
+
+def _write_all(result: Result, work: Path, options: OutputOptions) -> list[Path | None]:
+    """Run every writer in the order of the registry, but those in `BESIDE` in a thread of their own, and `LAST` last."""
+    with ThreadPoolExecutor(max_workers=1) as thread:
+        beside = {name: thread.submit(OUTPUTS[name], result, work, options) for name in OUTPUTS if name in BESIDE}
+        others = [name for name in OUTPUTS if name not in beside and name != LAST]
+        written = {name: OUTPUTS[name](result, work, options) for name in others}
+        written |= {name: each.result() for name, each in beside.items()}
+    written[LAST] = OUTPUTS[LAST](result, work, options)
+    return [written[name] for name in OUTPUTS]

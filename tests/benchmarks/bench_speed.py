@@ -1,10 +1,11 @@
 # SPDX-License-Identifier: MIT
 """Speed of the whole path, LAZ in and LAZ out, against laspy alone reading both files and writing the same result.
 
-    python tests/benchmarks/bench_speed.py [--points 1000000] [--gauge 0.6] [--spacing 0.15] [--runs 2]
+    python tests/benchmarks/bench_speed.py [--points 1000000] [--gauge 0.6] [--spacing 0.15] [--runs 2] [--times 10]
 
 Every run is a process of its own; a first one on small clouds compiles and is not counted. The best run of each kind
-is reported, with its peak memory. Processor seconds count both cores: on a busy machine they tell more.
+is reported, with its peak memory. Imports are not counted on either side. Processor seconds count both cores: on a
+busy machine they tell more. With `--times` the comparison is run again with so many times the points.
 """
 
 from __future__ import annotations
@@ -28,20 +29,47 @@ MACHINE = runpy.run_path(str(HERE / "bench_machine.py"))
 ORIGIN = (482310.0, 5391270.0, 86.0)
 
 OURS = """
-import json, resource, sys, time
-folder, gauge, spacing = sys.argv[1], float(sys.argv[2]), float(sys.argv[3])
-import scanstrain
+import json, resource, runpy, sys, time
+folder, gauge, spacing, benchmarks = sys.argv[1], float(sys.argv[2]), float(sys.argv[3]), sys.argv[4]
+import numpy as np
+import scanstrain, scanstrain.outputs
 from pathlib import Path
+from scanstrain.neighbourhood import fit
+
+def peak():
+    return resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
+
+phases = runpy.run_path(f"{benchmarks}/bench_phases.py")["Phases"]()
+phases.wrap()
+members, timed = [], fit.fit_gauges
+def counted(*args):
+    start = time.perf_counter()
+    timed(*args)
+    info = args[-3]
+    members.append((time.perf_counter() - start, len(info), float(np.nansum(info[:, fit.MATCHED]))))
+fit.fit_gauges = counted
 begin, cpu = time.perf_counter(), time.process_time()
 result = scanstrain.compare(f"{folder}/a.laz", f"{folder}/b.laz", gauge_length=gauge, gauge_spacing=spacing,
                             structure="tunnel", assume_same_crs=True)
-compared = time.perf_counter()
+compared, cpu_compared, peak_compared = time.perf_counter(), time.process_time(), peak()
+scanstrain.write_result(result, Path(folder) / "out", report=False)
+bare, cpu_bare = time.perf_counter(), time.process_time()
+phases.wrap_outputs()
 scanstrain.write_result(result, Path(folder) / "out")
 done = time.perf_counter()
-peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
-print(json.dumps({**result.timing, "compare": compared - begin, "write": done - compared, "total": done - begin,
-                  "peak": peak, "cpu": time.process_time() - cpu,
-                  "gauges": len(result.strain), "fine": int((result.strain.status == 0).sum())}))
+seconds, gauges, rows = (sum(part) for part in zip(*members))
+print(json.dumps({
+    **result.timing, "compare": compared - begin, "write, no report": bare - compared, "write": done - bare,
+    "total, no report": bare - begin, "total": compared - begin + done - bare, "peak": peak(),
+    "compared": peak_compared,
+    "cpu, no report": cpu_bare - cpu, "cpu": cpu_compared - cpu + time.process_time() - cpu_bare,
+    "phases": {name: [phases.wall[name], phases.cpu[name]] for name in phases.wall},
+    "fits": gauges, "fit seconds": seconds, "rows": rows / gauges,
+    "points": len(result.reference) + len(result.current),
+    "clouds": sum(e.points.nbytes + (0 if e.intensity is None else e.intensity.nbytes)
+                  for e in (result.reference, result.current)) / 2**20,
+    "gauges": len(result.strain), "fine": int((result.strain.status == 0).sum()),
+}))
 """
 
 LASPY = """
@@ -104,27 +132,52 @@ def main():
     parser.add_argument("--gauge", type=float, default=0.6, help="gauge length [m]")
     parser.add_argument("--spacing", type=float, default=0.15, help="gauge spacing [m]")
     parser.add_argument("--runs", type=int, default=2, help="runs of each kind, of which the best counts")
+    parser.add_argument("--times", type=int, default=1, help="compare again with so many times the points")
     given = parser.parse_args()
     with tempfile.TemporaryDirectory() as name:
         small, large = Path(name) / "small", Path(name) / "large"
         for folder, points in ((small, 100_000), (large, given.points)):
             folder.mkdir()
             count = write_pair(folder, points)
-        warm = run(OURS, small, given.gauge, given.spacing)
+        shape = (given.gauge, given.spacing, HERE)
+        warm = run(OURS, small, *shape)
         print(MACHINE["machine"]())
         print(
             f"{count} points an epoch, gauge {given.gauge} m, spacing {given.spacing} m; warm-up {warm['total']:.1f} s"
         )
-        ours = min((run(OURS, large, given.gauge, given.spacing) for _ in range(given.runs)), key=lambda r: r["total"])
+        ours = min((run(OURS, large, *shape) for _ in range(given.runs)), key=lambda r: r["total"])
         alone = min((run(LASPY, large) for _ in range(given.runs)), key=lambda r: r["total"])
-    stages = ("read", "registration", "neighbourhood", "strain", "points", "write")
+        show(ours, alone)
+        if given.times > 1:
+            wide = Path(name) / "wide"
+            wide.mkdir()
+            write_pair(wide, given.times * given.points)
+            more = run(OURS, wide, *shape)
+            ratio = {key: more[key] / ours[key] for key in ("total", "total, no report", "cpu", "peak")}
+            print(f"{given.times} times the points: " + ", ".join(f"{key} x {r:.2f}" for key, r in ratio.items()))
+
+
+def show(ours, alone):
+    """Print where the time of a run went, and the ratios to laspy alone."""
+    stages = ("read", "set-ups", "structure", "registration", "neighbourhood", "strain", "sections", "points",
+              "write, no report", "write")  # fmt: skip
     rows = [(stage, f"{ours[stage]:.2f}", f"{alone[stage]:.2f}" if stage in alone else "") for stage in stages]
-    rows.append(("total", f"{ours['total']:.2f}", f"{alone['total']:.2f}"))
-    rows.append(("processor seconds", f"{ours['cpu']:.2f}", f"{alone['cpu']:.2f}"))
+    for key, theirs in (("total, no report", "total"), ("total", "total"), ("cpu, no report", "cpu"), ("cpu", "cpu")):
+        rows.append((key, f"{ours[key]:.2f}", f"{alone[theirs]:.2f}"))
     rows.append(("peak memory MB", f"{ours['peak']:.0f}", f"{alone['peak']:.0f}"))
     MACHINE["table"](("stage", "seconds", "laspy alone"), rows)
-    print(f"ratio {ours['total'] / alone['total']:.2f}; {ours['gauges']} gauges, {ours['fine']} fine, ", end="")
-    print(f"{ours['gauges'] / ours['neighbourhood']:.0f} gauges/s")
+    print()
+    phases = [(name, f"{wall:.2f}", f"{cpu:.2f}") for name, (wall, cpu) in ours["phases"].items()]
+    MACHINE["table"](("phase", "seconds", "processor seconds"), phases)
+    print()
+    above = (ours["compared"] - ours["clouds"]) * 2**20 / ours["points"]
+    print(f"fit kernel: {ours['fits'] / ours['fit seconds']:.0f} gauges/s at {ours['rows']:.0f} cells each")
+    print(f"peak of compare above the clouds: {above:.0f} bytes a point, interpreter and libraries included")
+    each = ours["gauges"] / ours["neighbourhood"]
+    print(f"{ours['gauges']} gauges, {ours['fine']} fine, {each:.0f} a second of the stage")
+    print(f"ratio to laspy alone: {ours['total'] / alone['total']:.2f}, ", end="")
+    print(f"without the report {ours['total, no report'] / alone['total']:.2f}; ", end="")
+    print(f"processor seconds {ours['cpu'] / alone['cpu']:.2f}, {ours['cpu, no report'] / alone['cpu']:.2f}")
 
 
 if __name__ == "__main__":

@@ -19,7 +19,7 @@ TANGENTIAL = [0, 1, 3, 4, 5, 6]
 
 def test_normal_equations_are_those_of_numpy():
     rng = np.random.default_rng(0)
-    rows, rhs, w = rng.standard_normal((12, 301)), rng.standard_normal(301), rng.random(301)
+    rows, rhs, w = rng.standard_normal((12, 601)), rng.standard_normal(601), rng.random(601)
     N, b = np.zeros((14, 14)), np.zeros(14)
     accumulate(rows, rhs, w, N, b)
     np.testing.assert_allclose(np.tril(N)[:12, :12], np.tril((rows * w) @ rows.T), rtol=1e-11, atol=1e-11)

@@ -18,7 +18,7 @@ from scanstrain.neighbourhood.level import Level, make_surface
 from scanstrain.neighbourhood.pairs import GREY, HEIGHT, count_pairs
 from scanstrain.neighbourhood.predict import krige, lookup
 from scanstrain.neighbourhood.smooth import smooth_surface, support_cells
-from scanstrain.neighbourhood.solve import solve_in_place
+from scanstrain.neighbourhood.solve import back_rows, reduce_rows, solve_in_place
 from scanstrain.synthetic import RandomField, Scene, Wall, jittered_grid, sample_epoch
 
 LENGTH, SILL, NOISE = 0.03, 4.0, 0.5
@@ -32,6 +32,20 @@ def test_solving_in_place_is_a_cholesky_solution():
     assert solve_in_place(A.copy(), x, 6)
     np.testing.assert_allclose(x, np.linalg.solve(A, b), rtol=1e-10)
     assert not solve_in_place(-np.eye(3), np.ones(3), 3)
+
+
+def test_one_pass_over_the_upper_triangle_factors_and_solves():
+    rng = np.random.default_rng(1)
+    half, right = rng.standard_normal((30, 11)), rng.standard_normal((11, 3))
+    K = half.T @ half
+    work, x = np.hstack([np.triu(K), right]), np.empty((3, 11))
+    assert reduce_rows(work, 11, 3)
+    upper = np.linalg.cholesky(K).T
+    np.testing.assert_allclose(np.triu(work[:, :11]), upper, rtol=1e-10, atol=1e-10)
+    np.testing.assert_allclose(work[:, 11:], np.linalg.solve(upper.T, right), rtol=1e-10, atol=1e-10)
+    back_rows(work, 11, x)
+    np.testing.assert_allclose(x.T, np.linalg.solve(K, right), rtol=1e-9, atol=1e-10)
+    assert not reduce_rows(np.hstack([-np.eye(6), np.ones((6, 1))]), 6, 1)
 
 
 @pytest.mark.parametrize("radius", [1.9, -4.0])
@@ -108,10 +122,10 @@ def kriged():
     share = 1.0 / rng.integers(1, 4, 40)
     values = 100.0 + rng.normal(0, 2, 40)
     table, step = Covariance("matern52", LENGTH, np.ones(1), np.ones(1)).table(0.15)
-    weights, L = np.empty(64), np.empty((64, 64))
+    weights, work = np.empty(64), np.empty((64, 69))
     probe = 0.01
     offset, variance, _, _ = krige(
-        xy[:, 0].copy(), xy[:, 1].copy(), values, share, 40, table, step, NOISE, SILL, probe, weights, L
+        xy[:, 0].copy(), xy[:, 1].copy(), values, share, 40, table, step, NOISE, SILL, probe, weights, work
     )
 
     def ours(places):

@@ -63,12 +63,22 @@ def styled(draw: Callable[P, R]) -> Callable[P, R]:
     def run(*args: P.args, **kwargs: P.kwargs) -> R:
         import matplotlib as mpl
 
-        # names that begin with "backend" are left out: setting them would load one
-        defaults = {key: value for key, value in dict.items(mpl.rcParamsDefault) if not key.startswith("backend")}
-        with mpl.rc_context({**defaults, **STYLE}):
+        with mpl.rc_context():
+            # past the checks of each of three hundred values, which the defaults have passed and ours pass below
+            dict.update(mpl.rcParams, _drawing_state())
             return draw(*args, **kwargs)
 
     return run
+
+
+@functools.lru_cache(maxsize=1)
+def _drawing_state() -> dict[str, Any]:
+    """Return the checked drawing state without settings that begin with "backend": setting them would load one."""
+    import matplotlib as mpl
+
+    defaults = {key: value for key, value in dict.items(mpl.rcParamsDefault) if not key.startswith("backend")}
+    with mpl.rc_context({**defaults, **STYLE}):
+        return {key: value for key, value in dict.items(mpl.rcParams) if not key.startswith("backend")}
 
 
 def plain(text: str, most: int = 48) -> str:
