@@ -12,11 +12,12 @@ from numpy.typing import NDArray
 from scanstrain.cells import median_spacing
 from scanstrain.epoch import Epoch
 from scanstrain.errors import FitError, OptionError, explain
+from scanstrain.neighbourhood.bias import REACH, gauge_bias
 from scanstrain.neighbourhood.correlation import count_correlation
 from scanstrain.neighbourhood.fit import CELLS, COVER, MATCHED, POINTS, SCALE_GREY, SCALE_NORMAL
 from scanstrain.neighbourhood.gauges import Guide, frames_at, place_gauges, straight_guide
 from scanstrain.neighbourhood.intensity import comparable_intensity
-from scanstrain.neighbourhood.joint_cuts import cuts_at
+from scanstrain.neighbourhood.joint_cuts import WIDEST, cuts_at
 from scanstrain.neighbourhood.joint_lines import Joint, lay_on_surface, pieces_of
 from scanstrain.neighbourhood.level import Estimate, Level, make_surface
 from scanstrain.neighbourhood.result import AffineField, Status
@@ -142,7 +143,8 @@ def fit_affine(
     guide = straight_guide(axis, places) if isinstance(axis, np.ndarray) else axis
     gauges, warnings = frames_at(places, normals, support_cells(finest.cells.position, radius), free_side, guide)
     traces = [lay_on_surface(joint, finest.cells, radius) for joint in joints]
-    cuts = cuts_at(gauges.origin, gauges.frame, gauges.curvature, radius, *pieces_of(joints, traces, width, radius))
+    pieces = pieces_of(joints, traces, width, radius)
+    cuts = cuts_at(gauges.origin, gauges.frame, gauges.curvature, radius, *pieces)
     need = Requirements(
         displacement=required_displacement_sd or REQUIRED_DISPLACEMENT_SD,
         strain=required_strain_sd or REQUIRED_STRAIN_SD,
@@ -187,7 +189,8 @@ def fit_affine(
     say("shared noise", 1.0)
     correlation = count_correlation(level, state, table, np.flatnonzero(status == Status.FINE))
     field = _field(state, gauges, status, need, gauge_length, spacing, warnings)
-    return replace(field, correlation=correlation)
+    reach = cuts_at(gauges.origin, gauges.frame, gauges.curvature, REACH / WIDEST * radius, *pieces)
+    return replace(field, correlation=correlation, bias=gauge_bias(field, reference.points, reach))
 
 
 def _silent(_phrase: str, _share: float) -> None:
