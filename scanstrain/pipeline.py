@@ -7,6 +7,7 @@ import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -16,7 +17,6 @@ from numpy.typing import NDArray
 from scanstrain.config import CompareConfig, config_from_options
 from scanstrain.datum import check_setups, datum_options
 from scanstrain.epoch import Epoch
-from scanstrain.errors import OptionError, explain
 from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.result import Result
 from scanstrain.shape import Shape, places_on, sections_of, shape_of, wall_movement
@@ -32,12 +32,6 @@ if TYPE_CHECKING:  # the stages compile when they are loaded
 FloatArray = NDArray[np.float64]
 Progress = Callable[[str, float], None]
 EpochLabel = tuple[str, str | None]
-
-AUTO_SPACINGS = 60.0
-"""Gauge length of `gauge_length = "auto"`, in point spacings: some 2 800 points a gauge, which brings the noise of a
-normal displacement down to about a twenty-fifth of that of a point."""
-AUTO_SHARE = 0.25
-"""The same never exceeds this share of the object's extent."""
 
 
 def compare(reference: str | Path, current: str | Path, **options: Any) -> Result:
@@ -173,23 +167,37 @@ def _compare(reference: Epoch, current: Epoch, config: CompareConfig, clock: Clo
 def _fit(reference: Epoch, moved: Epoch, shape: Shape, config: CompareConfig, clock: Clock) -> AffineField:
     """Run the neighbourhood stage with its options."""
     from scanstrain.neighbourhood import fit_affine
+    from scanstrain.neighbourhood.affine import cell_width
+    from scanstrain.neighbourhood.gauge_length import GaugeLength, choose_gauge_length
+    from scanstrain.neighbourhood.ladder import fit_on_ladder, rungs
 
     options, free_side = config.neighbourhood, config.strain.free_side
-    return fit_affine(
+    given, need = _number(options.gauge_length), _number(options.required_strain_sd)
+    chosen = (
+        choose_gauge_length(reference, moved, use_intensity=options.use_intensity, required_strain_sd=need)
+        if given is None
+        else GaugeLength(given, "Set by the caller.")
+    )
+    shortest, longest = chosen.length, options.gauge_ladder
+    fit = partial(
+        fit_affine,
         reference,
         moved,
-        gauge_length=_number(options.gauge_length) or auto_gauge_length(reference, moved),
-        gauge_spacing=_number(options.gauge_spacing),
-        resolution=_number(options.resolution),
+        # Explicit, so that on all rungs of a ladder gauges stand in the same places.
+        gauge_spacing=_number(options.gauge_spacing) or shortest / 4,
+        resolution=_number(options.resolution) or cell_width(reference, moved, gauge_length=shortest),
         use_intensity=options.use_intensity,
         min_points=options.min_points,
         required_displacement_sd=_number(options.required_displacement_sd),
-        required_strain_sd=_number(options.required_strain_sd),
+        required_strain_sd=need,
         free_side=None if free_side is None else np.array(free_side) - reference.origin,
         axis=shape.guide(),
         joints=_joint_lines(reference, config),
         progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
     )
+    lengths = rungs(shortest, longest) if longest else [shortest]
+    fitted = fit_on_ladder(lambda length: fit(gauge_length=length), lengths) if longest else fit(gauge_length=shortest)
+    return replace(fitted, gauge_length_reason=chosen.reason)
 
 
 def _joint_lines(reference: Epoch, config: CompareConfig) -> tuple[Joint, ...]:
@@ -235,17 +243,6 @@ def _strain(
         false_discovery_rate=options.false_discovery_rate,
         known={"stable": calibration.steady, **places_on(shape.unroll(affine.position))},
     )
-
-
-def auto_gauge_length(reference: Epoch, current: Epoch) -> float:
-    """Choose a gauge length [m] from the point spacing and the extent, to two digits."""
-    from scanstrain.cells import median_spacing
-
-    spacing = max(median_spacing(reference.points), median_spacing(current.points))
-    length = min(AUTO_SPACINGS * spacing, AUTO_SHARE * float(np.ptp(reference.points, axis=0).max()))
-    if not length > 0:
-        raise OptionError(explain("gauge_length", "scans with distinct points", "coincident ones", "export them again"))
-    return float(f"{length:.2g}")
 
 
 def _number(value: float | str) -> float | None:

@@ -130,7 +130,7 @@ def fit_affine(
     """
     say = progress or _silent
     spacing = gauge_spacing or gauge_length / 4
-    width = _resolution(reference, current, gauge_length, resolution)
+    width = cell_width(reference, current, gauge_length=gauge_length, resolution=resolution)
     grey_reference, grey_current = (
         pair_of_textures(reference, current, gauge_length, width) if use_intensity else (None, None)
     )
@@ -202,8 +202,8 @@ def units_of(radius: float) -> FloatArray:
     return np.array([1.0] * 3 + [1 / radius] * 6 + [1 / radius**2] * 3)
 
 
-def _resolution(reference: Epoch, current: Epoch, gauge_length: float, resolution: float | None) -> float:
-    """Check lengths against each other and choose the cell width [m]."""
+def cell_width(reference: Epoch, current: Epoch, *, gauge_length: float, resolution: float | None = None) -> float:
+    """Check lengths against each other and choose the cell width [m]; arguments and errors as of `fit_affine`."""
     spacing = max(median_spacing(reference.points), median_spacing(current.points))
     extent = float(np.ptp(reference.points, axis=0).max())
     if not spacing > 0:

@@ -132,6 +132,8 @@ class AffineField:
         `PARAMETERS`; 0 where no more shows than noise explains, NaN where the gauges around support no statement.
     gauge_lengths : ndarray of shape (g,), optional
         Patch diameter of each gauge where a ladder chose it [m]; None where all have `gauge_length`.
+    gauge_length_reason : str
+        Why `gauge_length` is what it is.
     """
 
     position: FloatArray
@@ -152,6 +154,7 @@ class AffineField:
     correlation: Correlation | None = None
     bias: FloatArray | None = None
     gauge_lengths: FloatArray | None = None
+    gauge_length_reason: str = "Set by the caller."
 
     def __len__(self) -> int:
         return len(self.position)

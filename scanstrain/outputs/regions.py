@@ -60,7 +60,8 @@ def region_data(result: Result) -> dict[str, Any]:
     -------
     dict
         `found`, one row a region with its area [m^2], the p-value of its cluster and, for every quantity that stands
-        out there, the largest value above and below zero; and `isolated`, the number of gauges that changed outside of them.
+        out there, the largest value above and below zero; and `isolated`, the number of gauges that changed outside
+        of them.
     """
     changed = changed_of(result)
     return {

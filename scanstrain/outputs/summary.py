@@ -152,6 +152,7 @@ def _gauges(result: Result) -> dict[str, Any]:
         "by_status": {status_word(int(code)): int(count) for code, count in zip(codes, counts, strict=True)},
         "gauge_length": strain.gauge_length,
         "gauge_spacing": strain.gauge_spacing,
+        "gauge_length_reason": result.field.gauge_length_reason,
         "gauge_lengths": _lengths(result),
         "rigid": _rigid(result),
     }
