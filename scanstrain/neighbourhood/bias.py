@@ -38,7 +38,9 @@ SAME_SHEET = 0.8
 """Cosine between two normals below which the gauges stand on different sheets, as for points of a patch."""
 SAMPLED = 100
 """About so many points of a gauge tell which part of its disc is covered."""
-CHUNK = 400
+RIDGE = 1e-9
+"""Added to unit diagonals [1]: keeps the equations of gauges in a line solvable; their noise then forbids an answer."""
+CHUNK = 200
 """Gauges worked at a time: bounds the memory."""
 _LATTICE = 12
 """Points across a radius of the even layout that judges how noise of overlapping gauges adds up."""
@@ -150,15 +152,18 @@ def _of_some(field: AffineField, own: IntArray, near: IntArray, leak: dict[Basis
         weight = kernel * known[near][:, :, k].all(axis=2)
         given = np.where(weight[..., None] > 0, departure[:, :, k], 0.0)
         error = np.where(weight[..., None] > 0, variance[near][:, :, k], 1.0)
-        enough = ((weight > 0).sum(axis=1) >= FEWEST)[:, None] & known[own][:, k].all(axis=1)[:, None]
+        enough = ((weight > 0).sum(axis=1) >= FEWEST) & known[own][:, k].all(axis=1)
         repeated = shared_noise(bases[0], round(field.gauge_spacing / radius, 2))
+        rows = np.flatnonzero(enough)
         for basis in bases:
-            gain = _gains(basis, place, error, weight, leak[basis][near], leak[basis][own])
-            bias = np.einsum("nkmd,nmd->nk", gain, given)
-            noise = repeated * np.einsum("nkmd,nkmd,nmd->nk", gain, gain, error)
+            at, around = own[rows], near[rows]
+            gain = _gains(basis, place[rows], error[rows], weight[rows], leak[basis][around], leak[basis][at])
+            bias = np.einsum("nkmd,nmd->nk", gain, given[rows])
+            noise = repeated * np.einsum("nkmd,nmd->nk", gain**2, error[rows])
             sure = np.sign(bias) * np.sqrt(np.maximum(bias**2 - noise, 0.0))
-            told = (enough & (noise < variance[own][:, k])).all(axis=1)[:, None] & np.isnan(out[:, k])
-            out[:, k] = np.where(told, sure * scale[k], out[:, k])
+            told = (noise < variance[at][:, k]).all(axis=1)
+            out[rows[told][:, None], k] = sure[told] * scale[k]
+            rows = rows[~told]
     return out
 
 
@@ -203,12 +208,14 @@ def _gains(
     rows = _rows(basis, place) + leak @ _above(basis, place)
     w = weight[..., None] / variance
     weighted = rows * w[..., None]
-    N = np.einsum("nmdi,nmdj->nij", weighted, rows, optimize=True)
+    count, many, kinds, unknowns = rows.shape
+    flat, weighed = rows.reshape(count, many * kinds, unknowns), weighted.reshape(count, many * kinds, unknowns)
+    N = np.swapaxes(weighed, 1, 2) @ flat
     unit = 1.0 / np.sqrt(np.maximum(np.einsum("nii->ni", N), 1e-300))
-    inverse = np.linalg.pinv(N * unit[:, :, None] * unit[:, None, :], rcond=1e-10, hermitian=True)
+    inverse = np.linalg.inv(N * unit[:, :, None] * unit[:, None, :] + RIDGE * np.eye(unknowns))
     inverse *= unit[:, :, None] * unit[:, None, :]
     above = own_leak @ inverse[:, -own_leak.shape[2] :]
-    return np.asarray(np.einsum("nki,nmdi->nkmd", above, weighted, optimize=True))
+    return np.asarray(above @ np.swapaxes(weighed, 1, 2)).reshape(count, above.shape[1], many, kinds)
 
 
 def _rows(basis: Basis, place: FloatArray) -> FloatArray:

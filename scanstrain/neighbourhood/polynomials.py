@@ -39,15 +39,20 @@ def terms(x: FloatArray, y: FloatArray, order: int, *, dx: int = 0, dy: int = 0)
     -------
     ndarray of shape (..., k)
     """
-    return np.stack([_power(x, p, dx) * _power(y, q, dy) for p, q in exponents(order).tolist()], axis=-1)
+    along, across = _powers(x, order, dx), _powers(y, order, dy)
+    return np.stack([along[p] * across[q] for p, q in exponents(order).tolist()], axis=-1)
 
 
-def _power(x: FloatArray, power: int, times: int) -> FloatArray:
-    """Derivative of x^power, taken so many times."""
-    factor = 1.0
-    for k in range(times):
-        factor *= power - k
-    return np.asarray(factor * x ** max(power - times, 0))
+def _powers(x: FloatArray, order: int, times: int) -> list[FloatArray]:
+    """Derivatives of x^0, x^1, ... up to an order, taken so many times each."""
+    plain = [np.ones_like(x)]
+    for _ in range(order):
+        plain.append(plain[-1] * x)
+    out = []
+    for power in range(order + 1):
+        factor = float(np.prod([power - k for k in range(times)]))
+        out.append(factor * plain[max(power - times, 0)])
+    return out
 
 
 def moments(x: FloatArray, y: FloatArray, patch: IntArray, count: int, order: int) -> FloatArray:

@@ -18,11 +18,13 @@ FIELDS = runpy.run_path(str(Path(__file__).parents[1] / "strain_fields.py"))
 L, SPACING = 0.6, 0.15
 RADIUS = L / 2
 SIZE = 3.0
+STEP = 0.02
+"""Between points [m]."""
 SD = np.array([1e-7] * 3 + [1e-6] * 6 + [1e-5] * 3)
 """Standard errors of (nearly) free of noise gauges."""
 
 
-def cloud(step=0.02, *, hole=lambda x, y: np.zeros(len(x), bool)):
+def cloud(step=STEP, *, hole=lambda x, y: np.zeros(len(x), bool)):
     """Points on a wall in the plane z = 0."""
     x, y = (each.ravel() for each in np.meshgrid(*[np.arange(step / 2, SIZE, step)] * 2, indexing="ij"))
     seen = ~hole(x, y)
@@ -44,7 +46,7 @@ def measured(motion, points, *, sd=SD, noise=None):
         d = (points - place)[:, :2]
         inside = np.hypot(*d.T) < RADIUS
         d = d[inside]
-        status.append(0 if len(d) > 0.35 * np.pi * (RADIUS / 0.02) ** 2 else 3)
+        status.append(0 if len(d) > 0.35 * np.pi * (RADIUS / STEP) ** 2 else 3)
         u = motion(*(d + place[:2]).T)
         if noise is not None:
             u = u + noise[inside]
@@ -123,7 +125,7 @@ def test_the_bias_of_a_dome_is_that_of_the_fit():
 
 def test_noise_alone_shows_no_bias_more_often_than_it_should():
     points = cloud()
-    unit = np.sqrt(0.02**2 / (np.pi * RADIUS**2))  # standard error of a mean over a disc
+    unit = np.sqrt(STEP**2 / (np.pi * RADIUS**2))  # standard error of a mean over a disc
     slope, bend = 2 * unit / RADIUS, np.sqrt(24) * unit / RADIUS**2
     sd = np.array([unit] * 2 + [2 * unit] + [slope] * 6 + [np.sqrt(3) * bend, bend, np.sqrt(3) * bend])
     noise = np.random.default_rng(5).normal(size=(len(points), 3))
