@@ -11,7 +11,6 @@ from numpy.typing import NDArray
 from scanstrain.cells import median_spacing
 from scanstrain.config import CompareConfig
 from scanstrain.epoch import Epoch
-from scanstrain.errors import OptionError, explain
 from scanstrain.neighbourhood.piece import InMemory
 from scanstrain.neighbourhood.pieces import HALO
 from scanstrain.shape import Shape, near_sections
@@ -20,19 +19,8 @@ from scanstrain.tiles import TILE_POINTS, cut_space
 
 FloatArray = NDArray[np.float64]
 
-AUTO_SPACINGS = 60.0
-"""Gauge length of `gauge_length = "auto"`, in point spacings: some 2 800 points a gauge, which brings the noise of a
-normal displacement down to about a twenty-fifth of that of a point."""
-AUTO_SHARE = 0.25
-"""The same never exceeds this share of the object's extent."""
-
-
-def auto_gauge_length(spacing: float, extent: float) -> float:
-    """Choose a gauge length [m] from the point spacing and the extent [m], to two digits."""
-    length = min(AUTO_SPACINGS * spacing, AUTO_SHARE * extent)
-    if not length > 0:
-        raise OptionError(explain("gauge_length", "scans with distinct points", "coincident ones", "export them again"))
-    return float(f"{length:.2g}")
+ROUGH_SPACINGS, ROUGH_SHARE = 60.0, 0.25
+"""A gauge length that is still to be chosen counts as so many point spacings here, at most that share of the object."""
 
 
 def number_or_none(value: float | str) -> float | None:
@@ -63,7 +51,7 @@ def source_of(
     # For the size of tiles a rough gauge length will do.
     spacing = median_spacing(few.points) / np.sqrt(every)
     extent = float(np.ptp(few.points, axis=0).max())
-    length = number_or_none(options.gauge_length) or auto_gauge_length(spacing, extent)
+    length = number_or_none(options.gauge_length) or min(ROUGH_SPACINGS * spacing, ROUGH_SHARE * extent)
     most = TILE_POINTS if isinstance(options.tile_points, str) else options.tile_points
     tree = cut_space(few.points, every, HALO * length, most)
     return store_pair(reference, current, T, tree, folder)

@@ -4,7 +4,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from functools import cached_property
+from functools import cached_property, partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -18,7 +18,7 @@ from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
 from scanstrain.parts import bodies_of, gauges_of_zones
 from scanstrain.shape import Shape, places_on, sections_of, shape_of, wall_movement
-from scanstrain.sources import auto_gauge_length, number_or_none, points_for_sections, source_of
+from scanstrain.sources import number_or_none, points_for_sections, source_of
 from scanstrain.tiles import THINNED, thinning_of
 
 if TYPE_CHECKING:  # the stages compile when they are loaded
@@ -141,28 +141,43 @@ def strained(
 def _fit(material: Material, shape: Shape, config: CompareConfig, clock: Clock) -> AffineField:
     """Run the neighbourhood stage with its options."""
     from scanstrain.neighbourhood.affine import fit_pieces, setting_for
+    from scanstrain.neighbourhood.gauge_length import GaugeLength, choose_gauge_length
+    from scanstrain.neighbourhood.ladder import fit_on_ladder, rungs
 
     options, free_side = config.neighbourhood, config.strain.free_side
     source, spacing, origin = material.source, material.spacing, material.reference.origin
-    setting = setting_for(
+    given, need = number_or_none(options.gauge_length), number_or_none(options.required_strain_sd)
+    chosen = (
+        choose_gauge_length(source, spacing=spacing, use_intensity=options.use_intensity, required_strain_sd=need)
+        if given is None
+        else GaugeLength(given, "Set by the caller.")
+    )
+    shortest = setting_for(
         source,
-        gauge_length=number_or_none(options.gauge_length) or auto_gauge_length(spacing, source.extent()),
+        gauge_length=chosen.length,
         gauge_spacing=number_or_none(options.gauge_spacing),
         resolution=number_or_none(options.resolution),
         use_intensity=options.use_intensity,
         min_points=options.min_points,
         required_displacement_sd=number_or_none(options.required_displacement_sd),
-        required_strain_sd=number_or_none(options.required_strain_sd),
+        required_strain_sd=need,
         spacing=spacing,
     )
-    return fit_pieces(
+    fit = partial(
+        fit_pieces,
         source,
-        setting,
         free_side=None if free_side is None else np.array(free_side) - origin,
         axis=shape.guide(),
         joints=_joint_lines(origin, config),
         progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
     )
+    if options.gauge_ladder is None:
+        field = fit(shortest)
+    else:
+        # Spacing and cells are those of the shortest one, so that gauges stand in the same places on all rungs.
+        lengths = rungs(chosen.length, options.gauge_ladder)
+        field = fit_on_ladder(lambda length: fit(replace(shortest, gauge_length=length)), lengths)
+    return replace(field, gauge_length_reason=chosen.reason)
 
 
 def _joint_lines(origin: FloatArray, config: CompareConfig) -> tuple[Joint, ...]:

@@ -96,8 +96,16 @@ class NeighbourhoodOptions(Options):
     gauge_length: Positive | Auto = Field(
         default="auto",
         description="Diameter of the patch that one gauge averages over [m]. A longer gauge sees smaller "
-        "strains and blurs them more. Default auto: 60 point spacings, at most a quarter of the "
-        "object, so that the noise of single points no longer counts.",
+        "strains and blurs them more. Default auto: so long that strain meets half of its required standard error "
+        "where texture allows that, at least 60 point spacings and at most a quarter of the object; summary.json "
+        "says why.",
+    )
+    gauge_ladder: Positive | None = Field(
+        default=None,
+        examples=[1.2],
+        description="Longest gauge length [m] of a ladder that rises from gauge_length by factors of 1.41: each gauge "
+        "takes the longest one whose values agree with those of all shorter ones. No default: all gauges then have "
+        "one length, which maps of several dates need.",
     )
     gauge_spacing: Positive | Auto = Field(
         default="auto",
@@ -150,6 +158,14 @@ class NeighbourhoodOptions(Options):
     def _enough_for_a_tile(cls, value: int | str) -> int | str:
         if isinstance(value, int) and value < FEWEST_IN_TILE:
             refuse(f"at least {FEWEST_IN_TILE}", f"{value}", "make it larger or leave it out")
+        return value
+
+    @field_validator("gauge_ladder")
+    @classmethod
+    def _above_the_gauge(cls, value: float | None, info: ValidationInfo) -> float | None:
+        length = info.data.get("gauge_length")
+        if value is not None and isinstance(length, float | int) and value <= length:
+            refuse(f"above the gauge_length, {length:g} m", f"{value:g}", "make it longer or leave it out")
         return value
 
     @field_validator("gauge_spacing", "resolution")

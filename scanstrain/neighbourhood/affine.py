@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator, Sequence
+from dataclasses import replace
 from functools import partial
 from typing import Any
 
@@ -12,12 +13,14 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import BLOCK_WIDTH
 from scanstrain.epoch import Epoch
+from scanstrain.neighbourhood.bias import REACH, gauge_bias
 from scanstrain.neighbourhood.finish import finish
 from scanstrain.neighbourhood.fitting import joined, some_of
 from scanstrain.neighbourhood.gauges import Guide, choose_gauges
+from scanstrain.neighbourhood.joint_cuts import WIDEST, cuts_at
 from scanstrain.neighbourhood.joint_lines import Joint
 from scanstrain.neighbourhood.layout import Lines, lay_lines, lay_out
-from scanstrain.neighbourhood.piece import InMemory, Source
+from scanstrain.neighbourhood.piece import InMemory, Source, corners_of
 from scanstrain.neighbourhood.pieces import BLOCKS, find_candidates, fit_piece
 from scanstrain.neighbourhood.plan import measure_plan
 from scanstrain.neighbourhood.result import AffineField
@@ -31,6 +34,8 @@ from scanstrain.neighbourhood.setting import (
 
 FloatArray = NDArray[np.float64]
 Progress = Callable[[str, float], None]
+COVERED = 24
+"""Voxels across a gauge that tell which part of its disc is covered: their steps shift its moments by a percent."""
 Run = Callable[[Callable[[Any], Any], Iterable[Any]], Iterator[Any]]
 """Applies a function to every piece, here or elsewhere, and gives the results in order, as `map` does."""
 
@@ -175,7 +180,8 @@ def fit_pieces(
     lines = _lines(source, setting, joints)
     plan, trial = measure_plan(source, setting, lines, free_side, axis, say)
     if trial.whole and len(boxes) == 1:
-        return finish(trial.fittings[0].close(plan.shared), setting, plan.shared, trial.warnings)
+        field = finish(trial.fittings[0].close(plan.shared), setting, plan.shared, trial.warnings)
+        return _with_bias(field, source, setting, lines)
     del trial
     found = []
     for number, each in enumerate(run(partial(find_candidates, source, setting), boxes)):
@@ -188,7 +194,16 @@ def fit_pieces(
         numbers.append(own)
         parts += [fitted] if fitted is not None else []
     order = np.argsort(np.concatenate(numbers), kind="stable")
-    return finish(some_of(joined(parts), order), setting, plan.shared, warnings)
+    field = finish(some_of(joined(parts), order), setting, plan.shared, warnings)
+    return _with_bias(field, source, setting, lines)
+
+
+def _with_bias(field: AffineField, source: Source, setting: Setting, lines: Lines) -> AffineField:
+    """Judge how far the gauges are off because the motion varies within them; voxels tell what of a disc is covered."""
+    width = setting.gauge_length / COVERED
+    covered = corners_of(source.counts(width)[0], width) + 0.5 * width
+    cuts = cuts_at(field.position, field.frame, field.shape, REACH / WIDEST * setting.radius, lines.ends, lines.half)
+    return replace(field, bias=gauge_bias(field, covered, cuts))
 
 
 def _lines(source: Source, setting: Setting, joints: Sequence[Joint]) -> Lines:

@@ -127,6 +127,13 @@ class AffineField:
         Sentences for the user.
     correlation : Correlation, optional
         Noise that neighbouring points share, counted in `covariance`; None where too few gauges tell.
+    bias : ndarray of shape (g, 12), optional
+        How far the unknowns are off because the motion varies within the gauge: estimate minus truth, in the order of
+        `PARAMETERS`; 0 where no more shows than noise explains, NaN where the gauges around support no statement.
+    gauge_lengths : ndarray of shape (g,), optional
+        Patch diameter of each gauge where a ladder chose it [m]; None where all have `gauge_length`.
+    gauge_length_reason : str
+        Why `gauge_length` is what it is.
     """
 
     position: FloatArray
@@ -145,6 +152,9 @@ class AffineField:
     gauge_spacing: float
     warnings: tuple[str, ...] = ()
     correlation: Correlation | None = None
+    bias: FloatArray | None = None
+    gauge_lengths: FloatArray | None = None
+    gauge_length_reason: str = "Set by the caller."
 
     def __len__(self) -> int:
         return len(self.position)

@@ -6,7 +6,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
-from scanstrain.attributes import BY_NAME
+from scanstrain.attributes import BY_NAME, Attribute
 from scanstrain.outputs.words import amount, interval, listed, number, percent
 
 Summary = Mapping[str, Any]
@@ -44,7 +44,19 @@ def _change(summary: Summary) -> str:
     if not found:
         return f"No change beyond the false-discovery control at any of {whole}."
     alone = ", nowhere three side by side: some such are expected by chance" if _scattered(summary) else ""
-    return f"{number(found, 0)} of {whole} changed beyond the false-discovery control{alone}."
+    return f"{number(found, 0)} of {whole} changed beyond the false-discovery control{alone}{_regions(summary)}."
+
+
+def _regions(summary: Summary) -> str:
+    """How many regions they form, and how many of these are more than neighbours that err together."""
+    found = (summary.get("regions") or {"found": []})["found"]
+    if not found or any(region.get("confirmed") is None for region in found):
+        return ""
+    sure = sum(region["confirmed"] for region in found)
+    said = f"{number(len(found), 0)} region{'s' if len(found) > 1 else ''}"
+    if sure == len(found):
+        return f", in {said} too large or too clear for chance"
+    return f", in {said}, of which {number(sure, 0) if sure else 'none'} too large or too clear for chance"
 
 
 def _scattered(summary: Summary) -> bool:
@@ -60,8 +72,8 @@ def _normal(summary: Summary) -> str:
         if (result["share_observable"] or 0) < RARELY:
             parts.append(f"{title} is not observable")
             continue
-        limit, largest = result["detection_limit"], result["largest_change"]
-        said = f" (95 % detection limit {amount(limit, attribute)}, median)" if limit is not None else ""
+        largest = result["largest_change"]
+        said = _limit_said(result, attribute)
         if largest is not None and not _scattered(summary):
             value = interval(largest["value"], largest["sd"] or 0.0, attribute)
             parts.append(f"{title} reaches {value} (95 %) at {_place(largest['at'])}{said}")
@@ -72,6 +84,15 @@ def _normal(summary: Summary) -> str:
     return f"{text[0].upper()}{text[1:]}."
 
 
+def _limit_said(result: Summary, attribute: Attribute) -> str:
+    """State the detection limit, and what is found four times out of five where the summary knows it."""
+    limit, found = result["detection_limit"], result.get("detectable_80")
+    if limit is None:
+        return ""
+    power = f"; {amount(found, attribute)} is found with 80 % probability" if found is not None else ""
+    return f" (95 % detection limit {amount(limit, attribute)}, median{power})"
+
+
 def _in_plane(summary: Summary) -> str:
     larger, smaller = summary["results"]["strain_1"], summary["results"]["strain_2"]
     attribute, gauges = BY_NAME["strain_1"], summary["gauges"]
@@ -79,8 +100,7 @@ def _in_plane(summary: Summary) -> str:
     hidden, why = percent(1.0 - share), "the surface carries too little texture or relief there"
     if share < RARELY:
         return f"In-plane strain is not observable at {hidden} of these gauges: {why}."
-    limit = larger["detection_limit"]
-    said = f" (95 % detection limit {amount(limit, attribute)}, median)" if limit is not None else ""
+    said = _limit_said(larger, attribute)
     span = f"{amount(smaller['p05'], attribute)} to {amount(larger['p95'], attribute)}"
     rest = f"; at the other {hidden} {why}" if share < 1 else ""
     seen = f"In-plane strain is observable at {percent(share)} of these gauges"

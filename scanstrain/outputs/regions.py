@@ -59,17 +59,32 @@ def region_data(result: Result) -> dict[str, Any]:
     Returns
     -------
     dict
-        `found`, one row a region with its area [m^2] and, for every quantity that stands out there, the largest value
-        above and below zero; and `isolated`, the number of gauges that changed outside of them.
+        `found`, one row a region with its area [m^2], the p-value of its cluster and, for every quantity that stands
+        out there, the largest value above and below zero; and `isolated`, the number of gauges that changed outside
+        of them.
     """
     changed = changed_of(result)
     return {
         "found": [
-            {"gauges": len(region.gauges), "area": region.area, "quantities": _quantities(result, changed, region)}
+            {
+                "gauges": len(region.gauges),
+                "area": region.area,
+                **_cluster(result, region),
+                "quantities": _quantities(result, changed, region),
+            }
             for region in changed.regions
         ],
         "isolated": len(changed.isolated),
     }
+
+
+def _cluster(result: Result, region: Region) -> dict[str, Any]:
+    """p-value of the cluster that a region lies in, and whether it survives false-discovery control over clusters."""
+    p, found = result.strain.cluster_p, result.strain.cluster_found
+    if p is None or found is None:
+        return {"p": None, "confirmed": None}
+    known = p[region.gauges][np.isfinite(p[region.gauges])]
+    return {"p": float(known.min()) if len(known) else None, "confirmed": bool(found[region.gauges].any())}
 
 
 def _quantities(result: Result, changed: Changed, region: Region) -> dict[str, list[dict[str, Any]]]:

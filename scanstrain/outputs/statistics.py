@@ -7,6 +7,7 @@ an estimate with a standard error, while a point is a blend of several. The rang
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
@@ -51,7 +52,9 @@ def _number(result: Result, attribute: Attribute) -> dict[str, Any]:
         "unit": attribute.unit,
         "over": "gauges",
         **quantiles(values),
-        "detection_limit": _median_limit(result, attribute.name),
+        "detection_limit": _median_limit(attribute.name, result.strain.detection_limit),
+        "detectable_80": _median_limit(attribute.name, result.strain.detectable_80),
+        "gauge_bias": _bias(attribute.name, result.strain.bias),
         "share_observable": _share(observable),
         "share_discovered": _share(changed[observable]),
         "largest_change": _largest_change(result, attribute, changed),
@@ -81,9 +84,18 @@ def _counts(codes: NDArray[np.generic]) -> dict[str, int]:
     return {str(int(code)): int(count) for code, count in zip(found, counts, strict=True)}
 
 
-def _median_limit(result: Result, name: str) -> float | None:
-    key = limit_key(name, result.strain.detection_limit)
-    limits = _finite(result.strain.detection_limit[key]) if key else np.empty(0)
+def _bias(name: str, sizes: Mapping[str, Numbers]) -> dict[str, float | None] | None:
+    """How far the blur of a gauge puts the quantity off: median, 95 % and largest; None where none is stated."""
+    key = limit_key(name, sizes)
+    if key is None:
+        return None
+    found = quantiles(sizes[key])
+    return {which: found[which] for which in ("median", "p95", "maximum")}
+
+
+def _median_limit(name: str, sizes: Mapping[str, Numbers]) -> float | None:
+    key = limit_key(name, sizes)
+    limits = _finite(sizes[key]) if key else np.empty(0)
     return short(float(np.median(limits))) if len(limits) else None
 
 

@@ -27,7 +27,7 @@ from scanstrain.outputs.statistics import attribute_statistics
 from scanstrain.outputs.strict import plain, write_json
 from scanstrain.outputs.triggers import trigger_cautions, trigger_data, trigger_warnings
 from scanstrain.outputs.wall_table import wall_data
-from scanstrain.outputs.words import OBSERVED_WORDS, status_word
+from scanstrain.outputs.words import OBSERVED_WORDS, percent, status_word
 from scanstrain.outputs.zone_table import values_of_parts, zone_data
 from scanstrain.registration.result import Registration
 from scanstrain.result import Result
@@ -35,6 +35,8 @@ from scanstrain.structures import section_units
 
 __all__ = ["summary", "verdict", "write_summary"]
 
+RIGID_LEVEL = 0.05
+"""p-value below which a rigid motion does not suffice [1]; where it does, so many gauges fall below it by chance."""
 PACKAGES = ("scanstrain", "numpy", "scipy", "numba", "laspy", "open3d")
 
 
@@ -150,6 +152,33 @@ def _gauges(result: Result) -> dict[str, Any]:
         "by_status": {status_word(int(code)): int(count) for code, count in zip(codes, counts, strict=True)},
         "gauge_length": strain.gauge_length,
         "gauge_spacing": strain.gauge_spacing,
+        "gauge_length_reason": result.field.gauge_length_reason,
+        "gauge_lengths": _lengths(result),
+        "rigid": _rigid(result),
+    }
+
+
+def _lengths(result: Result) -> dict[str, int] | None:
+    """How many fitted gauges have which length, where a ladder chose it."""
+    lengths = result.strain.gauge_lengths
+    if lengths is None:
+        return None
+    found, counts = np.unique(lengths[result.strain.status == Status.FINE], return_counts=True)
+    return {f"{length:.4g}": int(count) for length, count in zip(found, counts, strict=True)}
+
+
+def _rigid(result: Result) -> dict[str, Any] | None:
+    """For how many gauges a rigid motion suffices: neither strain nor bending survives the test at 5 %."""
+    p = result.strain.rigid_p
+    tested = p[np.isfinite(p)] if p is not None else np.empty(0)
+    if not len(tested):
+        return None
+    share = float((tested >= RIGID_LEVEL).mean())
+    return {
+        "tested": len(tested),
+        "share_sufficient": share,
+        "sentence": f"At {percent(share)} of the gauges a rigid motion describes what happened: strain and change of "
+        f"curvature there are within their noise (F-test at {percent(RIGID_LEVEL)}, one gauge at a time).",
     }
 
 

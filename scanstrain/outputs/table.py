@@ -48,6 +48,14 @@ def _columns(result: Result) -> Iterator[Column]:
         yield attribute.name, attribute.unit, _cells(strain.values[attribute.name])
     for name, limits in strain.detection_limit.items():
         yield f"limit_{name}", _limit_unit(name), _cells(limits)
+    for prefix, each in (("detectable_80", strain.detectable_80), ("bias", strain.bias)):
+        for name, sizes in each.items():
+            yield f"{prefix}_{name}", _limit_unit(name), _cells(sizes)
+    for name, column in (("rigid_p", strain.rigid_p), ("cluster_p", strain.cluster_p)):
+        if column is not None:
+            yield name, "1", _cells(column)
+    lengths = strain.gauge_lengths
+    yield "gauge_length", "m", _cells(np.full(len(strain), strain.gauge_length) if lengths is None else lengths)
     yield "status_word", "", [status_word(int(code)) for code in strain.status]
 
 

@@ -108,7 +108,7 @@ def write_result(
 
 
 def _write_all(result: Result, work: Path, options: OutputOptions) -> list[Path | None]:
-    """Run every writer in the order of the registry, but those in `BESIDE` in a thread of their own, and `LAST` last."""
+    """Run every writer in the order of the registry, those in `BESIDE` in a thread of their own, and `LAST` last."""
     with ThreadPoolExecutor(max_workers=1) as thread:
         beside = {name: thread.submit(OUTPUTS[name], result, work, options) for name in OUTPUTS if name in BESIDE}
         others = [name for name in OUTPUTS if name not in beside and name != LAST]

@@ -89,12 +89,13 @@ def prove_batch(
 
 def _of_one_scan(options: CompareConfig, epoch: Epoch) -> CompareConfig:
     """Take out what belongs to a pair of scans, and choose gauges as for the whole scan."""
-    from scanstrain.pipeline import auto_gauge_length
+    from scanstrain.neighbourhood.gauge_length import choose_gauge_length
+    from scanstrain.neighbourhood.piece import InMemory
 
     datum = options.registration.model_copy(update={"start": "identity", "start_file": None})
     gauges = options.neighbourhood
     if isinstance(gauges.gauge_length, str):
-        gauges = gauges.model_copy(update={"gauge_length": auto_gauge_length(epoch, epoch)})
+        gauges = gauges.model_copy(update={"gauge_length": choose_gauge_length(InMemory(epoch, epoch)).length})
     return options.model_copy(update={"registration": datum, "neighbourhood": gauges})
 
 

@@ -16,13 +16,23 @@ from scanstrain.registration.result import Registration
 from scanstrain.registry import unknown_name
 from scanstrain.strain.axes import STRUCTURES, structure_axes
 from scanstrain.strain.bending import bending_strain
+from scanstrain.strain.blur import bias_sizes, widened
+from scanstrain.strain.clusters import find_clusters
 from scanstrain.strain.errors import certainties
 from scanstrain.strain.gauges import Gauges, fitted_gauges
 from scanstrain.strain.kinematics import Kinematics, choose_measure, kinematics
 from scanstrain.strain.measures import MEASURES
 from scanstrain.strain.result import StrainField
+from scanstrain.strain.rigidity import effective_freedom, rigid_p
 from scanstrain.strain.rotation import rotation_in_space
-from scanstrain.strain.significance import NORMAL_95, VECTOR_95, benjamini_hochberg, wald
+from scanstrain.strain.significance import (
+    NORMAL_80,
+    NORMAL_95,
+    VECTOR_80,
+    VECTOR_95,
+    benjamini_hochberg,
+    wald,
+)
 from scanstrain.strain.surface import principal, tensor_in_space
 from scanstrain.strain.uncertainty import magnitude_sd, principal_sd, worst_direction_sd
 
@@ -87,15 +97,23 @@ def compute_strain(
     reason = "Set by the caller."
     if measure == "auto":
         measure, reason = choose_measure(gauges, rate=false_discovery_rate)
+    tested = kinematics(gauges, measure)
+    gauges, bare = widened(gauges), gauges
     moved = kinematics(gauges, measure)
     values = {
         **_displacement(gauges),
         **_strain(gauges, moved, axes),
         **_rotation(gauges, moved),
         **_bending(gauges, moved, thickness),
-        "significance": wald(gauges.parameters, gauges.datum_covariance, gauges.observable),
+        "significance": wald(bare.parameters, bare.datum_covariance, bare.observable),
     }
-    limits = _detection_limits(gauges, moved)
+    factor = None if field.correlation is None else field.correlation.factor
+    rigid = rigid_p(bare, tested, effective_freedom(field.points[gauges.fine], factor))
+    clusters = find_clusters(
+        gauges.position, values["significance"],
+        spacing=field.gauge_spacing, gauge_length=field.gauge_length, rate=false_discovery_rate,
+    )  # fmt: skip
+    cluster_p, cluster_found = clusters.at_gauges()
     return StrainField(
         position=field.position,
         normal=np.asarray(field.frame[:, :, 2]),
@@ -104,14 +122,18 @@ def compute_strain(
         status=np.asarray(field.status, dtype=np.uint8),
         measure=measure,
         measure_reason=reason,
-        detection_limit={
-            name: np.asarray(gauges.scatter(limit, np.nan), dtype=np.float64) for name, limit in limits.items()
-        },
+        detection_limit=_over_the_field(gauges, _limits(gauges, moved, NORMAL_95, VECTOR_95)),
         gauge_length=field.gauge_length,
         gauge_spacing=field.gauge_spacing,
         bowing=np.asarray(gauges.scatter(_bowing(gauges, axes), 0.0), dtype=np.float64),
         warnings=notes + _what_is_missing(gauges),
         certainty=certainties(gauges, moved, axes, thickness, values),
+        detectable_80=_over_the_field(gauges, _limits(gauges, moved, NORMAL_80, VECTOR_80)),
+        bias=_over_the_field(gauges, bias_sizes(gauges)),
+        rigid_p=np.asarray(gauges.scatter(rigid, np.nan), dtype=np.float64),
+        cluster_p=np.asarray(gauges.scatter(cluster_p, np.nan), dtype=np.float64),
+        cluster_found=np.asarray(gauges.scatter(cluster_found, 0.0), dtype=np.bool_),
+        gauge_lengths=field.gauge_lengths,
     )
 
 
@@ -218,20 +240,25 @@ def _bowing(gauges: Gauges, axes: FloatArray) -> FloatArray:
     return components_2d(sandwich(turn, tensor_2d(gauges.parameters[:, [_H11, _H22, _H12]])))
 
 
-def _detection_limits(gauges: Gauges, moved: Kinematics) -> Values:
-    """Smallest values that are significant at 95 %, one test at a time.
+def _limits(gauges: Gauges, moved: Kinematics, normal: float, vector: float) -> Values:
+    """Smallest values that one test at a time can show, by the point of its distribution in standard errors.
 
-    Strain and curvature: along the least well determined direction. Tilt is the length of two components, so its
-    limit is that of a length, 2.45 standard errors of the worse one instead of 1.96.
+    `normal` belongs to one component and `vector` to the length of two. Strain and curvature: along the least well
+    determined direction. Tilt is a length: at 95 %, 2.45 standard errors of the worse component instead of 1.96.
     """
     roots = principal(moved.tilt_covariance)[0]
     return {
-        **_only(gauges.has(Observed.NORMAL), disp_n=NORMAL_95 * np.sqrt(gauges.datum_covariance[:, _UN, _UN])),
-        **_only(gauges.has(Observed.TILT), tilt=VECTOR_95 * np.sqrt(roots)),
-        **_only(gauges.has(Observed.SPIN), spin=NORMAL_95 * np.sqrt(moved.spin_variance)),
-        **_only(gauges.has(Observed.STRAIN), strain=NORMAL_95 * worst_direction_sd(moved.strain_covariance)),
-        **_only(gauges.has(Observed.CURVATURE), curvature=NORMAL_95 * worst_direction_sd(moved.curvature_covariance)),
+        **_only(gauges.has(Observed.NORMAL), disp_n=normal * np.sqrt(gauges.datum_covariance[:, _UN, _UN])),
+        **_only(gauges.has(Observed.TILT), tilt=vector * np.sqrt(roots)),
+        **_only(gauges.has(Observed.SPIN), spin=normal * np.sqrt(moved.spin_variance)),
+        **_only(gauges.has(Observed.STRAIN), strain=normal * worst_direction_sd(moved.strain_covariance)),
+        **_only(gauges.has(Observed.CURVATURE), curvature=normal * worst_direction_sd(moved.curvature_covariance)),
     }
+
+
+def _over_the_field(gauges: Gauges, values: Values) -> Values:
+    """Put values of the fitted gauges among all, NaN elsewhere."""
+    return {name: np.asarray(gauges.scatter(each, np.nan), dtype=np.float64) for name, each in values.items()}
 
 
 def _table(

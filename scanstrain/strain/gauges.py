@@ -55,6 +55,8 @@ class Gauges:
         From observations; rows and columns of what is not observable are zero.
     datum_covariance : ndarray of shape (g, 12, 12)
         The same with the error of the registration added.
+    bias : ndarray of shape (g, 12)
+        How far the unknowns are off because the motion varies within a gauge; NaN where not known.
     """
 
     fine: BoolArray
@@ -66,6 +68,7 @@ class Gauges:
     anchored: BoolArray
     covariance: FloatArray
     datum_covariance: FloatArray
+    bias: FloatArray
 
     def __len__(self) -> int:
         return len(self.position)
@@ -138,4 +141,5 @@ def fitted_gauges(field: AffineField, registration: Registration | None) -> Gaug
         anchored=anchored,
         covariance=covariance,
         datum_covariance=datum,
+        bias=np.full(parameters.shape, np.nan) if field.bias is None else field.bias[fine],
     )

@@ -54,6 +54,18 @@ class StrainField:
         Smallest value that is significant at 95 % for disp_n, tilt, spin, strain and curvature at each gauge.
     certainty : mapping of str to Certainty
         Errors of every quantity that can be held against a limit.
+    detectable_80 : mapping of str to ndarray of shape (g,)
+        Smallest true value that such a test finds at 80 % power, for the same quantities.
+    bias : mapping of str to ndarray of shape (g,)
+        How far they are off because the motion varies within the gauge; part of the errors. NaN where not known.
+    rigid_p : ndarray of shape (g,), optional
+        p-value of "this gauge moved as a rigid body" [1]; NaN where not observable.
+    cluster_p : ndarray of shape (g,), optional
+        p-value of the cluster of small p-values that a gauge belongs to [1]; NaN where it belongs to none.
+    cluster_found : ndarray of shape (g,), bool, optional
+        Whether that cluster survives false-discovery control over all clusters.
+    gauge_lengths : ndarray of shape (g,), optional
+        Where gauges differ in length, that of each [m].
     bowing : ndarray of shape (g, 3), optional
         Second derivatives of the normal displacement along (uu, vv, uv) [1/m], zero where not observable: what a
         blend between gauges needs beside the values.
@@ -72,6 +84,12 @@ class StrainField:
     bowing: FloatArray | None = None
     warnings: tuple[str, ...] = ()
     certainty: Mapping[str, Certainty] = default(default_factory=dict)
+    detectable_80: Mapping[str, FloatArray] = default(default_factory=dict)
+    bias: Mapping[str, FloatArray] = default(default_factory=dict)
+    rigid_p: FloatArray | None = None
+    cluster_p: FloatArray | None = None
+    cluster_found: NDArray[np.bool_] | None = None
+    gauge_lengths: FloatArray | None = None
 
     def __len__(self) -> int:
         return len(self.position)

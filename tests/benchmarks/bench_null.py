@@ -19,6 +19,7 @@ import numpy as np
 import scanstrain
 from scanstrain.neighbourhood import fit_affine
 from scanstrain.strain import compute_strain
+from scanstrain.strain.regions import find_regions
 from scanstrain.synthetic import Lining, Scene, Still, Wall, first_epoch, sample_epoch, sample_truth, undeformed
 
 HERE = Path(__file__).parent
@@ -44,8 +45,18 @@ def drawn(scene, options, seed, spacing, gauge):
     ]
     field = fit_affine(*pair, gauge_length=gauge, gauge_spacing=gauge / 2, required_strain_sd=0.02)
     inside = MEASURES["errors_of"](scene, field).inside
-    values = compute_strain(field).values
-    return values["significance"][inside], values["discovery"][inside], said(field)
+    strain = compute_strain(field)
+    values = strain.values
+    return values["significance"][inside], values["discovery"][inside], said(field), regions(strain)
+
+
+def regions(strain):
+    """Regions of discoveries, and how many of them lie in a cluster that survives its own control."""
+    none = np.zeros((len(strain), 1))
+    found, _ = find_regions(
+        strain.position, strain.values["discovery"] == 1, none, none + 1, spacing=strain.gauge_spacing
+    )
+    return len(found), sum(bool(strain.cluster_found[region.gauges].any()) for region in found)
 
 
 def said(field):
@@ -64,7 +75,7 @@ def scanned(name, structure, seed):
     result = scanstrain.compare_epochs(reference, current, config)
     inside = MEASURES["errors_of"](sample.scene, result.field).inside
     values = result.strain.values
-    return values["significance"][inside], values["discovery"][inside], said(result.field)
+    return values["significance"][inside], values["discovery"][inside], said(result.field), regions(result.strain)
 
 
 def row(name, noise, runs):
@@ -74,7 +85,8 @@ def row(name, noise, runs):
     p = p[np.isfinite(p)]
     return (
         name, noise, len(runs), len(p), f"{100 * np.mean(p < 0.05):.1f}", f"{100 * np.mean(p < 0.01):.2f}",
-        int(sum(f.sum() for f in found)), f"{sum(f.any() for f in found)}", "; ".join(run[2] for run in runs),
+        int(sum(f.sum() for f in found)), f"{sum(f.any() for f in found)}",
+        sum(run[3][0] for run in runs), sum(run[3][1] for run in runs), "; ".join(run[2] for run in runs),
     )  # fmt: skip
 
 
@@ -102,6 +114,8 @@ def main():
         "p<0.01 %",
         "discoveries",
         "pairs with any",
+        "regions",
+        "confirmed",
         "shared %, mm",
     )
     MACHINE["table"](head, rows)
