@@ -22,7 +22,7 @@ YOUNG, POISSON = 30e9, 0.2
 
 
 def _stiffness(basis, *, plane_stress):
-    """Stiffness of a plane body; in plane stress the first Lame constant is 2 l m / (l + 2 m) (any text on elasticity)."""
+    """Stiffness of a plane body; plane stress has 2 l m / (l + 2 m) for the first Lame constant (any textbook)."""
     first, second = lame_parameters(YOUNG, POISSON)
     if plane_stress:
         first = 2 * first * second / (first + 2 * second)

@@ -55,7 +55,6 @@ def bare_files(tmp_path_factory):
 @pytest.fixture(scope="session")
 def textured_files(tmp_path_factory):
     """The same with relief of 1 mm and reflectance of 18 %."""
-    a0, a1, b0, b1 = LINING.bounds
     plain = MEASURES["textured"](LINING, MOTION)
     scene = Scene(LINING, MOTION, relief=plain.relief, texture=plain.texture, origin=ORIGIN)
     return run(scene, tmp_path_factory.mktemp("textured ring"), 0.016)
