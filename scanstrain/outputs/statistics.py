@@ -52,6 +52,7 @@ def _number(result: Result, attribute: Attribute) -> dict[str, Any]:
         "over": "gauges",
         **quantiles(values),
         "detection_limit": _median_limit(result, attribute.name),
+        "noise_bias": _median_bias(result, attribute.name),
         "share_observable": _share(observable),
         "share_discovered": _share(changed[observable]),
         "largest_change": _largest_change(result, attribute, changed),
@@ -85,6 +86,13 @@ def _median_limit(result: Result, name: str) -> float | None:
     key = limit_key(name, result.strain.detection_limit)
     limits = _finite(result.strain.detection_limit[key]) if key else np.empty(0)
     return short(float(np.median(limits))) if len(limits) else None
+
+
+def _median_bias(result: Result, name: str) -> float | None:
+    """What noise adds at most on average, where it drives a quantity to one side; None where it does not."""
+    certainty = result.strain.certainty.get(name)
+    bias = np.empty(0) if certainty is None else _finite(certainty.noise_bias)
+    return short(float(np.median(bias))) if bias.any() else None
 
 
 def _largest_change(result: Result, attribute: Attribute, changed: NDArray[np.bool_]) -> dict[str, Any] | None:

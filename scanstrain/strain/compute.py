@@ -15,7 +15,8 @@ from scanstrain.neighbourhood.result import AffineField, Observed
 from scanstrain.registration.result import Registration
 from scanstrain.registry import unknown_name
 from scanstrain.strain.axes import STRUCTURES, structure_axes
-from scanstrain.strain.bending import bending_strain
+from scanstrain.strain.bending import FORMS, bending_map, bending_strain
+from scanstrain.strain.details import details
 from scanstrain.strain.errors import certainties
 from scanstrain.strain.gauges import Gauges, fitted_gauges
 from scanstrain.strain.kinematics import Kinematics, choose_measure, kinematics
@@ -40,6 +41,7 @@ def compute_strain(
     measure: str = "auto",
     structure: str = "free",
     thickness: float | None = None,
+    bending_form: str = "thin",
     axis: ArrayLike | None = None,
     false_discovery_rate: float = 0.05,
     known: Mapping[str, NDArray[np.generic]] | None = None,
@@ -60,6 +62,8 @@ def compute_strain(
         Meaning of the axes u and v: hoop and axial, or horizontal and upward.
     thickness : float, optional
         Thickness of the wall or lining [m]; gives `bend_1` and `bend_2`.
+    bending_form : {"thin", "thick"}
+        Bending of a thin shell, or of a thick ring whose inside has a shorter arc than its middle.
     axis : array_like of shape (3,) or (g, 3), optional
         Direction of a tunnel's axis, one for all or one a gauge; found from the normals where not given.
     false_discovery_rate : float
@@ -77,6 +81,8 @@ def compute_strain(
         An option is unknown, out of range or contradicts another.
     """
     _check(measure, structure, thickness, false_discovery_rate)
+    if bending_form not in FORMS:
+        raise OptionError(unknown_name("form of bending", bending_form, list(FORMS)))
     if axis is not None:
         _check_axis(np.asarray(axis, dtype=np.float64), structure, len(field))
     gauges = fitted_gauges(field, registration)
@@ -88,11 +94,12 @@ def compute_strain(
     if measure == "auto":
         measure, reason = choose_measure(gauges, rate=false_discovery_rate)
     moved = kinematics(gauges, measure)
+    bending = None if thickness is None else bending_map(gauges.shape, thickness, bending_form)
     values = {
         **_displacement(gauges),
         **_strain(gauges, moved, axes),
         **_rotation(gauges, moved),
-        **_bending(gauges, moved, thickness),
+        **_bending(gauges, moved, bending),
         "significance": wald(gauges.parameters, gauges.datum_covariance, gauges.observable),
     }
     limits = _detection_limits(gauges, moved)
@@ -111,7 +118,8 @@ def compute_strain(
         gauge_spacing=field.gauge_spacing,
         bowing=np.asarray(gauges.scatter(_bowing(gauges, axes), 0.0), dtype=np.float64),
         warnings=notes + _what_is_missing(gauges),
-        certainty=certainties(gauges, moved, axes, thickness, values),
+        certainty=certainties(gauges, moved, axes, bending, values),
+        details=details(gauges, moved, axes, bending),
     )
 
 
@@ -202,14 +210,15 @@ def _rotation(gauges: Gauges, moved: Kinematics) -> Values:
     }
 
 
-def _bending(gauges: Gauges, moved: Kinematics, thickness: float | None) -> Values:
+def _bending(gauges: Gauges, moved: Kinematics, bending: FloatArray | None) -> Values:
     larger, smaller = principal(tensor_2d(moved.curvature))
     errors = principal_sd(moved.curvature, moved.curvature_covariance)
     seen = gauges.has(Observed.CURVATURE)
     values = _only(seen, curv_1=larger, curv_2=smaller, curv_sd=np.maximum(*errors))
-    bent = seen & (thickness is not None)
-    half = thickness or 0.0
-    return values | _only(bent, bend_1=bending_strain(larger, half), bend_2=bending_strain(smaller, half))
+    if bending is None:
+        return values | _only(np.zeros_like(seen), bend_1=larger, bend_2=smaller)
+    longer, shorter = principal(tensor_2d(bending_strain(moved.curvature, bending)))
+    return values | _only(seen, bend_1=longer, bend_2=shorter)
 
 
 def _bowing(gauges: Gauges, axes: FloatArray) -> FloatArray:

@@ -40,7 +40,8 @@ def main():
             f, s, a, p = (each[:, part].ravel() for each in (found, sd, average, point))
             rows.append(
                 (
-                    quantity, f"{1e6 * a.min():.0f} to {1e6 * a.max():.0f}", f"{1e6 * BODIES['MEASURES']['rms'](f - a):.0f}",
+                    quantity, f"{1e6 * a.min():.0f} to {1e6 * a.max():.0f}",
+                    f"{1e6 * BODIES['MEASURES']['rms'](f - a):.0f}",
                     f"{1e6 * np.mean(s):.0f}", f"{f @ a / (a @ a):.3f}", f"{100 * BODIES['covered'](f, a, s):.1f}",
                     f"{100 * BODIES['covered'](f, p, s):.1f}", f"{1e6 * np.abs(a - p).max():.0f}",
                 )
