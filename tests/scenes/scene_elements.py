@@ -1,8 +1,7 @@
 # SPDX-License-Identifier: MIT
 """Displacements of linear-elastic bodies by finite elements (scikit-fem), as motions that the synthetic scanner takes.
 
-What a gauge should show is an average: the affine map that fits the exact displacements of its patch best, every
-piece of surface with the same weight. `patch_strain` computes that from displacements alone, without the package.
+What a gauge should show is an average: the strain over its patch with the weights of an affine fit, see `patch_strain`.
 """
 
 from __future__ import annotations
@@ -10,11 +9,11 @@ from __future__ import annotations
 from functools import cached_property
 
 import numpy as np
-import scipy.linalg
 from scipy.interpolate import CubicSpline, RectBivariateSpline
 from skfem import Basis, ElementQuad2, ElementVector, FacetBasis, LinearForm, MeshQuad, condense, enforce, solve
 from skfem.models.elasticity import lame_parameters, linear_elasticity
 
+from scanstrain.synthetic import truth_at
 from scanstrain.synthetic.deformation import Jet, from_components, zeros
 
 YOUNG, POISSON = 30e9, 0.2
@@ -142,36 +141,29 @@ STEPS = 24
 """Places across a patch in the average of `patch_strain`."""
 
 
-def patch_strain(scene, place, frame, radius):
-    """Strain (11, 22, 12) that an even-weighted affine fit of the exact displacements of a patch gives, and tilt aside.
+def patch_strain(scene, places, radius):
+    """Exact strain averaged over discs of the surface with the weights of an affine fit.
+
+    The slope of a least-squares plane through u over a disc is the mean of the derivative of u with weights
+    `radius^2 - distance^2` (integration by parts), so these are the weights with which a gauge averages.
 
     Parameters
     ----------
     scene : Scene
-    place : ndarray of shape (3,)
-        The gauge, in the coordinates of the scene [m].
-    frame : ndarray of shape (3, 3)
-        Its tangents and normal, as columns.
+    places : ndarray of shape (n, 2)
+        Material coordinates of the gauges [m].
     radius : float
         Half of the gauge length [m].
 
     Returns
     -------
-    ndarray of shape (3,)
-        Stretch less one (Biot), along the two tangents of `frame` and tensor shear [1].
+    ndarray of shape (n, 3)
+        Stretch less one (Biot) along u and v and tensor shear [1].
     """
-    centre = scene.surface.project(place[None])[0][0]
-    step = (np.arange(STEPS) + 0.5) / STEPS * 2.2 - 1.1
-    q = centre + radius * np.stack(np.meshgrid(step, step), axis=-1).reshape(-1, 2)
-    x, y, z = ((scene.surface.points(q) - place) @ frame).T
-    near = np.hypot(x, y) < radius
-    q, x, y, z = q[near], x[near], y[near], z[near]
-    u = np.einsum("nij,nj->ni", scene.surface.frames(q), scene.jet(q, deformed=True).value) @ frame
-    one = np.ones(len(x))
-    normal = np.linalg.lstsq(np.stack([one, x, y, x * x / 2, x * y, y * y / 2], 1), u[:, 2], rcond=None)[0]
-    # a tilt turns the height over the tangent plane into the plane: this part is no gradient
-    level = u[:, :2] + z[:, None] * normal[1:3]
-    plane = np.linalg.lstsq(np.stack([one, x, y], 1), level, rcond=None)[0]
-    B = np.eye(3)[:, :2] + np.concatenate([plane[1:].T, normal[None, 1:3]])
-    E = scipy.linalg.sqrtm(B.T @ B).real - np.eye(2)
-    return E[[0, 1, 0], [0, 1, 1]]
+    step = ((np.arange(STEPS) + 0.5) / STEPS * 2 - 1) * radius
+    offset = np.stack(np.meshgrid(step, step), axis=-1).reshape(-1, 2)
+    weight = np.clip(radius**2 - (offset**2).sum(axis=1), 0, None)
+    offset, weight = offset[weight > 0], weight[weight > 0] / weight.sum()
+    exact = truth_at(scene, (places[:, None] + offset).reshape(-1, 2), measure="biot")
+    parts = [exact[name].reshape(len(places), -1) @ weight for name in ("strain_u", "strain_v", "shear_uv")]
+    return np.stack(parts, axis=1)
