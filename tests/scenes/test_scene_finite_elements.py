@@ -54,7 +54,9 @@ def recover(surface, deformation, *, structure, seed, spacing, noise=3e-4):
     axis = np.array([1.0, 0.0, 0.0]) if structure == "tunnel" else None
     options = {"free_side": np.array([1.5, -5.0, 1.0])} if structure == "wall" else {"axis": axis}
     field = fit_affine(*epochs, gauge_length=GAUGE, gauge_spacing=GAUGE / 4, **options)
-    strain = compute_strain(field, structure=structure, axis=axis, measure="biot", thickness=THICKNESS)
+    strain = compute_strain(
+        field, structure=structure, axis=axis, measure="biot", thickness=THICKNESS, bending_form="thick"
+    )
     material = surface.project(field.position)[0]
     seen = (field.status == 0) & np.isfinite(strain.values["strain_u"])
     seen &= MEASURES["within"](surface, material, GAUGE / 2)
@@ -126,3 +128,27 @@ def test_estimates_follow_the_elements_without_a_bias(recovered):
     spread = np.std(found - slope * true) / np.sqrt(true @ true) * np.sqrt(len(found) / patches)
     assert abs(slope - 1) < 4 * spread
     assert abs((found - true).mean()) < 4 * np.std(found - true) / np.sqrt(patches)
+
+
+def test_bending_and_membrane_strain_of_the_ring_come_apart(request, recovered):
+    """From curvature alone: the inside bends by t/2 times 3 u0 / (R (R - t/2)); the rest is the strain of the middle."""
+    if request.node.callspec.params["recovered"] != "ring":
+        found = recovered.strain.details
+        seen = np.isfinite(found["bend_u"])
+        # in-plane motion bends nothing
+        mean, error = MEASURES["mean_and_error"](
+            found["bend_u"][seen], recovered.strain.position[seen][:, [0, 2]], GAUGE
+        )
+        assert abs(mean) < 4 * error
+        return
+    middle = INNER + THICKNESS / 2
+    amplitude = 1.5 * THICKNESS * MOVEMENT / (middle * INNER)
+    strain = recovered.strain
+    q = Lining(INNER, 1.6).project(strain.position)[0]
+    wave = -np.cos(2 * q[:, 0] / INNER)
+    seen = (strain.status == 0) & MEASURES["within"](Lining(INNER, 1.6), q, GAUGE / 2)
+    seen &= np.isfinite(strain.details["membrane_u"])
+    bent = strain.details["bend_u"][seen]
+    assert bent @ wave[seen] / (wave[seen] @ wave[seen]) == pytest.approx(amplitude, rel=0.05)
+    # the middle of the elements' ring strains by 30 microstrain at most
+    assert MEASURES["coverage"](strain.details["membrane_u"][seen], strain.details["membrane_u_sd"][seen]) >= 0.90

@@ -37,6 +37,7 @@ STRAINS = ("strain_xx", "strain_yy", "strain_zz", "strain_xy", "strain_xz", "str
 OPTIONS = {
     "gauge_length": 1.0, "gauge_spacing": 0.25, "structure": "tunnel", "thickness": RING["thickness"], "start":
     "identity", "stable": "all", "chords": [[3, 12], [10.5, 1.5]], "section_spacing": 0.8, "section_thickness": 0.6,
+    "compare_measures": True,
 }  # fmt: skip
 """The whole lining moves; over a closed ring the ovalisation sums up to no rigid motion."""
 
@@ -57,7 +58,7 @@ def textured_files(tmp_path_factory):
     """The same with relief of 1 mm and reflectance of 18 %."""
     plain = MEASURES["textured"](LINING, MOTION)
     scene = Scene(LINING, MOTION, relief=plain.relief, texture=plain.texture, origin=ORIGIN)
-    return run(scene, tmp_path_factory.mktemp("textured ring"), 0.016)
+    return run(scene, tmp_path_factory.mktemp("textured ring"), 0.018)
 
 
 @pytest.fixture(params=["bare_files", "textured_files"])
@@ -154,3 +155,34 @@ def test_on_texture_material_chords_follow_from_displacements_of_gauges(textured
         moved[name] = -np.nanmean(gauges["disp_y"][near & (gauges["status"] == 0)])
     longer = 1e3 * (moved["right"] - moved["left"])
     assert longer == pytest.approx(OVAL["chords"]["shoulder_to_shoulder"], abs=2.0)
+
+
+def test_the_table_of_gauges_gives_few_directions_of_strains_that_are_noise(textured_files, bare_files):
+    """Principal strains of a ring without strain differ by noise alone, so that 5 % of gauges have a direction."""
+    gauges = textured_files.gauges
+    seen = np.isfinite(gauges["strain_1"])
+    assert np.isfinite(gauges["direction_1"][seen]).mean() < 0.15
+    assert np.isnan(bare_files.gauges["direction_1"]).all()
+    assert np.isfinite(bare_files.gauges["bend_u"]).any()
+    assert np.isnan(bare_files.gauges["membrane_u"]).all()
+
+
+def test_other_measures_stand_in_the_summary_where_they_are_asked_for(textured_files, bare_files):
+    measure = textured_files.summary["strain_measure"]
+    assert {measure["used"], *(row["measure"] for row in measure["compared"])} == {
+        "small", "green_lagrange", "almansi", "hencky", "biot",
+    }  # fmt: skip
+    # strains up to s = 0.2 % differ by s^2 at most
+    assert all(abs(row["difference"]) < 1e-5 for row in measure["compared"])
+    assert all(row["gauge"] is None for row in bare_files.summary["strain_measure"]["compared"])
+
+
+def test_the_summary_says_what_noise_adds_to_principal_values(textured_files):
+    """Mean of the larger principal strain of pure noise: 0.886 standard errors of a normal strain (closed form)."""
+    results = textured_files.summary["results"]
+    assert results["strain_1"]["noise_bias"] > 0 > results["strain_2"]["noise_bias"]
+    assert results["strain_u"]["noise_bias"] is None
+    sd = np.nanmedian(textured_files.result.strain.certainty["strain_u"].sd)
+    assert results["strain_1"]["noise_bias"] == pytest.approx(0.886 * sd, rel=0.15)
+    mean = np.nanmean(textured_files.gauges["strain_1"])
+    assert mean == pytest.approx(results["strain_1"]["noise_bias"], rel=0.25)
