@@ -131,7 +131,7 @@ def test_estimates_follow_the_elements_without_a_bias(recovered):
 
 
 def test_bending_and_membrane_strain_of_the_ring_come_apart(request, recovered):
-    """From curvature alone: the inside bends by t/2 times 3 u0 / (R (R - t/2)); the rest is the strain of the middle."""
+    """From curvature alone: the inside bends by t/2 times 3 u0 / (R (R - t/2)); the rest is the middle's."""
     if request.node.callspec.params["recovered"] != "ring":
         found = recovered.strain.details
         seen = np.isfinite(found["bend_u"])
