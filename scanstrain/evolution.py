@@ -15,7 +15,7 @@ from scanstrain.errors import ScanstrainError
 if TYPE_CHECKING:  # the options load NumPy, which must not happen before a worker has set its threads
     from scanstrain.config import BatchConfig, EpochEntry
     from scanstrain.config.trigger import TriggerEntry
-    from scanstrain.series import ChangeRow, RateRow, Track
+    from scanstrain.series import ChangeRow, RateRow, Temperature, Track
 
 Summary = Mapping[str, Any]
 
@@ -23,6 +23,11 @@ FEWEST = 3
 """Epochs of a series, the first one included."""
 OF_SECTIONS = ("horizontal_diameter_change", "vertical_diameter_change", "ovality_change", "crown_up")
 """What is followed at every section."""
+OF_ZONES = {"mean_strain_u": "strain_u", "mean_strain_v": "strain_v"}
+"""What is followed of the whole object and of every zone besides its movement: means of attributes."""
+EXPANDING = {"mean_strain_u": 1.0, "mean_strain_v": 1.0}
+"""Quantities that follow the temperature where nothing restrains the object, per unit of its coefficient of expansion;
+the change of a diameter does so by its length. Movements depend on where the object is held, so they are left alone."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -142,10 +147,39 @@ def _rows(
     labels = (first.label, *(entry.label for entry, _ in later))
     dates = tuple(entry.date for entry in (first, *(entry for entry, _ in later)) if entry.date is not None)
     check_dates(dates, season=config.series.season)
-    for track, chainage in _tracks(labels, dates, [summary for _, summary in later]):
+    summaries = [summary for _, summary in later]
+    for track, chainage in _tracks(labels, dates, summaries):
         triggers = [trigger for trigger in config.trigger if _concerns(trigger, track, chainage, config)]
         grades = [_grade(triggers, value, sd) for value, sd in zip(track.values, track.sd, strict=True)]
-        yield from rows_of(follow(track, season=config.series.season), grades=grades)
+        warmth = _temperature(config, track, (first, *(entry for entry, _ in later)), summaries)
+        yield from rows_of(follow(track, season=config.series.season, temperature=warmth), grades=grades)
+
+
+def _temperature(
+    config: BatchConfig, track: Track, epochs: Sequence[EpochEntry], summaries: Sequence[Summary]
+) -> Temperature | None:
+    """What free expansion adds to a track; None where that was not asked for or the quantity does not follow it."""
+    import numpy as np
+
+    from scanstrain.series import Temperature
+
+    given = config.series.thermal
+    per_unit = EXPANDING.get(track.quantity) or _diameter(track, summaries)
+    if given is None or per_unit is None:
+        return None
+    expansion, expansion_sd, reading_sd = given
+    warmth = np.array([entry.temperature for entry in epochs], float)
+    return Temperature(warmth[1:] - warmth[0], expansion * per_unit, expansion_sd * per_unit, reading_sd)
+
+
+def _diameter(track: Track, summaries: Sequence[Summary]) -> float | None:
+    """Length of a diameter whose change is followed [m], at the reference epoch."""
+    if not track.quantity.endswith("_diameter_change"):
+        return None
+    name = track.quantity.removesuffix("_change") + "_ref"
+    rows = ((summary.get("sections") or {}).get("rows", ()) for summary in summaries)
+    known = [row.get(name) for each in rows for row in each if _place(row) == track.place]
+    return next((float(length) for length in known if length is not None), None)
 
 
 Seen = dict[tuple[str, str, str], list[tuple[int, float, float]]]
@@ -173,14 +207,19 @@ def _tracks(
 
 
 def _gather_bodies(seen: Seen, number: int, summary: Summary) -> None:
-    """How the whole object and each zone moved."""
-    from scanstrain.attributes import OF_BODIES
+    """How the whole object and each zone moved and strained."""
+    from scanstrain.attributes import BY_NAME, OF_BODIES
 
     for place, body in summary.get("rigid_motion", {}).items():
-        mean = summary.get("zones", {}).get(place, {}).get("quantities", {}).get("disp_n", {})
+        means = summary.get("zones", {}).get(place, {}).get("quantities", {})
+        mean = means.get("disp_n", {})
         known = {**body, "mean_disp_n": mean.get("mean"), "mean_disp_n_sd": mean.get("mean_sd")}
         for quantity, (unit, _) in OF_BODIES.items():
             _gather(seen, (place, quantity, unit), number, known)
+        for quantity, attribute in OF_ZONES.items():
+            mean = means.get(attribute, {})
+            known = {quantity: mean.get("mean"), f"{quantity}_sd": mean.get("mean_sd")}
+            _gather(seen, (place, quantity, BY_NAME[attribute].unit), number, known)
 
 
 def _gather_sections(seen: Seen, stations: dict[str, float], number: int, summary: Summary) -> None:
@@ -189,10 +228,15 @@ def _gather_sections(seen: Seen, stations: dict[str, float], number: int, summar
 
     units = section_units()
     for row in (summary.get("sections") or {}).get("rows", ()):
-        place = f"section {row['chainage']:.2f} m"
+        place = _place(row)
         stations[place] = float(row["chainage"])
         for quantity in OF_SECTIONS:
             _gather(seen, (place, quantity, units[quantity][0]), number, row)
+
+
+def _place(section: Mapping[str, Any]) -> str:
+    """Name of a section by its chainage."""
+    return f"section {section['chainage']:.2f} m"
 
 
 def _gather(seen: Seen, key: tuple[str, str, str], number: int, known: Mapping[str, Any]) -> None:

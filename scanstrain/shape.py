@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from scanstrain.config import CompareConfig
 from scanstrain.epoch import Epoch
-from scanstrain.errors import OptionError
+from scanstrain.errors import OptionError, explain
 from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.registration.result import Registration
 from scanstrain.zones import Unrolled
@@ -67,7 +67,7 @@ def shape_of(reference: Epoch, config: CompareConfig) -> Shape:
     Raises
     ------
     OptionError
-        The scan shows no tunnel, or the axis that was given leaves it.
+        The scan shows no tunnel, the axis that was given leaves it, or the thickness is none of a lining.
     """
     if config.strain.structure == "wall":
         return _wall(reference, config)
@@ -77,8 +77,21 @@ def shape_of(reference: Epoch, config: CompareConfig) -> Shape:
 
     given = config.tunnel.axis
     if given is None:
-        return Shape("tunnel", fit_axis(reference.points))
-    return Shape("tunnel", given_axis(np.asarray(given) - reference.origin, reference.points))
+        axis = fit_axis(reference.points)
+    else:
+        axis = given_axis(np.asarray(given) - reference.origin, reference.points)
+    _check_thickness(config.strain.thickness, axis.radius)
+    return Shape("tunnel", axis)
+
+
+def _check_thickness(thickness: float | None, radius: float) -> None:
+    if thickness is not None and thickness >= radius:
+        raise OptionError(
+            explain(
+                "thickness", f"less than the radius of the tunnel, {radius:.2f} m", f"{thickness:g} m",
+                "give the thickness of the lining in metres",
+            )
+        )  # fmt: skip
 
 
 def _wall(reference: Epoch, config: CompareConfig) -> Shape:

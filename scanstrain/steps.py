@@ -210,16 +210,20 @@ def _strain(
     affine: AffineField, registration: Registration, calibration: Calibration, shape: Shape, config: CompareConfig
 ) -> StrainField:
     """Run the strain stage with its options."""
-    from scanstrain.strain import compute_strain
+    from scanstrain.strain import compare_measures, compute_strain
 
     options = config.strain
-    return compute_strain(
+    strain = compute_strain(
         affine,
         registration=registration,
         measure=options.measure,
         structure=options.structure,
         thickness=options.thickness,
+        bending_form=options.bending_form,
         axis=shape.directions(affine.position),
         false_discovery_rate=options.false_discovery_rate,
         known={"stable": calibration.steady, **places_on(shape.unroll(affine.position))},
     )
+    if not options.compare_measures:
+        return strain
+    return replace(strain, compared=compare_measures(affine, used=strain.measure, registration=registration))

@@ -15,6 +15,7 @@ from scanstrain.neighbourhood.result import AffineField, Status
 from scanstrain.registration.result import Registration, WeakDirection
 from scanstrain.result import Result
 from scanstrain.strain.calibration import GROUPS, KINDS, Calibration
+from scanstrain.strain.details import DETAILS
 from scanstrain.strain.result import StrainField
 
 CALIBRATION = Calibration({kind: dict.fromkeys(GROUPS, 1.0) for kind in KINDS}, "none", 0, np.zeros(12, bool))
@@ -94,7 +95,7 @@ def make_result(path="north_wall_0.laz", current="north_wall_1.laz"):
             "strain": np.where(np.isfinite(STRAIN_1), 98e-6, np.nan),
             "curvature": np.full(g, np.nan),
         },
-        gauge_length=0.6, gauge_spacing=0.5,
+        gauge_length=0.6, gauge_spacing=0.5, details={name: np.full(g, np.nan) for name in DETAILS},
     )  # fmt: skip
     return Result(
         reference=reference, current=moved, registration=registration, field=field,

@@ -71,6 +71,36 @@ class SeriesOptions(Options):
         description="Fit an annual wave beside the rate. Default false: it takes six dated epochs over a year or more"
         " to tell one from a rate.",
     )
+    free_expansion: Finite | None = Field(
+        default=None,
+        examples=[10e-6],
+        description="Coefficient of linear expansion of the object [1/K]: its free expansion is taken off strains and"
+        " diameters before a rate is fitted. No default: it belongs to the material, and what is held back does not"
+        " expand freely.",
+    )
+    free_expansion_sd: Size | None = Field(
+        default=None, examples=[1e-6], description="Its standard error [1/K]. No default: it belongs to the material."
+    )
+    temperature_sd: Size | None = Field(
+        default=None,
+        examples=[1.0],
+        description="Standard error of the temperature of each epoch [K]. No default: it belongs to the thermometer.",
+    )
+
+    @model_validator(mode="after")
+    def _all_or_none(self) -> SeriesOptions:
+        names = ("free_expansion", "free_expansion_sd", "temperature_sd")
+        missing = [name for name in names if getattr(self, name) is None]
+        if missing and len(missing) < len(names):
+            got = "only " + ", ".join(name for name in names if name not in missing)
+            refuse("all three numbers of the expansion, or none", got, f"add {' and '.join(missing)}")
+        return self
+
+    @property
+    def thermal(self) -> tuple[float, float, float] | None:
+        """Coefficient of expansion, its standard error and that of a temperature, or None."""
+        expansion, sd, reading = self.free_expansion, self.free_expansion_sd, self.temperature_sd
+        return None if expansion is None or sd is None or reading is None else (expansion, sd, reading)
 
 
 def judged_quantities(config: CompareConfig) -> dict[str, str]:

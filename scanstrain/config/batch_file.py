@@ -13,7 +13,7 @@ from typing import Annotated, Literal
 from pydantic import Field, Strict, ValidationInfo, field_validator, model_validator
 
 from scanstrain.config.assessment import SeriesOptions
-from scanstrain.config.base import FilePath, Options
+from scanstrain.config.base import FilePath, Finite, Options
 from scanstrain.config.faults import Fault, contradiction, refuse, refuse_all
 from scanstrain.config.models import CompareConfig
 from scanstrain.config.output import OutputOptions
@@ -38,6 +38,12 @@ class EpochEntry(Options):
     date: dt.date | None = Field(
         default=None,
         description="Day of the scan, without quotes. No default: not needed, but it shows mixed-up epochs.",
+    )
+    temperature: Finite | None = Field(
+        default=None,
+        examples=[11.5],
+        description="Temperature of the object at the scan [deg C], for a series that takes its expansion off. No "
+        "default: it is not in the scan.",
     )
 
 
@@ -109,6 +115,16 @@ class BatchConfig(CompareConfig):
     @model_validator(mode="after")
     def _files_of_places(self) -> BatchConfig:
         refuse_all(list(faults_of_places(self.place, tuple(entry.file for entry in self.epoch))))
+        return self
+
+    @model_validator(mode="after")
+    def _temperatures_of_a_series(self) -> BatchConfig:
+        if self.series.thermal is not None:
+            missing = [entry.label for entry in self.followed() if entry.temperature is None]
+            if missing:
+                required = "a temperature for each epoch of the series, to take the expansion off"
+                got = f"none for {', '.join(missing)}"
+                refuse(required, got, "add them or remove series.free_expansion", key=("series", "free_expansion"))
         return self
 
     @model_validator(mode="after")

@@ -194,11 +194,22 @@ class StrainOptions(Options):
         "and upward on a wall. Default free, because nothing is assumed that the user did not "
         "say.",
     )
+    compare_measures: bool = Field(
+        default=False,
+        description="State how far strains in the other measures lie from those in the one used. Default false: below"
+        " 1 % of strain they hardly differ.",
+    )
     thickness: Positive | None = Field(
         default=None,
         examples=[0.35],
         description="Thickness of the lining or wall [m], for bending strain on its faces. No default: "
         "without it bending strain is not formed.",
+    )
+    bending_form: Literal["thin", "thick"] = Field(
+        default="thin",
+        description="Strain of bending from a change of curvature: thin takes half the thickness times the change, "
+        "thick counts that the inside of a ring has a shorter arc than its middle. Default thin, the usual form; on the"
+        " inside of a ring of twelve thicknesses it is 4 % too large.",
     )
     free_side: Point | None = Field(
         default=None,

@@ -65,7 +65,10 @@ def _from_numbers(result: Result) -> Iterator[str]:
         )
     if np.isfinite(np.asarray(strain.values["bend_1"], dtype=float)).any():
         yield (
-            "bend_1 and bend_2 assume the thickness that was given, plane sections and a section that is not cracked."
+            "bend_1 and bend_2 assume the thickness that was given, plane sections and a section that is not cracked. "
+            "They are positive where the scanned face is stretched: where it becomes more convex towards the free "
+            "side, as at the crown of a lining that sags. The strain of the middle of the thickness (membrane_u and "
+            "membrane_v in gauges.csv) is that of the face less that of bending."
         )
     if not registration.converged:
         yield "The registration did not converge: displacement, tilt and rotation must not be used."

@@ -55,6 +55,7 @@ def _number(result: Result, attribute: Attribute) -> dict[str, Any]:
         "detection_limit": _median_limit(attribute.name, result.strain.detection_limit),
         "detectable_80": _median_limit(attribute.name, result.strain.detectable_80),
         "gauge_bias": _bias(attribute.name, result.strain.bias),
+        "noise_bias": _median_bias(result, attribute.name),
         "share_observable": _share(observable),
         "share_discovered": _share(changed[observable]),
         "largest_change": _largest_change(result, attribute, changed),
@@ -97,6 +98,13 @@ def _median_limit(name: str, sizes: Mapping[str, Numbers]) -> float | None:
     key = limit_key(name, sizes)
     limits = _finite(sizes[key]) if key else np.empty(0)
     return short(float(np.median(limits))) if len(limits) else None
+
+
+def _median_bias(result: Result, name: str) -> float | None:
+    """What noise adds at most on average, where it drives a quantity to one side; None where it does not."""
+    certainty = result.strain.certainty.get(name)
+    bias = np.empty(0) if certainty is None else _finite(certainty.noise_bias)
+    return short(float(np.median(bias))) if bias.any() else None
 
 
 def _largest_change(result: Result, attribute: Attribute, changed: NDArray[np.bool_]) -> dict[str, Any] | None:

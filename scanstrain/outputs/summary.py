@@ -5,7 +5,7 @@ from __future__ import annotations
 
 import platform
 import sys
-from dataclasses import fields
+from dataclasses import asdict, fields
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
@@ -82,7 +82,11 @@ def summary(result: Result, *, no_data: float | None = None) -> dict[str, Any]:
             "gauges": result.calibration.gauges,
         },
         "results": attribute_statistics(result),
-        "strain_measure": {"used": strain.measure, "why": strain.measure_reason},
+        "strain_measure": {
+            "used": strain.measure,
+            "why": strain.measure_reason,
+            "compared": [asdict(row) for row in strain.compared],
+        },
         "inputs": {"reference": _input(result.reference), "current": _input(result.current)},
         "software": _software(),
         "config": result.config.model_dump(mode="json"),

@@ -17,6 +17,7 @@ from scanstrain.attributes import ATTRIBUTES, BY_NAME
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.words import status_word
 from scanstrain.result import Result
+from scanstrain.strain.details import DETAILS
 
 POSITION_DECIMALS = 4
 """0.1 mm: far below a gauge, and short at survey coordinates."""
@@ -48,6 +49,8 @@ def _columns(result: Result) -> Iterator[Column]:
         yield attribute.name, attribute.unit, _cells(strain.values[attribute.name])
     for name, limits in strain.detection_limit.items():
         yield f"limit_{name}", _limit_unit(name), _cells(limits)
+    for name, values in strain.details.items():
+        yield name, DETAILS[name], _cells(values)
     for prefix, each in (("detectable_80", strain.detectable_80), ("bias", strain.bias)):
         for name, sizes in each.items():
             yield f"{prefix}_{name}", _limit_unit(name), _cells(sizes)

@@ -42,6 +42,13 @@ def axis_of_normals(normals: FloatArray) -> FloatArray | None:
     return np.asarray(axis * np.sign(axis[np.argmax(np.abs(axis))]))
 
 
+def turned_components(axes: FloatArray, frame: FloatArray) -> FloatArray:
+    """Return what takes tensor components (11, 22, 12) along a gauge's a1, a2 to (uu, vv, uv); shape (g, 3, 3)."""
+    (a, b), (c, d) = np.moveaxis(np.einsum("gia,gib->gab", axes, frame[:, :, :2]), 0, -1)
+    turn = np.stack([a * a, b * b, 2 * a * b, c * c, d * d, 2 * c * d, a * c, b * d, a * d + b * c], -1)
+    return np.asarray(turn.reshape(-1, 3, 3))
+
+
 def structure_axes(
     frame: FloatArray, *, structure: str, axis: FloatArray | None = None
 ) -> tuple[FloatArray, tuple[str, ...]]:

@@ -11,10 +11,13 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from scanstrain.linalg import tensor_2d
+from scanstrain.linalg import components_2d, sym, tensor_2d
 from scanstrain.strain.surface import SurfaceMap
 
 FloatArray = NDArray[np.float64]
+
+FORMS = ("thin", "thick")
+"""Of the strain that goes with a change of curvature: of a thin shell, or of a thick ring."""
 
 
 def curvature_change(mapped: SurfaceMap, shape: FloatArray, hessian: FloatArray) -> FloatArray:
@@ -46,6 +49,39 @@ def curvature_change(mapped: SurfaceMap, shape: FloatArray, hessian: FloatArray)
     return np.asarray(before - mapped.inverse_stretch @ form @ mapped.inverse_stretch)
 
 
-def bending_strain(curvature: FloatArray, thickness: float) -> FloatArray:
-    """Strain of the scanned face from bending, `(thickness / 2) dk`; plane sections assumed [1]."""
-    return 0.5 * thickness * curvature
+def bending_map(shape: FloatArray, thickness: float, form: str = "thin") -> FloatArray:
+    """What takes a change of curvature (11, 22, 12) of the scanned face to the strain of bending there.
+
+    Plane sections about the middle of the thickness t. Thin: `t / 2` times the change. Thick ring: the face lies
+    t / 2 from the mid-surface and has an arc of another length, so each direction of curvature k (positive = convex to
+    the free side) has `(t / 2) dk / (1 - k t / 2)`. On the inside of a ring with the mid-line R, r = R - t / 2, that is
+    `z dk_mid R / r` with z = t / 2, the first order of Winkler's curved bar for an inextensible mid-line.
+
+    Parameters
+    ----------
+    shape : ndarray of shape (g, 3)
+        (11, 12, 22) second derivatives of reference height, positive = concave to the free side [1/m].
+    thickness : float
+        Of the wall or lining [m].
+    form : {"thin", "thick"}
+
+    Returns
+    -------
+    ndarray of shape (g, 3, 3)
+        Linear map of the components (11, 22, 12) [m].
+    """
+    half, count = 0.5 * thickness, len(shape)
+    if form == "thin":
+        return np.broadcast_to(half * np.eye(3), (count, 3, 3))
+    arcs = np.eye(2) + half * tensor_2d(np.asarray(shape)[..., [0, 2, 1]])
+    # a face with a radius below half the thickness has no mid-surface
+    arcs = np.where((np.linalg.eigvalsh(arcs)[:, 0] > 0)[:, None, None], arcs, np.nan)
+    stretch = np.linalg.inv(arcs)
+    # the symmetric part of (1 + s t / 2)^-1 dk, one column a component of dk
+    columns = [half * components_2d(sym(stretch @ tensor_2d(unit))) for unit in np.eye(3)]
+    return np.stack(columns, axis=-1)
+
+
+def bending_strain(curvature: FloatArray, mapping: FloatArray) -> FloatArray:
+    """Strain of the scanned face from bending, components (11, 22, 12) [1]; `mapping` from `bending_map`."""
+    return np.asarray(np.einsum("gij,gj->gi", mapping, curvature))

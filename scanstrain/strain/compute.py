@@ -15,9 +15,10 @@ from scanstrain.neighbourhood.result import AffineField, Observed
 from scanstrain.registration.result import Registration
 from scanstrain.registry import unknown_name
 from scanstrain.strain.axes import STRUCTURES, structure_axes
-from scanstrain.strain.bending import bending_strain
+from scanstrain.strain.bending import FORMS, bending_map, bending_strain
 from scanstrain.strain.blur import bias_sizes, widened
 from scanstrain.strain.clusters import find_clusters
+from scanstrain.strain.details import details
 from scanstrain.strain.errors import certainties
 from scanstrain.strain.gauges import Gauges, fitted_gauges
 from scanstrain.strain.kinematics import Kinematics, choose_measure, kinematics
@@ -50,6 +51,7 @@ def compute_strain(
     measure: str = "auto",
     structure: str = "free",
     thickness: float | None = None,
+    bending_form: str = "thin",
     axis: ArrayLike | None = None,
     false_discovery_rate: float = 0.05,
     known: Mapping[str, NDArray[np.generic]] | None = None,
@@ -70,6 +72,8 @@ def compute_strain(
         Meaning of the axes u and v: hoop and axial, or horizontal and upward.
     thickness : float, optional
         Thickness of the wall or lining [m]; gives `bend_1` and `bend_2`.
+    bending_form : {"thin", "thick"}
+        Bending of a thin shell, or of a thick ring whose inside has a shorter arc than its middle.
     axis : array_like of shape (3,) or (g, 3), optional
         Direction of a tunnel's axis, one for all or one a gauge; found from the normals where not given.
     false_discovery_rate : float
@@ -87,6 +91,8 @@ def compute_strain(
         An option is unknown, out of range or contradicts another.
     """
     _check(measure, structure, thickness, false_discovery_rate)
+    if bending_form not in FORMS:
+        raise OptionError(unknown_name("form of bending", bending_form, list(FORMS)))
     if axis is not None:
         _check_axis(np.asarray(axis, dtype=np.float64), structure, len(field))
     gauges = fitted_gauges(field, registration)
@@ -100,11 +106,12 @@ def compute_strain(
     tested = kinematics(gauges, measure)
     gauges, bare = widened(gauges), gauges
     moved = kinematics(gauges, measure)
+    bending = None if thickness is None else bending_map(gauges.shape, thickness, bending_form)
     values = {
         **_displacement(gauges),
         **_strain(gauges, moved, axes),
         **_rotation(gauges, moved),
-        **_bending(gauges, moved, thickness),
+        **_bending(gauges, moved, bending),
         "significance": wald(bare.parameters, bare.datum_covariance, bare.observable),
     }
     factor = None if field.correlation is None else field.correlation.factor
@@ -127,13 +134,14 @@ def compute_strain(
         gauge_spacing=field.gauge_spacing,
         bowing=np.asarray(gauges.scatter(_bowing(gauges, axes), 0.0), dtype=np.float64),
         warnings=notes + _what_is_missing(gauges),
-        certainty=certainties(gauges, moved, axes, thickness, values),
+        certainty=certainties(gauges, moved, axes, bending, values),
         detectable_80=_over_the_field(gauges, _limits(gauges, moved, NORMAL_80, VECTOR_80)),
         bias=_over_the_field(gauges, bias_sizes(gauges)),
         rigid_p=np.asarray(gauges.scatter(rigid, np.nan), dtype=np.float64),
         cluster_p=np.asarray(gauges.scatter(cluster_p, np.nan), dtype=np.float64),
         cluster_found=np.asarray(gauges.scatter(cluster_found, 0.0), dtype=np.bool_),
         gauge_lengths=field.gauge_lengths,
+        details=details(gauges, moved, axes, bending),
     )
 
 
@@ -224,14 +232,15 @@ def _rotation(gauges: Gauges, moved: Kinematics) -> Values:
     }
 
 
-def _bending(gauges: Gauges, moved: Kinematics, thickness: float | None) -> Values:
+def _bending(gauges: Gauges, moved: Kinematics, bending: FloatArray | None) -> Values:
     larger, smaller = principal(tensor_2d(moved.curvature))
     errors = principal_sd(moved.curvature, moved.curvature_covariance)
     seen = gauges.has(Observed.CURVATURE)
     values = _only(seen, curv_1=larger, curv_2=smaller, curv_sd=np.maximum(*errors))
-    bent = seen & (thickness is not None)
-    half = thickness or 0.0
-    return values | _only(bent, bend_1=bending_strain(larger, half), bend_2=bending_strain(smaller, half))
+    if bending is None:
+        return values | _only(np.zeros_like(seen), bend_1=larger, bend_2=smaller)
+    longer, shorter = principal(tensor_2d(bending_strain(moved.curvature, bending)))
+    return values | _only(seen, bend_1=longer, bend_2=shorter)
 
 
 def _bowing(gauges: Gauges, axes: FloatArray) -> FloatArray:

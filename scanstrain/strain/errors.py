@@ -10,6 +10,8 @@ from numpy.typing import NDArray
 
 from scanstrain.linalg import sandwich
 from scanstrain.neighbourhood.result import PARAMETERS
+from scanstrain.strain.axes import turned_components
+from scanstrain.strain.bending import bending_strain
 from scanstrain.strain.gauges import Gauges
 from scanstrain.strain.kinematics import Kinematics
 from scanstrain.strain.result import Certainty
@@ -26,7 +28,7 @@ _SPIN = [PARAMETERS.index("g12"), PARAMETERS.index("g21")]
 
 
 def certainties(
-    gauges: Gauges, moved: Kinematics, axes: FloatArray, thickness: float | None, values: Mapping[str, FloatArray]
+    gauges: Gauges, moved: Kinematics, axes: FloatArray, bending: FloatArray | None, values: Mapping[str, FloatArray]
 ) -> dict[str, Certainty]:
     """Gather what is known about the errors of every quantity that can be held against a limit.
 
@@ -36,8 +38,8 @@ def certainties(
     moved : Kinematics
     axes : ndarray of shape (g, 3, 2)
         Tangents u and v of the structure at the fitted gauges.
-    thickness : float, optional
-        Of the wall or lining [m].
+    bending : ndarray of shape (g, 3, 3), optional
+        From a change of curvature to the strain of bending, where a thickness is known.
     values : mapping of str to ndarray of shape (g,)
         The quantities at the fitted gauges; an error is given where the value is.
 
@@ -47,7 +49,10 @@ def certainties(
         Over all gauges of the field.
     """
     found = {**_displacements(gauges), **_rotations(gauges, moved), **_strains(gauges, moved, axes)}
-    found |= _bendings(moved, thickness or 0.0)
+    found |= _principal("curv", moved.curvature, moved.curvature_covariance)
+    mapping = np.zeros((len(gauges), 3, 3)) if bending is None else bending
+    bent, spread = bending_strain(moved.curvature, mapping), sandwich(mapping, moved.curvature_covariance)
+    found |= _principal("bend", bent, np.asarray(spread))
     return {name: _over_the_field(gauges, parts, np.isfinite(values[name])) for name, parts in found.items()}
 
 
@@ -89,9 +94,7 @@ def _rotations(gauges: Gauges, moved: Kinematics) -> dict[str, Parts]:
 
 
 def _strains(gauges: Gauges, moved: Kinematics, axes: FloatArray) -> dict[str, Parts]:
-    (a, b), (c, d) = np.moveaxis(np.einsum("gia,gib->gab", axes, gauges.frame[:, :, :2]), 0, -1)
-    turn = np.stack([a * a, b * b, 2 * a * b, c * c, d * d, 2 * c * d, a * c, b * d, a * d + b * c], -1)
-    own = sandwich(turn.reshape(-1, 3, 3), moved.strain_covariance)
+    own = sandwich(turned_components(axes, gauges.frame), moved.strain_covariance)
     none = np.zeros(len(gauges))
     found = {name: (_root(own[:, k, k]), none, none) for k, name in enumerate(("strain_u", "strain_v", "shear_uv"))}
     larger, smaller = principal_sd(moved.strain, moved.strain_covariance)
@@ -107,15 +110,12 @@ def _strains(gauges: Gauges, moved: Kinematics, axes: FloatArray) -> dict[str, P
     }
 
 
-def _bendings(moved: Kinematics, thickness: float) -> dict[str, Parts]:
-    errors = principal_sd(moved.curvature, moved.curvature_covariance)
-    bias = _lengthened(_circle(moved.curvature, moved.curvature_covariance)[1])
+def _principal(name: str, components: FloatArray, covariance: FloatArray) -> dict[str, Parts]:
+    """Errors of the larger and the smaller principal value of tensors that do not depend on the datum."""
+    bias = _lengthened(_circle(components, covariance)[1])
     none = np.zeros(len(bias))
-    found = {}
-    for number, (sd, sign) in enumerate(zip(errors, (1.0, -1.0), strict=True), start=1):
-        found[f"curv_{number}"] = sd, none, sign * bias
-        found[f"bend_{number}"] = 0.5 * thickness * sd, none, 0.5 * thickness * sign * bias
-    return found
+    errors = zip(principal_sd(components, covariance), (1.0, -1.0), strict=True)
+    return {f"{name}_{number}": (sd, none, sign * bias) for number, (sd, sign) in enumerate(errors, start=1)}
 
 
 def _circle(components: FloatArray, covariance: FloatArray) -> tuple[FloatArray, FloatArray]:

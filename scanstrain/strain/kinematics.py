@@ -43,6 +43,8 @@ class Kinematics:
         Rotation about the normal [rad].
     strain_covariance, curvature_covariance, tilt_covariance, spin_variance : ndarray
         The first two from observations, the last two with the error of the registration.
+    strain_with_curvature : ndarray of shape (g, 3, 3)
+        Covariance of strain (rows) and change of curvature (columns), from observations.
     """
 
     mapped: SurfaceMap
@@ -54,6 +56,7 @@ class Kinematics:
     curvature_covariance: FloatArray
     tilt_covariance: FloatArray
     spin_variance: FloatArray
+    strain_with_curvature: FloatArray
 
 
 def _all_of_it(unknowns: FloatArray, shape: FloatArray, measure: str) -> FloatArray:
@@ -85,6 +88,7 @@ def kinematics(gauges: Gauges, measure: str) -> Kinematics:
         curvature_covariance=sandwich(J[:, _CURVATURE], own),
         tilt_covariance=sandwich(J[:, _TILT], datum),
         spin_variance=sandwich(J[:, _SPIN], datum)[:, 0, 0],
+        strain_with_curvature=J[:, _STRAIN] @ own @ np.swapaxes(J[:, _CURVATURE], 1, 2),
     )
 
 

@@ -33,6 +33,28 @@ class Certainty:
 
 
 @dataclass(frozen=True, slots=True)
+class MeasureDifference:
+    """One measure against the one used; NaN and None where strain is observable at no gauge.
+
+    Parameters
+    ----------
+    measure : str
+    difference : float
+        Of the principal strain that differs most among all gauges, this measure less the one used [1].
+    strain, sd : float
+        That strain in the measure used, and its standard error [1].
+    gauge : int or None
+        Where, by the number of the gauge.
+    """
+
+    measure: str
+    difference: float = np.nan
+    strain: float = np.nan
+    sd: float = np.nan
+    gauge: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
 class StrainField:
     """Strain, rotation and their errors, one row per gauge.
 
@@ -66,6 +88,11 @@ class StrainField:
         Whether that cluster survives false-discovery control over all clusters.
     gauge_lengths : ndarray of shape (g,), optional
         Where gauges differ in length, that of each [m].
+    details : mapping of str to ndarray of shape (g,)
+        What `scanstrain.strain.details.DETAILS` lists: direction of the larger principal strain, bending and membrane
+        strain along the axes.
+    compared : tuple of MeasureDifference
+        How far the other measures lie from the one used, where that was asked for.
     bowing : ndarray of shape (g, 3), optional
         Second derivatives of the normal displacement along (uu, vv, uv) [1/m], zero where not observable: what a
         blend between gauges needs beside the values.
@@ -90,6 +117,8 @@ class StrainField:
     cluster_p: FloatArray | None = None
     cluster_found: NDArray[np.bool_] | None = None
     gauge_lengths: FloatArray | None = None
+    details: Mapping[str, FloatArray] = default(default_factory=dict)
+    compared: tuple[MeasureDifference, ...] = ()
 
     def __len__(self) -> int:
         return len(self.position)

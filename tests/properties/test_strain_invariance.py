@@ -159,6 +159,45 @@ def test_the_choice_of_tangents_does_not_matter(seed, a_turn):
         )
 
 
+def with_scans_moved(field, P, Q):
+    """The field of the same two scans, the reference turned by P and the current one by Q, both about the origin."""
+    A = field.frame
+    tangents = np.eye(3)[:, :2] + field.gradient
+    gradient = np.swapaxes(P @ A, 1, 2) @ Q @ A @ tangents - np.eye(3)[:, :2]
+    return FIELDS["affine_field"](
+        field.position @ P.T, P @ A, displacement=field.displacement, gradient=gradient, hessian=field.hessian,
+        shape=field.shape, covariance=field.covariance,
+    )  # fmt: skip
+
+
+def in_space(result):
+    """Strain tensors (g, 3, 3) and rotations (g, 3, 3) in file axes."""
+    E = np.stack([result.values[f"strain_{n}"] for n in ("xx", "xy", "xz", "xy", "yy", "yz", "xz", "yz", "zz")], -1)
+    w = np.stack([result.values[f"rot_{n}"] for n in "xyz"], -1)
+    return E.reshape(-1, 3, 3), np.stack([rotation_matrix(each) for each in w])
+
+
+STILL = np.zeros(3)
+
+
+@settings(max_examples=15, deadline=None)
+@given(
+    st.integers(0, 10_000), VECTOR, st.sampled_from(["reference", "current", "both"]), st.sampled_from(list(MEASURES))
+)
+def test_rigid_motion_of_either_scan_leaves_strain_as_it_is(seed, w, which, measure):
+    """Stretches to 1e-9; the tensor turns with the reference, and the rotation is Q R P'."""
+    P = rotation_matrix(w if which in ("reference", "both") else STILL)
+    Q = rotation_matrix(STILL if which == "reference" else w[::-1] if which == "both" else w)
+    field = random_field(seed)
+    before = compute_strain(field, measure=measure)
+    after = compute_strain(with_scans_moved(field, P, Q), measure=measure)
+    for name in ("strain_1", "strain_2", "shear_max", "dilation"):
+        np.testing.assert_allclose(after.values[name], before.values[name], rtol=0, atol=1e-9, err_msg=name)
+    (E, R), (turned, composed) = in_space(before), in_space(after)
+    np.testing.assert_allclose(turned, P @ E @ P.T, rtol=0, atol=1e-9)
+    np.testing.assert_allclose(composed, Q @ R @ P.T, rtol=0, atol=1e-9)
+
+
 @settings(max_examples=10)
 @given(st.integers(0, 10_000))
 def test_millimetres_give_the_same_strain(seed):

@@ -174,6 +174,56 @@ def test_a_season_is_fitted_where_it_is_asked_for(tmp_path):
     assert rate["season_amplitude"] == pytest.approx(1e-3, rel=0.02)
 
 
+WARMTH = (12.0, 20.0, 5.0, 18.0, 9.0)
+"""Degrees Celsius of the object at the epochs."""
+EXPANSION = 10e-6
+
+
+def warm(t, warmth):
+    """A zone and a diameter of 6 m that grow by 100 microstrain a year and by free expansion."""
+    strain = 100e-6 * t + EXPANSION * (warmth - WARMTH[0])
+    data = compared(t)
+    data["zones"]["crown"]["quantities"]["strain_u"] = {"mean": strain, "mean_sd": 5e-6}
+    data["sections"]["rows"][0] |= {
+        "vertical_diameter_ref": 6.0, "vertical_diameter_change": 6.0 * strain, "vertical_diameter_change_sd": 3e-5,
+    }  # fmt: skip
+    return data
+
+
+def followed_warm(folder, series, warmth=WARMTH):
+    epochs = [
+        {"label": f"e{n}", "file": f"{n}.laz", "date": day(t), "temperature": warmth[n]} for n, t in enumerate(YEARS)
+    ]
+    config = BatchConfig.model_validate({"output": {"folder": str(folder)}, "epoch": epochs, "series": series})
+    made = [Outcome(f"e0_to_e{n}", Path("x"), summary=warm(t, WARMTH[n])) for n, t in enumerate(YEARS) if n]
+    return follow_epochs(config, made)
+
+
+THERMAL = {"free_expansion": EXPANSION, "free_expansion_sd": 1e-6, "temperature_sd": 0.5}
+
+
+def test_free_expansion_is_taken_off_strains_and_diameters_where_that_is_asked_for(tmp_path):
+    plain, taken = followed_warm(tmp_path, {}), followed_warm(tmp_path, THERMAL)
+    for place, quantity, rate in (
+        ("crown", "mean_strain_u", 100e-6),
+        ("section 4.00 m", "vertical_diameter_change", 600e-6),
+    ):
+        (without,), (with_it,) = rows(plain, place, quantity), rows(taken, place, quantity)
+        assert without["model"] == "rate"
+        assert without["rate"] != pytest.approx(rate, rel=0.05)
+        assert with_it["model"] == "rate, less temperature"
+        assert with_it["rate"] == pytest.approx(rate, rel=2e-3)
+    # a movement depends on where the object is held
+    assert rows(taken, "crown", "shift")[0]["model"] == "rate"
+
+
+def test_expansion_takes_a_temperature_for_every_epoch_and_all_its_numbers(tmp_path):
+    with pytest.raises(ValueError, match=r"a temperature for each epoch.*none for e2"):
+        followed_warm(tmp_path, THERMAL, warmth=(*WARMTH[:2], None, *WARMTH[3:]))
+    with pytest.raises(ValueError, match="add temperature_sd"):
+        followed_warm(tmp_path, {"free_expansion": 1e-5, "free_expansion_sd": 1e-6})
+
+
 def test_a_batch_from_its_file_to_the_table(tmp_path, monkeypatch):
     """Through `run_batch` with comparisons made by hand, one of which fails."""
 

@@ -55,6 +55,7 @@ def placed(small, position, normal, up, **values):
     strain = replace(
         small.strain, position=position, normal=normal, axes=frame[:, :, :2], values=table,
         status=np.zeros(g, np.uint8), detection_limit={k: np.full(g, v) for k, v in limits.items()}, gauge_spacing=0.1,
+        details={"direction_1": values.get("direction_1", np.full(g, np.nan))},
     )  # fmt: skip
     field = replace(
         small.field, position=position, frame=frame, displacement=np.zeros((g, 3)),
@@ -344,6 +345,7 @@ def test_pure_shear_gives_crosses_at_half_a_right_angle(small):
     result = wall(
         small, strain_1=np.full(144, shear), strain_2=np.full(144, -shear), shear_uv=np.full(144, shear),
         strain_1_sd=np.full(144, 1e-4), strain_2_sd=np.full(144, 1e-4), discovery=np.ones(144, np.uint8),
+        direction_1=np.full(144, np.pi / 4),
     )  # fmt: skip
     lines = collections(FIGURES["strain_crosses"](result), LineCollection)[0]
     step = np.array([segment[1] - segment[0] for segment in lines.get_segments()])
@@ -352,6 +354,15 @@ def test_pure_shear_gives_crosses_at_half_a_right_angle(small):
     np.testing.assert_allclose(slope[:half], 1.0, rtol=1e-6)  # elongation along u = v
     np.testing.assert_allclose(slope[half:], -1.0, rtol=1e-6)
     assert not (lines.get_colors()[0] == lines.get_colors()[-1]).all()
+
+
+def test_equal_principal_strains_have_no_cross(small):
+    """Both are significant, but they have no direction."""
+    result = wall(
+        small, strain_1=np.full(144, 1e-3), strain_2=np.full(144, 1e-3), discovery=np.ones(144, np.uint8),
+        strain_1_sd=np.full(144, 1e-4), strain_2_sd=np.full(144, 1e-4), direction_1=np.full(144, np.nan),
+    )  # fmt: skip
+    assert collections(FIGURES["strain_crosses"](result), LineCollection) == []
 
 
 def test_stable_ground_follows_the_points(small):

@@ -29,8 +29,8 @@ WEIGHT = 1.4
 def draw_strain_crosses(result: Result, *, unrolled: Unrolled | Layout | None = None) -> Picture | None:
     """Draw the two principal strains of gauges as crosses.
 
-    An arm is drawn where the gauge changed and the strain along the arm lies outside its own 95 % interval; of close
-    gauges only some are drawn.
+    An arm is drawn where the gauge changed, the two principal strains differ significantly, so that there is a
+    direction, and the strain along the arm lies outside its own 95 % interval; of close gauges only some are drawn.
 
     Parameters
     ----------
@@ -59,7 +59,10 @@ def draw_strain_crosses(result: Result, *, unrolled: Unrolled | Layout | None = 
         most = amount(float(np.abs(sizes[arms]).max()), attribute)
         found = f"Significant at {number(int(drawn.sum()), 0)} of the {count} gauges shown, up to {most}."
     title = "Principal strains in the surface"
-    meaning = "Arms lie along the principal directions, where the strain is outside its own 95 % interval."
+    meaning = (
+        "Arms lie along the principal directions, where both strains differ for sure and the strain of the arm is "
+        "outside its own 95 % interval."
+    )
     page = map_page(
         layout, strain.gauge_spacing, title=title, said=[f"{found} {gaps(sizes[:, 0], layout)}"],
         foot=[meaning, *facts(result, layout)],
@@ -75,11 +78,12 @@ def draw_strain_crosses(result: Result, *, unrolled: Unrolled | Layout | None = 
 
 
 def _directions(result: Result, layout: Layout) -> FloatArray:
-    """Unit directions of the larger and the smaller principal strain on the map, (g, 2 components, 2 strains)."""
+    """Unit directions of the larger and the smaller principal strain on the map, (g, 2 components, 2 strains).
+
+    NaN where no direction is known.
+    """
     strain = result.strain
-    u, v, uv = (np.asarray(strain.values[name], float) for name in ("strain_u", "strain_v", "shear_uv"))
-    # angle of the larger principal strain from u (Mohr's circle)
-    angle = 0.5 * np.arctan2(2 * uv, u - v)
+    angle = np.asarray(strain.details["direction_1"], float)
     c, s = np.cos(angle), np.sin(angle)
     in_axes = np.stack([np.stack([c, -s], 1), np.stack([s, c], 1)], axis=1)
     basis = np.stack(map_directions(strain.position, strain.normal, layout, strain.gauge_spacing), axis=2)

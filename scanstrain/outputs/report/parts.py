@@ -67,6 +67,25 @@ def budget_table(summary: Summary) -> Table | None:
     )
 
 
+def measure_table(summary: Summary) -> Table | None:
+    """Say how far the other strain measures lie from the one used; None where that was not asked for."""
+    compared = summary["strain_measure"].get("compared") or []
+    if not compared:
+        return None
+    rows = [
+        [row["measure"].replace("_", " "), plain_number(_microstrain(row["difference"]), 3, "µε"),
+         measured(row["strain"], row["sd"], "strain_1")]
+        for row in compared
+    ]  # fmt: skip
+    heads = ("Measure", "Largest difference of a principal strain", "That strain in the measure used, 95 %")
+    note = "All measures are formed after the local rotation is removed, so small and Biot strain agree."
+    return table("Other strain measures", heads, rows, note=note)
+
+
+def _microstrain(strain: float | None) -> float | None:
+    return None if strain is None else 1e6 * strain
+
+
 def _mean(zone: Mapping[str, Any], quantity: str) -> Cell:
     found = zone["quantities"].get(quantity)
     return measured(found["mean"], found["mean_sd"], quantity) if found else Cell(MISSING)

@@ -14,7 +14,7 @@ from scanstrain.outputs.report.ground import ground_tables
 from scanstrain.outputs.report.head import head_of
 from scanstrain.outputs.report.images import Shown, show, show_dots
 from scanstrain.outputs.report.page import render
-from scanstrain.outputs.report.parts import budget_table, trigger_table, zone_table
+from scanstrain.outputs.report.parts import budget_table, measure_table, trigger_table, zone_table
 from scanstrain.outputs.report.places import places_of
 from scanstrain.outputs.report.quantities import quality_tables, quantities, quantity_table
 from scanstrain.outputs.report.record import record_tables
@@ -87,6 +87,7 @@ def report_page(result: Result, options: OutputOptions) -> str:
         view=_view(result, limits),
         quality={"tables": quality_tables(summary), "figures": _some(figures, QUALITY)},
         measure=summary["strain_measure"],
+        measure_table=measure_table(summary),
         gauges=summary["gauges"],
         warnings=summary["warnings"],
         cautions=summary["cautions"],
