@@ -112,6 +112,7 @@ def compare_to_folder(
         no_data=options.no_data_number,
         only_significant=options.only_significant,
         report=options.report,
+        ply=options.ply,
     )
     summary: dict[str, Any] = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
     return summary

@@ -151,7 +151,8 @@ def inspect(terminal: Terminal, scans: tuple[Path, ...]) -> int:
 @click.option("--by", "attribute", required=True, metavar="ATTRIBUTE", help="Attribute that gives the colour.")
 @click.option("--limits", type=float, nargs=2, metavar="LOW HIGH", help="Ends of the scale, in the unit of the file.")
 @click.option("--only-significant", is_flag=True, help="Colour only what survived false-discovery control.")
-@click.option("--out", type=PATH, help="Folder for the two files; by default the one of CLOUD.")
+@click.option("--ply/--no-ply", default=True, show_default=True, help="Write the cloud as binary PLY too.")
+@click.option("--out", type=PATH, help="Folder for the files; by default the one of CLOUD.")
 @json_option
 @loudness
 @click.pass_obj
@@ -161,6 +162,7 @@ def colour(
     attribute: str,
     limits: tuple[float, float] | None,
     only_significant: bool,
+    ply: bool,
     out: Path | None,
 ) -> None:
     """Colour the result CLOUD by another attribute.
@@ -169,7 +171,7 @@ def colour(
     """
     from scanstrain.outputs import recolour
 
-    written = recolour(cloud, attribute, limits=limits, only_significant=only_significant, out=out)
+    written = recolour(cloud, attribute, limits=limits, only_significant=only_significant, ply=ply, out=out)
     terminal.show_files(written)
 
 

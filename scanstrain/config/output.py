@@ -59,6 +59,12 @@ class OutputOptions(Options):
         "megabytes a comparison.",
     )
 
+    ply: bool = Field(
+        default=True,
+        description="Write the coloured cloud as binary PLY too. Default true, because many viewers know no LAZ; it takes "
+        "some 40 bytes a point.",
+    )
+
     @field_validator("colour_by")
     @classmethod
     def _known_attribute(cls, value: str) -> str:

@@ -24,6 +24,8 @@ class OutputOptions:
         Grey out places without a change beyond the false-discovery control.
     report : bool
         Write `report.html`.
+    ply : bool
+        Write the coloured cloud as binary PLY too.
     """
 
     colour_by: str = "disp_n"
@@ -31,3 +33,4 @@ class OutputOptions:
     no_data: float | None = None
     only_significant: bool = False
     report: bool = True
+    ply: bool = True

@@ -13,6 +13,7 @@ from scanstrain.outputs.folder import check_folder, finished_only, is_ours
 from scanstrain.outputs.joint_table import write_joint_table
 from scanstrain.outputs.key import write_colour_key
 from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.ply import write_ply_cloud
 from scanstrain.outputs.registered import write_registered
 from scanstrain.outputs.report import write_report
 from scanstrain.outputs.section_table import write_section_table
@@ -29,6 +30,7 @@ Writer = Callable[[Result, Path, OutputOptions], Path | None]
 OUTPUTS: Registry[Writer] = Registry("output")
 OUTPUTS.add("strain cloud", write_strain_cloud)
 OUTPUTS.add("coloured cloud", write_coloured_cloud)
+OUTPUTS.add("coloured PLY", write_ply_cloud)
 OUTPUTS.add("colour key", write_colour_key)
 OUTPUTS.add("gauge table", write_gauge_table)
 OUTPUTS.add("section table", write_section_table)
@@ -49,6 +51,7 @@ def write_result(
     no_data: float | None = None,
     only_significant: bool = False,
     report: bool = True,
+    ply: bool = True,
 ) -> list[Path]:
     """Write a result into a folder.
 
@@ -69,6 +72,8 @@ def write_result(
         Grey out places without a change beyond the false-discovery control.
     report : bool
         Write `report.html`.
+    ply : bool
+        Write the coloured cloud as binary PLY too.
 
     Returns
     -------
@@ -83,7 +88,7 @@ def write_result(
         The folder is a file, holds an input in the place of an output, cannot be written to, or the disk is full.
         What stood there before stands there still.
     """
-    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report)
+    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report, ply)
     # limits that do not fit are refused before anything is written
     choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits)
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]
