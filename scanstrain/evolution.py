@@ -81,6 +81,8 @@ def follow_epochs(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bo
     try:
         rows = tuple(_rows(config, first, summaries))
         file = _written(rows, config.output.folder) if write and rows else None
+        if file is not None:
+            _shown(rows, config, outcomes, first, [entry for entry, _ in summaries])
     except ScanstrainError as error:
         return Evolution(notes=(*notes, f"Series: {str(error).removeprefix('series: ')}"))
     return Evolution(rows, tuple(notes), file)
@@ -108,6 +110,24 @@ def _written(rows: Sequence[ChangeRow | RateRow], folder: Path) -> Path:
     from scanstrain.outputs.series_table import write_series_table
 
     return write_series_table(rows, folder)
+
+
+def _shown(
+    rows: Sequence[ChangeRow | RateRow], config: BatchConfig, outcomes: Sequence[Outcome], first: EpochEntry,
+    later: Sequence[EpochEntry],
+) -> None:  # fmt: skip
+    """Put curves and rates into the overview and the reports."""
+    from scanstrain.outputs.report import Compared, show_series
+
+    found = {outcome.name: outcome for outcome in outcomes}
+    compared = []
+    for entry in later:
+        outcome = found[f"{first.label}_to_{entry.label}"]
+        if entry.date is not None and outcome.summary is not None:
+            compared.append(Compared(entry.label, entry.date, outcome.folder, outcome.summary))
+    if first.date is not None:
+        start, structure = (first.label, first.date), config.strain.structure
+        show_series(outcomes, config.output.folder, rows, first=start, later=compared, structure=structure)
 
 
 def _rows(
@@ -167,8 +187,9 @@ def _gather_sections(seen: Seen, stations: dict[str, float], number: int, summar
     for row in (summary.get("sections") or {}).get("rows", ()):
         place = f"section {row['chainage']:.2f} m"
         stations[place] = float(row["chainage"])
-        for quantity in OF_SECTIONS:
-            _gather(seen, (place, quantity, units[quantity][0]), number, row)
+        chords = (name for name in row if name.startswith("chord_") and name.endswith("_change"))
+        for quantity in (*OF_SECTIONS, *chords):
+            _gather(seen, (place, quantity, units[quantity][0] if quantity in units else "m"), number, row)
 
 
 def _gather(seen: Seen, key: tuple[str, str, str], number: int, known: Mapping[str, Any]) -> None:

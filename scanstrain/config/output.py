@@ -61,8 +61,8 @@ class OutputOptions(Options):
 
     ply: bool = Field(
         default=True,
-        description="Write the coloured cloud as binary PLY too. Default true, because many viewers know no LAZ; it takes "
-        "some 40 bytes a point.",
+        description="Write the coloured cloud as binary PLY too. Default true, because many viewers know no LAZ; it "
+        "takes some 40 bytes a point.",
     )
 
     @field_validator("colour_by")

@@ -21,7 +21,6 @@ from scanstrain.outputs.notes import beside, notes_beside, significant_or_all
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.ply import write_coloured_ply
 from scanstrain.outputs.words import attribute_of
-from scanstrain.registry import unknown_name
 from scanstrain.result import Result
 
 

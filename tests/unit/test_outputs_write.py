@@ -36,8 +36,8 @@ def test_strain_cloud_gets_every_attribute_and_the_source(written, tmp_path):
     assert (source, name, colour, no_data) == (Path("scans/wall.laz"), "strain.laz", None, -9999.0)
     assert list(values) == list(result.points)
     assert [path.name for path in paths] == [
-        "strain.laz", "strain_tilt.laz", "strain_tilt.ply", "strain_tilt.png", "gauges.csv", "registered.json", "summary.json",
-        "report.html",
+        "strain.laz", "strain_tilt.laz", "strain_tilt.ply", "strain_tilt.png", "gauges.csv", "registered.json",
+        "summary.json", "report.html",
     ]  # fmt: skip
     assert json.loads((tmp_path / "out" / "summary.json").read_text())["no_data"]["value"] == -9999.0
 

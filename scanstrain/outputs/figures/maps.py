@@ -33,6 +33,8 @@ from scanstrain.zones import Unrolled
 
 HALO = 2.2
 """White rim around letters on a map [pt]."""
+VEIL = 0.8
+"""Opacity of the paper behind them: the line to the place ends at its edge, and dark cells stay seen."""
 
 
 @styled
@@ -149,8 +151,9 @@ def mark_largest(page: MapPage, result: Result, name: str, layout: Layout) -> No
     note = panel.axes.annotate(
         text, (x, y), (16 * aside, 14 * above), textcoords="offset points", size=SMALL, weight="bold", color=INK,
         ha="left" if aside > 0 else "right", va="center", zorder=6,
-        arrowprops={"arrowstyle": "-", "color": INK, "linewidth": 0.8, "shrinkA": 1, "shrinkB": 3},
+        arrowprops={"arrowstyle": "-", "color": INK, "linewidth": 0.8, "shrinkA": 0, "shrinkB": 3},
         path_effects=[withStroke(linewidth=HALO, foreground="white")],
+        bbox={"boxstyle": "round,pad=0.2", "facecolor": "white", "edgecolor": "none", "alpha": VEIL},
     )  # fmt: skip
     note.arrow_patch.set_zorder(5)
     panel.axes.plot(x, y, "o", markersize=5, markerfacecolor="none", markeredgecolor=INK, markeredgewidth=0.9, zorder=5)

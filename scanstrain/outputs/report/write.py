@@ -13,6 +13,7 @@ from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.report.ground import ground_tables
 from scanstrain.outputs.report.head import head_of
 from scanstrain.outputs.report.images import Shown, show, show_dots
+from scanstrain.outputs.report.joints import joint_tables
 from scanstrain.outputs.report.page import render
 from scanstrain.outputs.report.parts import budget_table, trigger_table, zone_table
 from scanstrain.outputs.report.places import places_of
@@ -82,6 +83,7 @@ def report_page(result: Result, options: OutputOptions) -> str:
             "figures": [show(name, picture) for name, picture in section_pictures(result)],
             "title": "The wall" if summary.get("wall") else "Sections",
         },
+        joints=joint_tables(summary),
         parts_tables=[each for each in (*zones, budget_table(summary)) if each],
         parts_title="Zones and limits" if any(zones) else "Even strain",
         view=_view(result, limits),
