@@ -180,10 +180,21 @@ def run_batch(
             finished(outcome)
     ordered = [outcomes[position] for position in range(len(jobs))]
     if any(outcome.done for outcome in ordered):
+        _share_limits(config)
         from scanstrain.outputs.report import write_index
 
         write_index(ordered, config.output.folder)
     return ordered
+
+
+def _share_limits(config: BatchConfig) -> None:
+    """Colour all comparisons that the batch file names by one scale, those of earlier runs included."""
+    from scanstrain.outputs.options import OutputOptions
+    from scanstrain.outputs.shared_limits import harmonise
+
+    out = config.output
+    chosen = OutputOptions(out.colour_by, out.colour_limits, out.no_data_number, out.only_significant, ply=out.ply)
+    harmonise([job.folder for job in _jobs(config, ())], chosen)
 
 
 def outcomes_data(outcomes: Sequence[Outcome]) -> dict[str, Any]:

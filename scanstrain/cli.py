@@ -72,13 +72,14 @@ def run(terminal: Terminal, config: Path, workers: int, only: tuple[str, ...]) -
     """Run every comparison of the batch file CONFIG."""
     from scanstrain.batch import outcomes_data, run_batch
     from scanstrain.config import load_config
-    from scanstrain.evolution import evolution_data, follow_epochs
+    from scanstrain.evolution import evolution_data, follow_epochs, show_evolution
     from scanstrain.screens import batch_screen
 
     batch = load_config(config)
     with terminal.progress() as progress:
         outcomes = run_batch(batch, workers=workers, only=only, progress=progress, finished=terminal.finished)
     series = follow_epochs(batch, outcomes, write=not only)
+    show_evolution(batch, outcomes, series)
     data = {**outcomes_data(outcomes), "series": evolution_data(series)}
     terminal.show(batch_screen(outcomes, batch.output.folder, notes=series.notes), data)
     for outcome in outcomes:

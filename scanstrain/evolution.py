@@ -81,11 +81,34 @@ def follow_epochs(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bo
     try:
         rows = tuple(_rows(config, first, summaries))
         file = _written(rows, config.output.folder) if write and rows else None
-        if file is not None:
-            _shown(rows, config, outcomes, first, [entry for entry, _ in summaries])
     except ScanstrainError as error:
         return Evolution(notes=(*notes, f"Series: {str(error).removeprefix('series: ')}"))
     return Evolution(rows, tuple(notes), file)
+
+
+def show_evolution(config: BatchConfig, outcomes: Sequence[Outcome], evolution: Evolution) -> None:
+    """Put curves and rates into the overview of the batch and into the reports; nothing without a series.
+
+    Raises
+    ------
+    OutputError
+        A page could not be written; it then stands as it did before.
+    """
+    from scanstrain.outputs.report import Compared, show_series
+
+    epochs = config.followed()
+    if not evolution.rows or epochs[0].date is None:
+        return
+    first, found = epochs[0].label, {outcome.name: outcome for outcome in outcomes}
+    later = [
+        Compared(entry.label, entry.date, outcome.folder, outcome.summary)
+        for entry in epochs[1:]
+        if (outcome := found.get(f"{first}_to_{entry.label}")) and outcome.summary is not None and entry.date
+    ]
+    show_series(
+        outcomes, config.output.folder, evolution.rows, first=(first, epochs[0].date), later=later,
+        structure=config.strain.structure,
+    )  # fmt: skip
 
 
 def evolution_data(evolution: Evolution) -> dict[str, Any]:
@@ -110,24 +133,6 @@ def _written(rows: Sequence[ChangeRow | RateRow], folder: Path) -> Path:
     from scanstrain.outputs.series_table import write_series_table
 
     return write_series_table(rows, folder)
-
-
-def _shown(
-    rows: Sequence[ChangeRow | RateRow], config: BatchConfig, outcomes: Sequence[Outcome], first: EpochEntry,
-    later: Sequence[EpochEntry],
-) -> None:  # fmt: skip
-    """Put curves and rates into the overview and the reports."""
-    from scanstrain.outputs.report import Compared, show_series
-
-    found = {outcome.name: outcome for outcome in outcomes}
-    compared = []
-    for entry in later:
-        outcome = found[f"{first.label}_to_{entry.label}"]
-        if entry.date is not None and outcome.summary is not None:
-            compared.append(Compared(entry.label, entry.date, outcome.folder, outcome.summary))
-    if first.date is not None:
-        start, structure = (first.label, first.date), config.strain.structure
-        show_series(outcomes, config.output.folder, rows, first=start, later=compared, structure=structure)
 
 
 def _rows(

@@ -29,7 +29,7 @@ def write_strain_cloud(result: Result, folder: Path, options: OutputOptions) -> 
     from scanstrain import io
 
     source = Path(result.reference.provenance.path)
-    values = _of_file(result.reference, result.points)
+    values = spread(result.reference, result.points)
     return io.write_result_cloud(source, folder / "strain.laz", values, no_data=options.no_data)
 
 
@@ -41,7 +41,7 @@ def write_coloured_cloud(result: Result, folder: Path, options: OutputOptions) -
     from scanstrain import io
 
     name = options.colour_by
-    values = _of_file(result.reference, beside(name, result.points))
+    values = spread(result.reference, beside(name, result.points))
     scale = choose_scale(attribute_of(name), result.points[name], limits=options.colour_limits)
     rgb = colours(values[name], scale, significant=significant_or_all(values, options.only_significant))
     source, target = Path(result.reference.provenance.path), folder / f"strain_{name}.laz"
@@ -97,7 +97,7 @@ def recolour(
     scale = choose_scale(wanted, shown[attribute], limits=limits)
     significant = significant_or_all(shown, only_significant)
     notes = notes_beside(source, attribute)
-    values = _of_file(epoch, shown)
+    values = spread(epoch, shown)
     rgb = colours(values[attribute], scale, significant=significant_or_all(values, only_significant))
     with finished_only(folder) as work:
         # without values the cloud keeps all it has, and only its colours change
@@ -119,7 +119,7 @@ def _not_in(source: Path, attribute: str, held: list[str]) -> OptionError:
     return OptionError(explain(source.name, f"a cloud with the attribute {attribute}", ", ".join(held), remedy))
 
 
-def _of_file(epoch: Epoch, values: Mapping[str, NDArray[np.generic]]) -> dict[str, NDArray[np.generic]]:
+def spread(epoch: Epoch, values: Mapping[str, NDArray[np.generic]]) -> dict[str, NDArray[np.generic]]:
     """Spread values of the epoch over all points of its file: what was dropped at reading has no data."""
     from scanstrain import io
 

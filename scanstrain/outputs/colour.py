@@ -61,6 +61,8 @@ class Scale:
         Meaning of the steps.
     given : bool
         Whether the limits came from the user.
+    shared : int
+        How many comparisons of a batch share limits that nobody gave; 0 for limits of one comparison alone.
     """
 
     attribute: Attribute
@@ -70,6 +72,7 @@ class Scale:
     form: Literal["linear", "log", "steps"] = "linear"
     labels: tuple[str, ...] = ()
     given: bool = False
+    shared: int = 0
 
     @property
     def masked(self) -> bool:
