@@ -113,6 +113,7 @@ def compare_to_folder(
         only_significant=options.only_significant,
         report=options.report,
         ply=options.ply,
+        colour_map=options.colour_map,
     )
     summary: dict[str, Any] = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
     return summary
@@ -193,7 +194,14 @@ def _share_limits(config: BatchConfig) -> None:
     from scanstrain.outputs.shared_limits import harmonise
 
     out = config.output
-    chosen = OutputOptions(out.colour_by, out.colour_limits, out.no_data_number, out.only_significant, ply=out.ply)
+    chosen = OutputOptions(
+        out.colour_by,
+        out.colour_limits,
+        out.no_data_number,
+        out.only_significant,
+        ply=out.ply,
+        colour_map=out.colour_map,
+    )
     harmonise([job.folder for job in _jobs(config, ())], chosen)
 
 

@@ -42,7 +42,9 @@ def write_coloured_cloud(result: Result, folder: Path, options: OutputOptions) -
 
     name = options.colour_by
     values = spread(result.reference, beside(name, result.points))
-    scale = choose_scale(attribute_of(name), result.points[name], limits=options.colour_limits)
+    scale = choose_scale(
+        attribute_of(name), result.points[name], limits=options.colour_limits, colour_map=options.colour_map
+    )
     rgb = colours(values[name], scale, significant=significant_or_all(values, options.only_significant))
     source, target = Path(result.reference.provenance.path), folder / f"strain_{name}.laz"
     return io.write_result_cloud(source, target, values, colour=rgb, no_data=options.no_data)
@@ -53,6 +55,7 @@ def recolour(
     attribute: str,
     *,
     limits: Limits | None = None,
+    colour_map: str | None = None,
     only_significant: bool = False,
     ply: bool = True,
     out: str | os.PathLike[str] | None = None,
@@ -67,6 +70,8 @@ def recolour(
         Name of the attribute.
     limits : float or (float, float), optional
         Ends of the colour scale in stored units, see `outputs.colour.choose_scale`.
+    colour_map : str, optional
+        Table of colours, see `outputs.colour_maps`.
     only_significant : bool
         Grey out places without a change beyond the false-discovery control.
     ply : bool
@@ -94,7 +99,7 @@ def recolour(
     epoch, shown = io.read_result_cloud(source)
     if attribute not in shown:
         raise _not_in(source, attribute, list(shown))
-    scale = choose_scale(wanted, shown[attribute], limits=limits)
+    scale = choose_scale(wanted, shown[attribute], limits=limits, colour_map=colour_map)
     significant = significant_or_all(shown, only_significant)
     notes = notes_beside(source, attribute)
     values = spread(epoch, shown)

@@ -32,7 +32,7 @@ def write_colour_key(result: Result, folder: Path, options: OutputOptions) -> Pa
     """Write `strain_<attribute>.png`, the key to the colours of the cloud of that name."""
     name = options.colour_by
     values = result.points[name]
-    scale = choose_scale(attribute_of(name), values, limits=options.colour_limits)
+    scale = choose_scale(attribute_of(name), values, limits=options.colour_limits, colour_map=options.colour_map)
     notes = KeyNotes.of(result, name)
     significant = significant_or_all(result.points, options.only_significant)
     return write_key(scale, values, folder / f"strain_{name}.png", notes=notes, significant=significant)

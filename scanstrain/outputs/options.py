@@ -26,6 +26,8 @@ class OutputOptions:
         Write `report.html`.
     ply : bool
         Write the coloured cloud as binary PLY too.
+    colour_map : str, optional
+        Table of colours for `colour_by`, see `outputs.colour_maps`.
     """
 
     colour_by: str = "disp_n"
@@ -34,3 +36,4 @@ class OutputOptions:
     only_significant: bool = False
     report: bool = True
     ply: bool = True
+    colour_map: str | None = None

@@ -23,7 +23,9 @@ def write_ply_cloud(result: Result, folder: Path, options: OutputOptions) -> Pat
     if not options.ply:
         return None
     name = options.colour_by
-    scale = choose_scale(attribute_of(name), result.points[name], limits=options.colour_limits)
+    scale = choose_scale(
+        attribute_of(name), result.points[name], limits=options.colour_limits, colour_map=options.colour_map
+    )
     return write_coloured_ply(
         folder / f"strain_{name}.ply", result.reference, result.points, scale,
         only_significant=options.only_significant, no_data=options.no_data,

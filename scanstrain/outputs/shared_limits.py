@@ -58,12 +58,13 @@ def harmonise(folders: Sequence[Path], options: OutputOptions) -> list[Path]:
     for cloud in filter(None, (_cloud_of(folder, name) for folder in folders)):
         shown = _values(cloud, options)
         if shown is not None:
-            own[cloud] = choose_scale(attribute, shown)
+            own[cloud] = choose_scale(attribute, shown, colour_map=options.colour_map)
             finite = shown[np.isfinite(shown)]
             values.append(finite[:: max(1, -(-len(finite) // MOST_LOOKED_AT))])
     if len(own) < 2:
         return []
-    shared = replace(choose_scale(attribute, np.concatenate(values)), shared=len(own))
+    shared = choose_scale(attribute, np.concatenate(values), colour_map=options.colour_map)
+    shared = replace(shared, shared=len(own))
     return [
         cloud
         for cloud, before in own.items()

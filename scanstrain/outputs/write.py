@@ -52,6 +52,7 @@ def write_result(
     only_significant: bool = False,
     report: bool = True,
     ply: bool = True,
+    colour_map: str | None = None,
 ) -> list[Path]:
     """Write a result into a folder.
 
@@ -74,6 +75,8 @@ def write_result(
         Write `report.html`.
     ply : bool
         Write the coloured cloud as binary PLY too.
+    colour_map : str, optional
+        Table of colours, see `outputs.colour_maps`.
 
     Returns
     -------
@@ -88,9 +91,9 @@ def write_result(
         The folder is a file, holds an input in the place of an output, cannot be written to, or the disk is full.
         What stood there before stands there still.
     """
-    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report, ply)
+    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report, ply, colour_map)
     # limits that do not fit are refused before anything is written
-    choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits)
+    choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits, colour_map=colour_map)
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]
     target = check_folder(folder, inputs=[source for source in sources if source])
     with finished_only(target, retire=is_ours) as work:

@@ -44,6 +44,7 @@ def draw_map(
     *,
     unrolled: Unrolled | Layout | None = None,
     limits: Limits | None = None,
+    colour_map: str | None = None,
     only_significant: bool = True,
 ) -> Picture | None:
     """Draw a map of one attribute.
@@ -57,6 +58,8 @@ def draw_map(
         The gauges in coordinates of the structure, see `lay_out`.
     limits : float or (float, float), optional
         Ends of the colour scale in stored units, as for the coloured cloud, whose default this shares.
+    colour_map : str, optional
+        Table of colours, as for the coloured cloud.
     only_significant : bool
         Grey out gauges without a change beyond the false-discovery control, and those that changed in another
         component while this one lies within its own 95 % limit.
@@ -72,7 +75,7 @@ def draw_map(
         An unknown attribute, or limits that do not fit it.
     """
     attribute = attribute_of(name)
-    scale = choose_scale(attribute, result.points[name], limits=limits)
+    scale = choose_scale(attribute, result.points[name], limits=limits, colour_map=colour_map)
     values = numbers_of(result, name)
     if scale.form == "steps" or not np.isfinite(values).any():
         return None
