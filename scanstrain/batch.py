@@ -127,7 +127,7 @@ def run_batch(
         missing = [job.points[0] for job in jobs if not (job.folder / "summary.json").exists()]
         check_space(config.output.folder, missing)
         outcomes = _run_all(jobs, config.output.folder, workers, scheduler, progress, finished)
-        _write_overview(outcomes, config.output.folder)
+        _write_overview(outcomes, config)
     return outcomes
 
 
@@ -204,13 +204,34 @@ def _on_cluster(jobs: Sequence[Job], scheduler: str, folder: Path) -> Iterator[t
                 each.rmdir()
 
 
-def _write_overview(outcomes: Sequence[Outcome], folder: Path) -> None:
+def _write_overview(outcomes: Sequence[Outcome], config: BatchConfig) -> None:
     """Write `index.html`, unless nothing is new."""
     from scanstrain.outputs.report import write_index
 
+    folder = config.output.folder
     old = all(outcome.up_to_date for outcome in outcomes) and (folder / "index.html").is_file()
     if any(outcome.done for outcome in outcomes) and not old:
+        _share_limits(config)
         write_index(outcomes, folder)
+
+
+def _share_limits(config: BatchConfig) -> None:
+    """Colour all comparisons that the batch file names by one scale, those of earlier runs included."""
+    from scanstrain.outputs.manifest import renew_manifest
+    from scanstrain.outputs.options import OutputOptions
+    from scanstrain.outputs.shared_limits import harmonise
+
+    out = config.output
+    chosen = OutputOptions(
+        out.colour_by,
+        out.colour_limits,
+        out.no_data_number,
+        out.only_significant,
+        ply=out.ply,
+        colour_map=out.colour_map,
+    )
+    for cloud in harmonise([job.folder for job in plan_jobs(config, ())], chosen):
+        renew_manifest(cloud.parent)
 
 
 def outcomes_data(outcomes: Sequence[Outcome]) -> dict[str, Any]:

@@ -220,8 +220,10 @@ def prove(terminal: Terminal, /, config: Path, **choice: Any) -> None:
 @click.argument("cloud", type=PATH)
 @click.option("--by", "attribute", required=True, metavar="ATTRIBUTE", help="Attribute that gives the colour.")
 @click.option("--limits", type=float, nargs=2, metavar="LOW HIGH", help="Ends of the scale, in the unit of the file.")
+@click.option("--map", "colour_map", metavar="NAME", help="Table of colours, by its name in cmcrameri.")
 @click.option("--only-significant", is_flag=True, help="Colour only what survived false-discovery control.")
-@click.option("--out", type=PATH, help="Folder for the two files; by default the one of CLOUD.")
+@click.option("--ply/--no-ply", default=True, show_default=True, help="Write the cloud as binary PLY too.")
+@click.option("--out", type=PATH, help="Folder for the files; by default the one of CLOUD.")
 @json_option
 @loudness
 @click.pass_obj
@@ -230,7 +232,9 @@ def colour(
     cloud: Path,
     attribute: str,
     limits: tuple[float, float] | None,
+    colour_map: str | None,
     only_significant: bool,
+    ply: bool,
     out: Path | None,
 ) -> None:
     """Colour the result CLOUD by another attribute.
@@ -239,7 +243,9 @@ def colour(
     """
     from scanstrain.outputs import recolour
 
-    written = recolour(cloud, attribute, limits=limits, only_significant=only_significant, out=out)
+    written = recolour(
+        cloud, attribute, limits=limits, colour_map=colour_map, only_significant=only_significant, ply=ply, out=out
+    )
     terminal.show_files(written)
 
 

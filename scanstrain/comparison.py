@@ -181,6 +181,8 @@ def _compute(
                 no_data=options.no_data_number,
                 only_significant=options.only_significant,
                 report=options.report,
+                ply=options.ply,
+                colour_map=options.colour_map,
                 request=request,
             )
         finally:

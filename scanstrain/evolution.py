@@ -64,6 +64,8 @@ def follow_batch(config: BatchConfig, outcomes: Sequence[Outcome], *, write: boo
         before = f"{site.name}/" if site.name else ""
         own = [replace(each, name=each.name.removeprefix(before)) for each in outcomes if each.name.startswith(before)]
         found[site.name] = follow_epochs(site.batch, own, write=write)
+        if write and not all(each.up_to_date for each in own):
+            show_evolution(site.batch, own, found[site.name])
     return found
 
 
@@ -107,6 +109,34 @@ def follow_epochs(config: BatchConfig, outcomes: Sequence[Outcome], *, write: bo
     except ScanstrainError as error:
         return Evolution(notes=(*notes, f"Series: {str(error).removeprefix('series: ')}"))
     return Evolution(rows, tuple(notes), file)
+
+
+def show_evolution(config: BatchConfig, outcomes: Sequence[Outcome], evolution: Evolution) -> None:
+    """Put curves and rates into the overview of the batch and into the reports; nothing without a series.
+
+    Raises
+    ------
+    OutputError
+        A page could not be written; it then stands as it did before.
+    """
+    from scanstrain.outputs.manifest import renew_manifest
+    from scanstrain.outputs.report import Compared, show_series
+
+    epochs = config.followed()
+    if not evolution.rows or epochs[0].date is None:
+        return
+    first, found = epochs[0].label, {outcome.name: outcome for outcome in outcomes}
+    later = [
+        Compared(entry.label, entry.date, outcome.folder, outcome.summary)
+        for entry in epochs[1:]
+        if (outcome := found.get(f"{first}_to_{entry.label}")) and outcome.summary is not None and entry.date
+    ]
+    show_series(
+        outcomes, config.output.folder, evolution.rows, first=(first, epochs[0].date), later=later,
+        structure=config.strain.structure,
+    )  # fmt: skip
+    for each in later:
+        renew_manifest(each.folder)
 
 
 def evolution_data(evolution: Evolution) -> dict[str, Any]:
@@ -230,8 +260,9 @@ def _gather_sections(seen: Seen, stations: dict[str, float], number: int, summar
     for row in (summary.get("sections") or {}).get("rows", ()):
         place = _place(row)
         stations[place] = float(row["chainage"])
-        for quantity in OF_SECTIONS:
-            _gather(seen, (place, quantity, units[quantity][0]), number, row)
+        chords = (name for name in row if name.startswith("chord_") and name.endswith("_change"))
+        for quantity in (*OF_SECTIONS, *chords):
+            _gather(seen, (place, quantity, units[quantity][0] if quantity in units else "m"), number, row)
 
 
 def _place(section: Mapping[str, Any]) -> str:

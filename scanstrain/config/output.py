@@ -41,6 +41,12 @@ class OutputOptions(Options):
         "file [m, rad, 1 or 1/m]. No default: taken from the data, symmetric for signed "
         "quantities.",
     )
+    colour_map: str | None = Field(
+        default=None,
+        examples=["roma"],
+        description="Table of colours for that attribute, by its name in the cmcrameri package; _r at its end turns it "
+        "round. No default: one that suits the kind of quantity, vik for signed ones.",
+    )
     no_data: Annotated[Finite | Literal["nan"], BeforeValidator(_named_nan)] = Field(
         default="nan",
         description="Number written where the data support no value, in the unit of the attribute [m, rad,"
@@ -57,6 +63,12 @@ class OutputOptions(Options):
         default=True,
         description="Write report.html. Default true: it is what most people read; it takes some ten seconds and a few "
         "megabytes a comparison.",
+    )
+
+    ply: bool = Field(
+        default=True,
+        description="Write the coloured cloud as binary PLY too. Default true, because many viewers know no LAZ; it "
+        "takes some 40 bytes a point.",
     )
 
     keep_stages: bool = Field(
@@ -84,6 +96,18 @@ class OutputOptions(Options):
 
             try:
                 choose_scale(BY_NAME[info.data["colour_by"]], np.empty(0), limits=value)
+            except OptionError as error:
+                refuse_all([Fault((), str(error).partition(": ")[2].rstrip("."))])
+        return value
+
+    @field_validator("colour_map")
+    @classmethod
+    def _suit_the_attribute(cls, value: str | None, info: ValidationInfo) -> str | None:
+        if value is not None and "colour_by" in info.data:
+            from scanstrain.outputs.colour import choose_scale
+
+            try:
+                choose_scale(BY_NAME[info.data["colour_by"]], np.empty(0), colour_map=value)
             except OptionError as error:
                 refuse_all([Fault((), str(error).partition(": ")[2].rstrip("."))])
         return value

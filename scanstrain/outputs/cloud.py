@@ -17,14 +17,11 @@ from scanstrain.neighbourhood.result import Status
 from scanstrain.outputs.colour import Limits, choose_scale, colours
 from scanstrain.outputs.folder import check_folder, finished_only, is_ours
 from scanstrain.outputs.key import write_key
-from scanstrain.outputs.notes import notes_beside, significant_or_all
+from scanstrain.outputs.notes import beside, notes_beside, significant_or_all
 from scanstrain.outputs.options import OutputOptions
-from scanstrain.outputs.words import STANDARD_ERROR, attribute_of
-from scanstrain.registry import unknown_name
+from scanstrain.outputs.ply import write_coloured_ply
+from scanstrain.outputs.words import attribute_of
 from scanstrain.result import Result
-
-_COMPANIONS = ("discovery", "observed", "status")
-"""Written beside the coloured attribute, so that a picked point explains itself."""
 
 
 def write_strain_cloud(result: Result, folder: Path, options: OutputOptions) -> Path:
@@ -32,7 +29,7 @@ def write_strain_cloud(result: Result, folder: Path, options: OutputOptions) -> 
     from scanstrain import io
 
     source = Path(result.reference.provenance.path)
-    values = _of_file(result.reference, result.points)
+    values = spread(result.reference, result.points)
     return io.write_result_cloud(source, folder / "strain.laz", values, no_data=options.no_data)
 
 
@@ -44,9 +41,10 @@ def write_coloured_cloud(result: Result, folder: Path, options: OutputOptions) -
     from scanstrain import io
 
     name = options.colour_by
-    wanted = {name, STANDARD_ERROR.get(name), *_COMPANIONS}
-    values = _of_file(result.reference, {each: row for each, row in result.points.items() if each in wanted})
-    scale = choose_scale(attribute_of(name), result.points[name], limits=options.colour_limits)
+    values = spread(result.reference, beside(name, result.points))
+    scale = choose_scale(
+        attribute_of(name), result.points[name], limits=options.colour_limits, colour_map=options.colour_map
+    )
     rgb = colours(values[name], scale, significant=significant_or_all(values, options.only_significant))
     source, target = Path(result.reference.provenance.path), folder / f"strain_{name}.laz"
     return io.write_result_cloud(source, target, values, colour=rgb, no_data=options.no_data)
@@ -57,7 +55,9 @@ def recolour(
     attribute: str,
     *,
     limits: Limits | None = None,
+    colour_map: str | None = None,
     only_significant: bool = False,
+    ply: bool = True,
     out: str | os.PathLike[str] | None = None,
 ) -> list[Path]:
     """Write a copy of a result cloud with another attribute in colour, and its key.
@@ -70,15 +70,19 @@ def recolour(
         Name of the attribute.
     limits : float or (float, float), optional
         Ends of the colour scale in stored units, see `outputs.colour.choose_scale`.
+    colour_map : str, optional
+        Table of colours, see `outputs.colour_maps`.
     only_significant : bool
         Grey out places without a change beyond the false-discovery control.
+    ply : bool
+        Write the cloud as binary PLY too.
     out : path, optional
-        Folder for the two files, by default the one of the cloud.
+        Folder for the files, by default the one of the cloud.
 
     Returns
     -------
     list of Path
-        `strain_<attribute>.laz` and `strain_<attribute>.png`, after the name of the cloud.
+        `strain_<attribute>.laz`, `.ply` and `.png`, after the name of the cloud.
 
     Raises
     ------
@@ -94,20 +98,33 @@ def recolour(
     stem = _free_stem(source, folder, wanted)
     epoch, shown = io.read_result_cloud(source)
     if attribute not in shown:
-        raise OptionError(unknown_name(f"attribute in {source.name}", attribute, list(shown)))
-    scale = choose_scale(wanted, shown[attribute], limits=limits)
+        raise _not_in(source, attribute, list(shown))
+    scale = choose_scale(wanted, shown[attribute], limits=limits, colour_map=colour_map)
     significant = significant_or_all(shown, only_significant)
     notes = notes_beside(source, attribute)
-    values = _of_file(epoch, shown)
+    values = spread(epoch, shown)
     rgb = colours(values[attribute], scale, significant=significant_or_all(values, only_significant))
     with finished_only(folder) as work:
         # without values the cloud keeps all it has, and only its colours change
         written = io.write_result_cloud(source, work / f"{stem}.laz", {}, colour=rgb)
-        write_key(scale, shown[attribute], work / f"{stem}.png", notes=notes, significant=significant)
-    return [folder / written.name, folder / f"{stem}.png"]
+        made = [written]
+        if ply:
+            target = work / f"{stem}.ply"
+            made.append(write_coloured_ply(target, epoch, shown, scale, only_significant=only_significant))
+        made.append(write_key(scale, shown[attribute], work / f"{stem}.png", notes=notes, significant=significant))
+    return [folder / path.name for path in made]
 
 
-def _of_file(epoch: Epoch, values: Mapping[str, NDArray[np.generic]]) -> dict[str, NDArray[np.generic]]:
+def _not_in(source: Path, attribute: str, held: list[str]) -> OptionError:
+    """Say that a cloud lacks an attribute that there is: it was coloured by another one, or is of another version."""
+    beside = source.with_name("strain.laz")
+    remedy = "compare again if it was made by another version"
+    if beside != source and beside.is_file():
+        remedy = "colour strain.laz in the same folder"
+    return OptionError(explain(source.name, f"a cloud with the attribute {attribute}", ", ".join(held), remedy))
+
+
+def spread(epoch: Epoch, values: Mapping[str, NDArray[np.generic]]) -> dict[str, NDArray[np.generic]]:
     """Spread values of the epoch over all points of its file: what was dropped at reading has no data."""
     from scanstrain import io
 

@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 from scanstrain.attributes import Attribute
 from scanstrain.errors import OptionError, explain
 from scanstrain.neighbourhood.result import Status
+from scanstrain.outputs.colour_maps import map_for, no_map
 from scanstrain.outputs.words import status_word
 
 Limits = float | tuple[float, float]
@@ -35,15 +36,6 @@ QUANTILE = 0.99
 
 SMALLEST_P = 1e-4
 """Lower end of the scale of p-values: smaller ones call for the same attention."""
-
-_MAPS = {
-    "signed": "vik",
-    "magnitude": "lajolla_r",
-    "error": "imola",
-    "probability": "acton",
-    "code": "batlow_r",
-    "place": "batlow",
-}
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,6 +56,8 @@ class Scale:
         Meaning of the steps.
     given : bool
         Whether the limits came from the user.
+    shared : int
+        How many comparisons of a batch share limits that nobody gave; 0 for limits of one comparison alone.
     """
 
     attribute: Attribute
@@ -73,6 +67,7 @@ class Scale:
     form: Literal["linear", "log", "steps"] = "linear"
     labels: tuple[str, ...] = ()
     given: bool = False
+    shared: int = 0
 
     @property
     def masked(self) -> bool:
@@ -93,7 +88,13 @@ class Scale:
         return np.asarray(np.minimum(rows, len(self.table) - 1), dtype=np.intp)
 
 
-def choose_scale(attribute: Attribute, values: NDArray[np.generic], *, limits: Limits | None = None) -> Scale:
+def choose_scale(
+    attribute: Attribute,
+    values: NDArray[np.generic],
+    *,
+    limits: Limits | None = None,
+    colour_map: str | None = None,
+) -> Scale:
     """Choose table and limits for an attribute.
 
     Parameters
@@ -106,6 +107,8 @@ def choose_scale(attribute: Attribute, values: NDArray[np.generic], *, limits: L
         Ends of the scale in stored units. One number means (-x, x) for signed attributes and (0, x) for others.
         By default the 99 % quantile of the absolute values, rounded up to 1, 2 or 5 times a power of ten, so that
         keys are easy to read.
+    colour_map : str, optional
+        Table of colours, see `outputs.colour_maps`; by default one that suits the kind of the attribute.
 
     Returns
     -------
@@ -114,20 +117,23 @@ def choose_scale(attribute: Attribute, values: NDArray[np.generic], *, limits: L
     Raises
     ------
     OptionError
-        Limits that are not finite, not in order, not symmetric for a signed attribute, or given for a code.
+        Limits that are not finite, not in order, not symmetric for a signed attribute, or given for a code; a table
+        of colours that does not exist, does not suit the attribute, or is given for a code.
     """
     steps = _steps(attribute)
     if steps is not None:
         if limits is not None:
             raise _bad_limits(attribute, "no limits, because it is a code", limits, "leave the limits out")
+        if colour_map is not None:
+            raise no_map(attribute, colour_map)
         return Scale(attribute, 0.0, float(len(steps)), _step_table(attribute, len(steps)), "steps", steps)
-    table = colour_table(_MAPS[attribute.kind])
+    table = colour_table(map_for(attribute, colour_map))
     if attribute.kind == "probability":
         low, high = (SMALLEST_P, 1.0) if limits is None else _checked(attribute, limits)
         return Scale(attribute, low, high, table, "log", given=limits is not None)
     if attribute.kind == "place":
         low, high = _span(attribute, values) if limits is None else _checked(attribute, limits)
-        return Scale(attribute, low, high, _place_table(attribute), given=limits is not None)
+        return Scale(attribute, low, high, table, given=limits is not None)
     if limits is None:
         end = _robust_end(attribute, values)
         return Scale(attribute, -end if attribute.kind == "signed" else 0.0, end, table)
@@ -205,11 +211,6 @@ def _span(attribute: Attribute, values: NDArray[np.generic]) -> tuple[float, flo
     finite = np.asarray(values, dtype=np.float64)
     finite = finite[np.isfinite(finite)]
     return (0.0, 1.0) if not len(finite) or not np.ptp(finite) > 0 else (float(finite.min()), float(finite.max()))
-
-
-def _place_table(attribute: Attribute) -> RGB8:
-    """Angles go round, so their colours do as well."""
-    return colour_table("romaO" if attribute.unit == "rad" else _MAPS["place"])
 
 
 def _checked(attribute: Attribute, limits: Limits) -> tuple[float, float]:

@@ -33,7 +33,7 @@ def is_ours(name: str) -> bool:
     (True, False)
     """
     path = Path(name)
-    coloured = path.suffix in (".laz", ".las", ".png") and path.stem.startswith("strain_")
+    coloured = path.suffix in (".laz", ".las", ".ply", ".png") and path.stem.startswith("strain_")
     return name in FIXED_NAMES or (coloured and path.stem.removeprefix("strain_") in BY_NAME)
 
 

@@ -32,7 +32,7 @@ def write_colour_key(result: Result, folder: Path, options: OutputOptions) -> Pa
     """Write `strain_<attribute>.png`, the key to the colours of the cloud of that name."""
     name = options.colour_by
     values = result.points[name]
-    scale = choose_scale(attribute_of(name), values, limits=options.colour_limits)
+    scale = choose_scale(attribute_of(name), values, limits=options.colour_limits, colour_map=options.colour_map)
     notes = KeyNotes.of(result, name)
     significant = significant_or_all(result.points, options.only_significant)
     return write_key(scale, values, folder / f"strain_{name}.png", notes=notes, significant=significant)
@@ -221,11 +221,19 @@ def _facts(figure: Any, notes: KeyNotes, scale: Scale, height: float) -> None:
         first.append("a 95 % interval is ± 1.96 of these" if error else "confidence level 95 %")
         second.append("columns: how many points hold a value, as square root")
     if scale.form == "linear":
-        second.append("limits as given" if scale.given else "limits: 99 % of the values, rounded up")
+        second.append(_rule(scale))
     lines = [line for line in (second, first, [shortened(notes.epochs)]) if any(line)]
     _box(figure, LEFT, 0.14 + 0.19 * len(lines), (RIGHT - LEFT) * WIDTH, 0.006, height, FAINT)
     for text, middle in zip(lines, (0.17, 0.36, 0.55), strict=False):
         figure.text(LEFT, middle / height, "   ·   ".join(text), size=9, color=FAINT, va="center")
+
+
+def _rule(scale: Scale) -> str:
+    """Say where the limits come from."""
+    if scale.given:
+        return "limits as given"
+    whose = f"of all {scale.shared} comparisons" if scale.shared else "of the values"
+    return f"limits: 99 % {whose}, rounded up"
 
 
 def shortened(text: str, most: int = 100) -> str:

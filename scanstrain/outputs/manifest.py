@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from scanstrain.errors import InputFileError, explain
+from scanstrain.io.atomic import replacing
 from scanstrain.io.files import sha256
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.strict import plain, write_json
@@ -53,11 +54,36 @@ def write_manifest(result: Result, folder: Path, options: OutputOptions) -> Path
                        for name, epoch in epochs.items()},
             "options": result.config.model_dump(mode="json"),
             "software": identity(),
-            "outputs": {path.name: {"bytes": path.stat().st_size, "sha256": sha256(path)}
-                        for path in sorted(folder.iterdir()) if path.is_file() and path.name != NAME},
+            "outputs": _facts(folder),
         },
         folder / NAME,
     )  # fmt: skip
+
+
+def renew_manifest(folder: Path) -> None:
+    """Bring the hashes in `manifest.json` up to files that were made anew from the same result, such as colours.
+
+    A folder without a manifest that can be read is left alone: the next run makes its result anew.
+
+    Raises
+    ------
+    OutputError
+        The folder cannot be written to.
+    """
+    path = folder / NAME
+    try:
+        known = json.loads(path.read_text(encoding="utf-8"))
+        named = set(known["outputs"])
+    except (OSError, ValueError, KeyError, TypeError):
+        return
+    known["outputs"] = {name: facts for name, facts in _facts(folder).items() if name in named}
+    with replacing(path) as beside:
+        write_json(known, beside)
+
+
+def _facts(folder: Path) -> dict[str, dict[str, Any]]:
+    files = [path for path in sorted(folder.iterdir()) if path.is_file() and path.name != NAME]
+    return {path.name: {"bytes": path.stat().st_size, "sha256": sha256(path)} for path in files}
 
 
 def standing(folder: Path, request: Mapping[str, Any]) -> tuple[Standing, str]:

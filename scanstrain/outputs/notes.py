@@ -12,8 +12,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanstrain.errors import OptionError, explain
-from scanstrain.outputs.words import limit_key
+from scanstrain.outputs.words import STANDARD_ERROR, limit_key
 from scanstrain.result import Result
+
+_COMPANIONS = ("discovery", "observed", "status")
+"""Written beside the coloured attribute, so that a picked point explains itself."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,6 +62,12 @@ def notes_beside(cloud: Path, name: str) -> KeyNotes:
         )
     except (OSError, ValueError, KeyError, TypeError):
         return KeyNotes()
+
+
+def beside(name: str, values: Mapping[str, NDArray[np.generic]]) -> dict[str, NDArray[np.generic]]:
+    """Pick what a coloured cloud holds: the attribute itself, its standard error and the codes."""
+    wanted = {name, STANDARD_ERROR.get(name), *_COMPANIONS}
+    return {each: row for each, row in values.items() if each in wanted}
 
 
 def significant_or_all(values: Mapping[str, NDArray[np.generic]], wanted: bool) -> NDArray[np.bool_] | None:

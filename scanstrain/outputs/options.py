@@ -26,6 +26,10 @@ class OutputOptions:
         Grey out places without a change beyond the false-discovery control.
     report : bool
         Write `report.html`.
+    ply : bool
+        Write the coloured cloud as binary PLY too.
+    colour_map : str, optional
+        Table of colours for `colour_by`, see `outputs.colour_maps`.
     request : mapping, optional
         What was asked for, as plain JSON; goes into the manifest, by which a second run knows it again.
     """
@@ -35,4 +39,6 @@ class OutputOptions:
     no_data: float | None = None
     only_significant: bool = False
     report: bool = True
+    ply: bool = True
+    colour_map: str | None = None
     request: Mapping[str, Any] | None = None

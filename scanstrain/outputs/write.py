@@ -16,6 +16,7 @@ from scanstrain.outputs.joint_table import write_joint_table
 from scanstrain.outputs.key import write_colour_key
 from scanstrain.outputs.manifest import write_manifest
 from scanstrain.outputs.options import OutputOptions
+from scanstrain.outputs.ply import write_ply_cloud
 from scanstrain.outputs.registered import write_registered
 from scanstrain.outputs.report import write_report
 from scanstrain.outputs.section_table import write_section_table
@@ -39,6 +40,7 @@ LAST = "manifest"
 OUTPUTS: Registry[Writer] = Registry("output")
 OUTPUTS.add("strain cloud", write_strain_cloud)
 OUTPUTS.add("coloured cloud", write_coloured_cloud)
+OUTPUTS.add("coloured PLY", write_ply_cloud)
 OUTPUTS.add("colour key", write_colour_key)
 OUTPUTS.add("gauge table", write_gauge_table)
 OUTPUTS.add("section table", write_section_table)
@@ -60,6 +62,8 @@ def write_result(
     no_data: float | None = None,
     only_significant: bool = False,
     report: bool = True,
+    ply: bool = True,
+    colour_map: str | None = None,
     request: Mapping[str, Any] | None = None,
 ) -> list[Path]:
     """Write a result into a folder.
@@ -81,6 +85,10 @@ def write_result(
         Grey out places without a change beyond the false-discovery control.
     report : bool
         Write `report.html`.
+    ply : bool
+        Write the coloured cloud as binary PLY too.
+    colour_map : str, optional
+        Table of colours, see `outputs.colour_maps`.
     request : mapping, optional
         What was asked for, as plain JSON; goes into `manifest.json`, by which a second run knows it again.
 
@@ -97,9 +105,9 @@ def write_result(
         The folder is a file, holds an input in the place of an output, cannot be written to, or the disk is full.
         What stood there before stands there still.
     """
-    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report, request)
+    options = OutputOptions(colour_by, colour_limits, no_data, only_significant, report, ply, colour_map, request)
     # limits that do not fit are refused before anything is written
-    choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits)
+    choose_scale(attribute_of(colour_by), result.points[colour_by][:0], limits=colour_limits, colour_map=colour_map)
     sources = [epoch.provenance.path for epoch in (result.reference, result.current)]
     target = check_folder(folder, inputs=[source for source in sources if source])
     with finished_only(target, retire=is_ours) as work:

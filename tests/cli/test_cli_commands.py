@@ -156,10 +156,16 @@ def test_colour_passes_its_options_on(call, monkeypatch, tmp_path):
 
     monkeypatch.setattr("scanstrain.outputs.recolour", recolour)
     said = call("colour", "strain.laz", "--by", "tilt", "--limits", "0", "0.001", "--only-significant")
-    assert asked == [("strain.laz", "tilt", {"limits": (0.0, 0.001), "only_significant": True, "out": None})]
+    assert asked == [
+        (
+            "strain.laz",
+            "tilt",
+            {"limits": (0.0, 0.001), "colour_map": None, "only_significant": True, "ply": True, "out": None},
+        )
+    ]
     assert said.out.splitlines() == [str(tmp_path / "strain_tilt.laz"), str(tmp_path / "strain_tilt.png")]
-    call("colour", "strain.laz", "--by", "tilt")
-    assert asked[1][2]["limits"] is None
+    call("colour", "strain.laz", "--by", "tilt", "--no-ply")
+    assert (asked[1][2]["limits"], asked[1][2]["ply"]) == (None, False)
 
 
 def test_sample_writes_scans_and_batch_files_that_run_on_them(call, monkeypatch, tmp_path):

@@ -76,7 +76,7 @@ def test_coloured_cloud_shows_dropped_points_as_not_observable(result, tmp_path)
 
 def test_recolour_changes_nothing_but_the_colours(result, tmp_path):
     write_result(result, tmp_path / "out", no_data=-9999.0)
-    cloud, key = recolour(tmp_path / "out" / "strain.laz", "tilt", only_significant=True, out=tmp_path / "maps")
+    cloud, _, key = recolour(tmp_path / "out" / "strain.laz", "tilt", only_significant=True, out=tmp_path / "maps")
     assert (cloud.name, key.name) == ("strain_tilt.laz", "strain_tilt.png")
     (before, _), (after, rgb) = read(tmp_path / "out" / "strain.laz"), read(cloud)
     assert (after.X == before.X).all()
@@ -90,6 +90,54 @@ def test_recolour_changes_nothing_but_the_colours(result, tmp_path):
 
 def test_both_ways_to_a_coloured_cloud_give_the_same_colours(result, tmp_path):
     write_result(result, tmp_path / "out", colour_by="strain_1")
-    cloud, key = recolour(tmp_path / "out" / "strain.laz", "strain_1", out=tmp_path / "maps")
+    cloud, ply, key = recolour(tmp_path / "out" / "strain.laz", "strain_1", out=tmp_path / "maps")
     assert (read(cloud)[1] == read(tmp_path / "out" / "strain_strain_1.laz")[1]).all()
     assert key.read_bytes() == (tmp_path / "out" / "strain_strain_1.png").read_bytes()
+    assert ply.read_bytes() == (tmp_path / "out" / "strain_strain_1.ply").read_bytes()
+
+
+def wanted_colours(values, end):
+    """Colours of a signed attribute from the published table, by hand: (n, 3), 0 to 255."""
+    from cmcrameri import cm
+
+    rgb = np.round(255 * cm.vik(np.clip((values + end) / (2 * end), 0, 1))[:, :3])
+    rgb[np.isnan(values)] = 88
+    return rgb
+
+
+def test_colours_of_both_clouds_read_back_in_other_readers(result, tmp_path):
+    """LAZ through laspy in 16 bits; PLY through plyfile and open3d in 8 bits."""
+    import open3d
+    from plyfile import PlyData
+
+    write_result(result, tmp_path / "out", colour_limits=5e-3)
+    disp = np.asarray(result.points["disp_n"], float)
+    wanted = wanted_colours(disp, 5e-3)
+    _, rgb = read(tmp_path / "out" / "strain_disp_n.laz")
+    # one step of the table either way: the table has 256 rows, and values on a border may fall to either side
+    assert rgb.dtype == np.uint16
+    assert (rgb > 255).any()
+    assert np.abs(np.delete(rgb, WITHHELD, axis=0) / 257 - wanted).max() <= 6
+    vertex = PlyData.read(tmp_path / "out" / "strain_disp_n.ply")["vertex"]
+    seen = np.column_stack([vertex[band] for band in ("red", "green", "blue")])
+    assert seen.dtype == np.uint8
+    np.testing.assert_array_equal(seen, np.delete(rgb, WITHHELD, axis=0) // 257)
+    np.testing.assert_array_equal(vertex["disp_n"], result.points["disp_n"])
+    np.testing.assert_array_equal(vertex["status"], result.points["status"])
+    cloud = open3d.io.read_point_cloud(str(tmp_path / "out" / "strain_disp_n.ply"))
+    np.testing.assert_array_equal(np.round(255 * np.asarray(cloud.colors)), seen)
+    # survey coordinates to a tenth of a millimetre, as in the scan
+    places = result.reference.points + result.reference.origin
+    np.testing.assert_allclose(np.asarray(cloud.points), places, rtol=0, atol=1e-8)
+
+
+def test_ply_is_left_out_on_request_and_takes_the_no_data_number(result, tmp_path):
+    from plyfile import PlyData
+
+    write_result(result, tmp_path / "out", ply=False, report=False)
+    assert not list((tmp_path / "out").glob("*.ply"))
+    write_result(result, tmp_path / "out", no_data=-9999.0, report=False)
+    ply = PlyData.read(tmp_path / "out" / "strain_disp_n.ply")
+    empty = np.isnan(result.points["disp_n"])
+    assert ((ply["vertex"]["disp_n"] == -9999.0) == empty).all()
+    assert any("microstrain" not in each and "disp_n from" in each for each in ply.comments)

@@ -51,7 +51,7 @@ def folder(tmp_path_factory):
 def test_folder_holds_the_published_files_and_nothing_else(folder):
     assert sorted(path.name for path in folder.iterdir()) == [
         "gauges.csv", "manifest.json", "registered.json", "report.html",
-        "strain.laz", "strain_disp_n.laz", "strain_disp_n.png", "summary.json",
+        "strain.laz", "strain_disp_n.laz", "strain_disp_n.ply", "strain_disp_n.png", "summary.json",
     ]  # fmt: skip
     assert len(OUTPUTS) == 12
     assert not list(folder.parent.glob(".*"))

@@ -79,7 +79,7 @@ def test_status_codes_and_observed_bits_are_those_of_the_program():
 
 def test_every_file_of_a_result_is_named():
     rows = [row.split("`")[1] for row in README.split("\n") if row.startswith("| `")]
-    assert {"strain_<attribute>.laz", "strain_<attribute>.png"} <= set(rows)
+    assert {"strain_<attribute>.laz", "strain_<attribute>.ply", "strain_<attribute>.png"} <= set(rows)
     # strain.las belongs to folders of other versions, which are tidied all the same
     assert FIXED_NAMES - {"strain.las"} <= set(rows)
     assert len(OUTPUTS) == 12

@@ -1,6 +1,8 @@
 # SPDX-License-Identifier: MIT
 """Colours and their keys."""
 
+import re
+
 import numpy as np
 import pytest
 from cmcrameri import cm
@@ -8,6 +10,7 @@ from cmcrameri import cm
 from scanstrain.attributes import ATTRIBUTES, BY_NAME
 from scanstrain.errors import OptionError
 from scanstrain.outputs.colour import NOT_OBSERVABLE, NOT_SIGNIFICANT, choose_scale, colours, round_up
+from scanstrain.outputs.colour_maps import _ROUND, SUITED
 from scanstrain.outputs.key import write_key
 from scanstrain.outputs.notes import KeyNotes
 
@@ -97,6 +100,32 @@ def test_greys_are_told_from_every_colour_of_every_table(attribute):
     inner = scale.table[1:] if scale.form == "steps" else scale.table
     for grey in (NOT_OBSERVABLE, NOT_SIGNIFICANT):
         assert np.linalg.norm(inner.astype(float) - grey, axis=1).min() > 15
+
+
+@pytest.mark.parametrize("name", ["disp_n", "tilt", "disp_n_sd", "significance", "chainage", "clock"])
+def test_every_table_on_offer_is_told_from_the_greys(name):
+    attribute = BY_NAME[name]
+    turning = attribute.kind == "place" and attribute.unit == "rad"
+    for each in _ROUND if turning else SUITED[attribute.kind]:
+        table = choose_scale(attribute, np.ones(5, np.float32), colour_map=each).table.astype(float)
+        back = choose_scale(attribute, np.ones(5, np.float32), colour_map=f"{each}_r").table
+        assert np.abs(table - back[::-1]).max() <= 1, each
+        for grey in (NOT_OBSERVABLE, NOT_SIGNIFICANT):
+            assert np.linalg.norm(table - grey, axis=1).min() > 15, each
+
+
+@pytest.mark.parametrize(
+    ("name", "colour_map", "said"),
+    [
+        ("disp_n", "rome", "did you mean 'roma'"),
+        ("tilt", "vik", "colour map of tilt: required one of lajolla, "),
+        ("clock", "batlow", "required one of romaO"),
+        ("status", "batlow", "because it is a code"),
+    ],
+)
+def test_a_table_that_does_not_suit_is_refused(name, colour_map, said):
+    with pytest.raises(OptionError, match=re.escape(said)):
+        choose_scale(BY_NAME[name], np.ones(5, BY_NAME[name].numpy_dtype), colour_map=colour_map)
 
 
 def test_small_p_values_have_room_of_their_own():

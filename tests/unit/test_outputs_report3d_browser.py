@@ -45,6 +45,7 @@ def result():
     values["strain_1"] = np.where((z > 2.8) | (x > 4), np.nan, 3e-4 * bump).astype(np.float32)
     for name, sd in (("disp_n_sd", 1.5e-4), ("tilt_sd", 1e-4), ("strain_1_sd", 5e-5)):
         values[name] = np.full(n, sd, np.float32)
+    values["tilt_sd"][x > 5] = np.nan
     values["curv_1"][:] = values["strain_2"][:] = np.nan
     values["status"] = np.where(z > 2.8, Status.EDGE, Status.FINE).astype(np.uint8)
     values["discovery"] = (bump > 0.1).astype(np.uint8)
@@ -181,6 +182,16 @@ def test_places_without_a_number_say_why(view, result):
     assert result.points["status"][picked(view, result)] == Status.FINE
     assert "not observable here" in text(view)
     assert "too little texture or relief" in text(view).lower()
+
+
+def test_a_value_without_a_standard_error_says_that_no_interval_is_given(view, result):
+    view.click(*place_of(view, 0.5, 0.5))
+    assert "no interval" not in text(view)
+    view.click(*place_of(view, 0.9, 0.5))
+    row = picked(view, result)
+    assert np.isnan(result.points["tilt_sd"][row])
+    rows = [line for line in text(view).splitlines() if line.startswith("Tilt")]
+    assert rows[0].endswith("mrad (no interval given)")
 
 
 def test_a_click_beside_the_cloud_says_so(view):

@@ -36,8 +36,8 @@ def test_strain_cloud_gets_every_attribute_and_the_source(written, tmp_path):
     assert (source, name, colour, no_data) == (Path("scans/wall.laz"), "strain.laz", None, -9999.0)
     assert list(values) == list(result.points)
     assert [path.name for path in paths] == [
-        "strain.laz", "strain_tilt.laz", "strain_tilt.png", "gauges.csv", "registered.json", "summary.json",
-        "report.html", "manifest.json",
+        "strain.laz", "strain_tilt.laz", "strain_tilt.ply", "strain_tilt.png", "gauges.csv", "registered.json",
+        "summary.json", "report.html", "manifest.json",
     ]  # fmt: skip
     assert json.loads((tmp_path / "out" / "summary.json").read_text())["no_data"]["value"] == -9999.0
 
@@ -110,7 +110,7 @@ def cloud(written, tmp_path, monkeypatch):
 def test_recolour_writes_cloud_and_key_beside_the_cloud(cloud, written):
     path, _ = cloud
     paths = recolour(path, "tilt", limits=2e-3)
-    assert paths == [path.with_name("strain_tilt.laz"), path.with_name("strain_tilt.png")]
+    assert paths == [path.with_name(f"strain_tilt.{kind}") for kind in ("laz", "ply", "png")]
     assert all(each.is_file() for each in paths)
     source, _, changed, colour, _ = written[0]
     assert source == path
@@ -124,7 +124,7 @@ def test_recolour_into_another_folder_takes_the_name_of_the_cloud(cloud, tmp_pat
     path, _ = cloud
     renamed = path.rename(path.with_name("wall.laz"))
     paths = recolour(renamed, "spin", out=tmp_path / "maps")
-    assert paths == [tmp_path / "maps" / "wall_spin.laz", tmp_path / "maps" / "wall_spin.png"]
+    assert paths == [tmp_path / "maps" / f"wall_spin.{kind}" for kind in ("laz", "ply", "png")]
 
 
 def test_recolour_suggests_the_attribute_that_was_meant(cloud):
@@ -132,8 +132,13 @@ def test_recolour_suggests_the_attribute_that_was_meant(cloud):
     with pytest.raises(OptionError, match="did you mean 'tilt'"):
         recolour(path, "tild")
     del values["tilt"]
-    with pytest.raises(OptionError, match=r"attribute in strain\.laz"):
+    # named, but not in this cloud: it was made by another version
+    with pytest.raises(OptionError, match=r"strain\.laz: .* the attribute tilt; got .*; compare again"):
         recolour(path, "tilt")
+    renamed = path.rename(path.with_name("strain_spin.laz"))
+    path.touch()
+    with pytest.raises(OptionError, match=r"colour strain\.laz in the same folder"):
+        recolour(renamed, "tilt")
 
 
 def test_recolour_by_significance_needs_the_discoveries(cloud):

@@ -2,7 +2,7 @@
 """Figures of a result: maps, arrows, sections and series, each with its words."""
 
 from scanstrain.outputs.figures.catalogue import FIGURES, draw_all
-from scanstrain.outputs.figures.layout import Layout, lay_out
+from scanstrain.outputs.figures.layout import Layout, lay_flat, lay_out
 from scanstrain.outputs.figures.maps import draw_map
 from scanstrain.outputs.figures.picture import Picture
 from scanstrain.outputs.figures.rates import draw_rates
@@ -18,5 +18,6 @@ __all__ = [
     "draw_rates",
     "draw_section",
     "draw_series",
+    "lay_flat",
     "lay_out",
 ]

@@ -45,6 +45,7 @@ def draw_all(
     *,
     unrolled: Unrolled | Layout | None = None,
     limits: Mapping[str, Limits] | None = None,
+    colour_maps: Mapping[str, str] | None = None,
     only_significant: bool = True,
 ) -> Iterator[tuple[str, Picture]]:
     """Draw every figure that applies to a result, one after the other.
@@ -56,6 +57,8 @@ def draw_all(
         See `lay_out`; the work is shared by all figures.
     limits : mapping of str to limits, optional
         Ends of the colour scale of an attribute in stored units, the same for all epochs of a batch.
+    colour_maps : mapping of str to str, optional
+        Table of colours of an attribute, see `outputs.colour_maps`.
     only_significant : bool
         As for `draw_map`.
 
@@ -70,7 +73,10 @@ def draw_all(
         if name.startswith(MAP):
             attribute = name.removeprefix(MAP)
             given = (limits or {}).get(attribute)
-            picture = draw_map(result, attribute, unrolled=layout, limits=given, only_significant=only_significant)
+            table = (colour_maps or {}).get(attribute)
+            picture = draw_map(
+                result, attribute, unrolled=layout, limits=given, colour_map=table, only_significant=only_significant
+            )
         else:
             picture = FIGURES[name](result, unrolled=layout)
         if picture is not None:

@@ -181,7 +181,9 @@ def _small_map(figure: Any, box: tuple[float, ...], image: NDArray[np.uint8], wo
 def _names(structure: str) -> list[str]:
     """Short names of the components; u and v by what they are on this structure."""
     u, v = ("hoop", "axial") if structure == "tunnel" else ("horizontal", "upward")
-    short = {"displacement along u": f"in-plane, {u}", "displacement along v": f"in-plane, {v}"}
+    short = {"normal displacement": "along the normal"} | {
+        f"displacement along {axis}": f"in-plane, {word}" for axis, word in (("u", u), ("v", v))
+    }
     return [short.get(word, word) for word in OBSERVED_WORDS]
 
 

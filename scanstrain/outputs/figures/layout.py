@@ -89,21 +89,55 @@ def lay_out(result: Result, unrolled: Unrolled | Layout | None = None) -> Layout
     """
     if isinstance(unrolled, Layout):
         return unrolled
-    position, normal = result.strain.position, result.strain.normal
-    structure = structure_of(result)
+    strain = result.strain
+    return lay_flat(
+        strain.position, strain.normal, fine=strain.status == Status.FINE, spacing=strain.gauge_spacing,
+        structure=structure_of(result), base=float(result.reference.origin[2]), unrolled=unrolled,
+    )  # fmt: skip
+
+
+def lay_flat(
+    position: FloatArray,
+    normal: FloatArray,
+    *,
+    fine: BoolArray,
+    spacing: float,
+    structure: str,
+    base: float = 0.0,
+    unrolled: Unrolled | None = None,
+) -> Layout:
+    """Lay gauges flat that stand in arrays, for example out of a table.
+
+    Parameters
+    ----------
+    position, normal : ndarray of shape (g, 3)
+        Gauges in a local frame [m].
+    fine : ndarray of shape (g,), bool
+        Gauges with a fit; the others do not say where the surface is.
+    spacing : float
+        Gauge spacing [m].
+    structure : {"tunnel", "wall", "free"}
+    base : float
+        Height of the local origin [m], added to the heights of a wall.
+    unrolled : Unrolled, optional
+        The gauges in coordinates of the structure.
+
+    Returns
+    -------
+    Layout
+    """
     if unrolled is not None:
-        return _given(unrolled, position, normal, result.strain.gauge_spacing)
-    fine = result.strain.status == Status.FINE
+        return _given(unrolled, position, normal, spacing)
     use = fine if fine.sum() >= 3 else np.ones(len(fine), bool)
     if structure == "tunnel":
         axis = axis_of_normals(normal[use])
         if axis is not None:
-            return _tunnel(position, normal, use, axis, result.strain.gauge_spacing)
+            return _tunnel(position, normal, use, axis, spacing)
     if structure == "wall":
         facing = _side(normal[use])
         if facing is not None:
-            return _wall(position, normal, facing, result)
-    return _free(position, normal, use, result.strain.gauge_spacing)
+            return _wall(position, normal, facing, spacing, base)
+    return _free(position, normal, use, spacing)
 
 
 def map_directions(
@@ -186,15 +220,15 @@ def _tunnel(position: FloatArray, normal: FloatArray, use: BoolArray, axis: Floa
     return Layout(np.where(seen, along - start, np.nan), np.where(seen, clock * radius, np.nan), *_LINING, radius)
 
 
-def _wall(position: FloatArray, normal: FloatArray, facing: FloatArray, result: Result) -> Layout:
+def _wall(position: FloatArray, normal: FloatArray, facing: FloatArray, spacing: float, base: float) -> Layout:
     right = np.cross(UP, facing)
     along, height = position @ right, position[:, 2]
     places, turned = np.stack([along, height], axis=1), normal @ facing > FACING
-    seen = _in_front(places, position, normal, turned, result.strain.gauge_spacing)
+    seen = _in_front(places, position, normal, turned, spacing)
     start = along[seen].min() if seen.any() else 0.0
     return Layout(
         np.where(seen, along - start, np.nan),
-        np.where(seen, height + result.reference.origin[2], np.nan),
+        np.where(seen, height + base, np.nan),
         "along the wall [m]",
         "height [m]",
         "elevation, seen from the free side",

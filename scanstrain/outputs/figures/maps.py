@@ -33,6 +33,8 @@ from scanstrain.zones import Unrolled
 
 HALO = 2.2
 """White rim around letters on a map [pt]."""
+VEIL = 0.8
+"""Opacity of the paper behind them: the line to the place ends at its edge, and dark cells stay seen."""
 
 
 @styled
@@ -42,6 +44,7 @@ def draw_map(
     *,
     unrolled: Unrolled | Layout | None = None,
     limits: Limits | None = None,
+    colour_map: str | None = None,
     only_significant: bool = True,
 ) -> Picture | None:
     """Draw a map of one attribute.
@@ -55,6 +58,8 @@ def draw_map(
         The gauges in coordinates of the structure, see `lay_out`.
     limits : float or (float, float), optional
         Ends of the colour scale in stored units, as for the coloured cloud, whose default this shares.
+    colour_map : str, optional
+        Table of colours, as for the coloured cloud.
     only_significant : bool
         Grey out gauges without a change beyond the false-discovery control, and those that changed in another
         component while this one lies within its own 95 % limit.
@@ -70,7 +75,7 @@ def draw_map(
         An unknown attribute, or limits that do not fit it.
     """
     attribute = attribute_of(name)
-    scale = choose_scale(attribute, result.points[name], limits=limits)
+    scale = choose_scale(attribute, result.points[name], limits=limits, colour_map=colour_map)
     values = numbers_of(result, name)
     if scale.form == "steps" or not np.isfinite(values).any():
         return None
@@ -149,8 +154,9 @@ def mark_largest(page: MapPage, result: Result, name: str, layout: Layout) -> No
     note = panel.axes.annotate(
         text, (x, y), (16 * aside, 14 * above), textcoords="offset points", size=SMALL, weight="bold", color=INK,
         ha="left" if aside > 0 else "right", va="center", zorder=6,
-        arrowprops={"arrowstyle": "-", "color": INK, "linewidth": 0.8, "shrinkA": 1, "shrinkB": 3},
+        arrowprops={"arrowstyle": "-", "color": INK, "linewidth": 0.8, "shrinkA": 0, "shrinkB": 3},
         path_effects=[withStroke(linewidth=HALO, foreground="white")],
+        bbox={"boxstyle": "round,pad=0.2", "facecolor": "white", "edgecolor": "none", "alpha": VEIL},
     )  # fmt: skip
     note.arrow_patch.set_zorder(5)
     panel.axes.plot(x, y, "o", markersize=5, markerfacecolor="none", markeredgecolor=INK, markeredgewidth=0.9, zorder=5)

@@ -47,14 +47,21 @@ def footing(figure: Any, lines: Sequence[str]) -> None:
 
 def swatch(figure: Any, left: float, middle: float, pixels: RGB8 | None, meaning: str) -> None:
     """Draw a colour sample and its meaning at a place on the page [inch]; None is an outline."""
+    from matplotlib.image import BboxImage
+    from matplotlib.patches import Rectangle
+    from matplotlib.transforms import Bbox, TransformedBbox
+
     height = float(figure.get_figheight())
-    axes = figure.add_axes((left / WIDTH, (middle - 0.055) / height, 0.22 / WIDTH, 0.11 / height))
+    corner, size = (left / WIDTH, (middle - 0.055) / height), (0.22 / WIDTH, 0.11 / height)
+    # no axes of its own: they would take a hundred times as long as the sample
     if pixels is not None:
-        axes.imshow(pixels, aspect="auto", interpolation="nearest")
-    axes.set_xticks([])
-    axes.set_yticks([])
-    axes.spines[:].set_color(INK if pixels is None else FAINT)
-    axes.spines[:].set_linewidth(0.9 if pixels is None else 0.4)
+        box = TransformedBbox(Bbox.from_bounds(*corner, *size), figure.transFigure)
+        image = BboxImage(box, interpolation="nearest", origin="upper")
+        image.set_data(pixels)
+        figure.add_artist(image)
+    ink, wide = (INK, 0.9) if pixels is None else (FAINT, 0.4)
+    frame = Rectangle(corner, *size, facecolor="none", edgecolor=ink, linewidth=wide, transform=figure.transFigure)
+    figure.add_artist(frame)
     figure.text((left + 0.3) / WIDTH, middle / height, meaning, size=SMALL, va="center")
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Protocol
 from urllib.parse import quote
@@ -42,7 +43,7 @@ class Finished(Protocol):
         """Why there is none."""
 
 
-def write_index(outcomes: Sequence[Finished], folder: Path) -> Path:
+def write_index(outcomes: Sequence[Finished], folder: Path, *, series: object | None = None) -> Path:
     """Write the overview of a batch.
 
     Results of earlier runs that still stand in the folder are listed too, after those of this run.
@@ -50,9 +51,11 @@ def write_index(outcomes: Sequence[Finished], folder: Path) -> Path:
     Parameters
     ----------
     outcomes : sequence of Finished
-        In the order of the batch file.
+        In the order of the batch file. Those of a batch of several places carry the name of theirs as `place`.
     folder : Path
         Output folder of the batch; the reports lie in folders below it.
+    series : SeriesPart, optional
+        Figures and rates of the epochs followed.
 
     Returns
     -------
@@ -64,26 +67,69 @@ def write_index(outcomes: Sequence[Finished], folder: Path) -> Path:
         The page could not be written.
     """
     folder.mkdir(parents=True, exist_ok=True)
-    rows: list[Row] = [(each.name, _link(each, folder), each.summary, each.error) for each in outcomes]
-    rows += [(name, f"{quote(name)}/report.html", summary, "") for name, summary in _earlier(outcomes, folder)]
-    failed = sum(summary is None for _, _, summary, _ in rows)
+    rows = [
+        Row(each.name, _link(each, folder), each.summary, each.error, getattr(each, "place", None) or "")
+        for each in outcomes
+    ]
+    rows += _earlier(outcomes, folder)
+    failed = sum(row.summary is None for row in rows)
     target = folder / NAME
     with replacing(target) as path:
-        path.write_text(render("index.html", overview=_overview(rows), count=len(rows), failed=failed), "utf-8")
+        page = render(
+            "index.html", overview=_overview(rows), matrix=place_matrix(rows), count=len(rows), failed=failed,
+            series=series,
+        )  # fmt: skip
+        path.write_text(page, "utf-8")
     return target
 
 
-Row = tuple[str, str, Mapping[str, Any] | None, str]
+@dataclass(frozen=True, slots=True)
+class Row:
+    """One comparison: its name, where its report is, what came out or why nothing did, and its place if it has one."""
+
+    name: str
+    link: str
+    summary: Mapping[str, Any] | None
+    error: str = ""
+    place: str = ""
+
+
+def place_matrix(rows: Sequence[Row]) -> Table | None:
+    """Put places beside one another, one row each and one column an epoch; None where the batch has no places."""
+    places = list(dict.fromkeys(row.place for row in rows if row.place))
+    if not places:
+        return None
+    epochs = sorted({_epoch(row) for row in rows if row.place})
+    found = {(row.place, _epoch(row)): row for row in rows}
+    made: list[list[Cell | str]] = []
+    for place in places:
+        cells = [found.get((place, epoch)) for epoch in epochs]
+        made.append([place, *(Cell(MISSING) if row is None else _linked(row) for row in cells)])
+    note = f"Each number leads to its report. {MISSING}: no comparison."
+    caption = "Largest significant normal displacement at each place and epoch, with its 95 % interval"
+    return table(caption, ("Place", *epochs), made, note=note, kind="overview")
+
+
+def _epoch(row: Row) -> str:
+    """Date of the later scan, or its label where there is no date."""
+    date = _date(row.summary).text
+    return row.name.rpartition("_to_")[2] if date == MISSING else date
+
+
+def _linked(row: Row) -> Cell:
+    if row.summary is None:
+        return Cell("failed")
+    return replace(_largest(row.summary, WHOLE), link=row.link)
 
 
 def _overview(rows: Sequence[Row]) -> Table:
     """One row an epoch compared, one column a place."""
-    zones = [zone for _, _, summary, _ in rows for zone in (summary or {}).get("zones") or {}]
+    zones = [zone for row in rows for zone in (row.summary or {}).get("zones") or {}]
     places = list(dict.fromkeys((WHOLE, *zones)))
     made = [
-        [Cell(name, link=link if summary else ""), _date(summary), _verdict(summary, error),
-         *(_largest(summary, place) for place in places)]
-        for name, link, summary, error in rows
+        [Cell(f"{row.place}: {row.name}" if row.place else row.name, link=row.link if row.summary else ""),
+         _date(row.summary), _verdict(row.summary, row.error), *(_largest(row.summary, place) for place in places)]
+        for row in rows
     ]  # fmt: skip
     heads = ("Comparison", "Date", "Verdict", *(f"{place[:1].upper()}{place[1:]}" for place in places))
     note = f"{MISSING}: not observable, or no such zone. The reports say where, how sure, and what could not be seen."
@@ -149,17 +195,20 @@ def _link(outcome: Finished, folder: Path) -> str:
     return f"{quote(inside)}/report.html"
 
 
-def _earlier(outcomes: Sequence[Finished], folder: Path) -> list[tuple[str, Mapping[str, Any]]]:
-    """Results in the folder that this run did not make."""
+def _earlier(outcomes: Sequence[Finished], folder: Path) -> list[Row]:
+    """Results in the folder that this run did not make; those of a place lie one folder deeper."""
     known = {outcome.folder.resolve() for outcome in outcomes}
     found = []
-    for path in sorted(folder.glob("*/summary.json")):
+    for path in sorted((*folder.glob("*/summary.json"), *folder.glob("*/*/summary.json"))):
         if path.parent.resolve() in known or not (path.parent / "report.html").is_file():
             continue
+        inside = path.parent.relative_to(folder)
+        place = inside.parts[0] if len(inside.parts) > 1 else ""
         try:
             summary = json.loads(path.read_text(encoding="utf-8"))
-            _overview([(path.parent.name, "", summary, "")])
+            row = Row(inside.name, f"{quote(inside.as_posix())}/report.html", summary, place=place)
+            _overview([row])
         except (OSError, ValueError, KeyError, TypeError, AttributeError):
             continue  # not one of ours, or of a version that this one does not know
-        found.append((path.parent.name, summary))
+        found.append(row)
     return found

@@ -28,15 +28,20 @@ def render(template: str, **values: Any) -> str:
     str
         A page that is allowed to run its own scripts and to load nothing.
     """
-    from jinja2 import Environment, PackageLoader, StrictUndefined
-
     # scripts and style are read as files, so that the hashes are those of what the page holds
     own = asset("tables.js")
+    policy = _policy([own, *_SCRIPT.findall(values.get("view") or "")])
+    return fragment(template, style=asset("page.css"), script=own, policy=policy, **values)
+
+
+def fragment(template: str, **values: Any) -> str:
+    """Fill a template that is a piece of a page; every value is escaped, and one that is missing is an error."""
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+
     environment = Environment(
         loader=PackageLoader(FOLDER), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
     )
-    policy = _policy([own, *_SCRIPT.findall(values.get("view") or "")])
-    return environment.get_template(template).render(style=asset("page.css"), script=own, policy=policy, **values)
+    return environment.get_template(template).render(**values)
 
 
 def asset(name: str) -> str:

@@ -9,7 +9,7 @@ from typing import Any
 
 from scanstrain.outputs.report.images import Shown
 from scanstrain.outputs.report.tables import MISSING, Cell, Row, Table, measured, neat, plain_number, sized, table
-from scanstrain.outputs.words import TITLES, number, percent
+from scanstrain.outputs.words import NORMAL_95, TITLES, number, percent
 
 Summary = Mapping[str, Any]
 LISTED = (
@@ -46,7 +46,7 @@ def quantity_table(summary: Summary) -> Table:
     for name in LISTED:
         result = summary["results"][name]
         largest = result["largest_change"]
-        change = measured(largest["value"], largest["sd"], name) if largest else Cell(MISSING)
+        change = measured(largest["value"], largest["sd"], name) if largest and _clear(largest) else Cell(MISSING)
         rows.append([
             TITLES[name][0], sized(result["p05"], name), sized(result["median"], name), sized(result["p95"], name),
             change, sized(result["detection_limit"], name), _share(result["share_observable"]),
@@ -54,7 +54,7 @@ def quantity_table(summary: Summary) -> Table:
     heads = ("Quantity", "5 %", "Median", "95 %", "Largest change, 95 %", "Detection limit, median", "Observable")
     note = (
         "Over gauges. The largest change is that of all gauges that changed beyond the false-discovery control, single "
-        f"ones included. {MISSING}: none, not observable, or no error of its own is stored."
+        f"ones included. {MISSING}: none beyond its own interval, not observable, or no error of its own is stored."
     )
     return table("All quantities", heads, rows, note=note)
 
@@ -90,7 +90,7 @@ def _facts(result: Mapping[str, Any], name: str) -> Iterator[tuple[str, str]]:
     if result["detection_limit"] is not None:
         yield "Detection limit", f"{sized(result['detection_limit'], name).text} (95 %, median)"
     largest = result["largest_change"]
-    if largest:
+    if largest and _clear(largest):
         yield "Largest change", f"{measured(largest['value'], largest['sd'], name).text} (95 %)"
         yield "Found at", neat("x {:.2f}, y {:.2f}, z {:.2f}".format(*largest["at"]))
 
@@ -129,6 +129,11 @@ def _calibration(calibration: Mapping[str, Any]) -> Iterator[Table]:
         f"({number(calibration['gauges'], 0)} gauges); 1.00 leaves them as they are."
     )
     yield table("Calibration of the standard errors", ("Component", *groups), rows, note=note)
+
+
+def _clear(largest: Mapping[str, Any]) -> bool:
+    """Whether a change passes its own interval: a gauge counts as changed if any of its components did."""
+    return largest["sd"] is not None and abs(largest["value"]) > NORMAL_95 * largest["sd"]
 
 
 def _share(share: float | None) -> Cell:

@@ -9,6 +9,8 @@ from typing import Any
 from scanstrain.outputs.report.tables import MISSING, Cell, Row, Table, measured, neat, plain_number, table
 
 Summary = Mapping[str, Any]
+SMALLEST = 0.0001
+"""Below this a probability is not written out."""
 _PLACE = "disp_n"
 """Attribute whose unit lengths are written in."""
 _ANGLE = "spin"
@@ -45,12 +47,19 @@ def _bulges(bulges: list[Mapping[str, Any]]) -> Table:
     rows: list[Row] = [
         [bulge["kind"], plain_number(bulge["along"], 2, "m"), plain_number(bulge["up"], 2, "m"),
          measured(bulge["height"], bulge["height_sd"], _PLACE), plain_number(bulge["area"], 2, "m²"),
-         plain_number(bulge["chance"], 4), "" if bulge["closed"] else "may be larger than it seems"]
+         _chance(bulge["chance"]), "" if bulge["closed"] else "may be larger than it seems"]
         for bulge in bulges
     ]  # fmt: skip
     heads = ("Kind", "Along the wall", "Above its foot", "Height, 95 %", "Area", "Chance", "Extent")
     note = "After removal of the best plane. Chance: probability of such a height on a wall that moved as a plane."
     return table("Bulges and hollows", heads, rows, note=note)
+
+
+def _chance(p: float | None) -> Cell:
+    """A probability, and never nought where it is only small."""
+    if p is None or p >= SMALLEST:
+        return plain_number(p, 4)
+    return Cell(f"under {SMALLEST:.4f}", p)
 
 
 def _span(low: float | None, high: float | None) -> Cell:

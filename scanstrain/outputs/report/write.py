@@ -13,6 +13,7 @@ from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.report.ground import ground_tables
 from scanstrain.outputs.report.head import head_of
 from scanstrain.outputs.report.images import Shown, show, show_dots
+from scanstrain.outputs.report.joints import joint_tables
 from scanstrain.outputs.report.page import render
 from scanstrain.outputs.report.parts import budget_table, measure_table, trigger_table, zone_table
 from scanstrain.outputs.report.places import places_of
@@ -64,7 +65,9 @@ def report_page(result: Result, options: OutputOptions) -> str:
     summary = summarise(result, no_data=options.no_data)
     layout = layout_of(result)
     limits = {} if options.colour_limits is None else {options.colour_by: options.colour_limits}
-    figures = {name: show(name, picture) for name, picture in draw_all(result, unrolled=layout, limits=limits)}
+    maps_of = {} if options.colour_map is None else {options.colour_by: options.colour_map}
+    drawn = draw_all(result, unrolled=layout, limits=limits, colour_maps=maps_of)
+    figures = {name: show(name, picture) for name, picture in drawn}
     places = places_of(result, layout)
     zones = trigger_table(summary), zone_table(summary)
     maps = [figure for name, figure in figures.items() if name not in (*GROUND, *QUALITY, *DIRECTIONS)]
@@ -82,9 +85,10 @@ def report_page(result: Result, options: OutputOptions) -> str:
             "figures": [show(name, picture) for name, picture in section_pictures(result)],
             "title": "The wall" if summary.get("wall") else "Sections",
         },
+        joints=joint_tables(summary),
         parts_tables=[each for each in (*zones, budget_table(summary)) if each],
         parts_title="Zones and limits" if any(zones) else "Even strain",
-        view=_view(result, limits),
+        view=_view(result, limits, maps_of),
         quality={"tables": quality_tables(summary), "figures": _some(figures, QUALITY)},
         measure=summary["strain_measure"],
         measure_table=measure_table(summary),
@@ -105,10 +109,10 @@ def _some(figures: dict[str, Shown], names: tuple[str, ...]) -> list[Shown]:
     return [figures[name] for name in names if name in figures]
 
 
-def _view(result: Result, limits: dict[str, Limits]) -> str:
+def _view(result: Result, limits: dict[str, Limits], colour_maps: dict[str, str]) -> str:
     """Make the 3-D view with its picture, grey where nothing is significant as the maps are."""
     chosen: dict[str, Any] = dict(_chainage(result))
-    scene = scene_data(result, limits=limits, only_significant=True, **chosen)
+    scene = scene_data(result, limits=limits, colour_maps=colour_maps, only_significant=True, **chosen)
     title = TITLES[scene.layers[0].scale.attribute.name][0]
     alt = f"The cloud in space, coloured by {title.lower()}; grey where nothing significant changed."
     picture = show_dots("view", still(result, scene, only_significant=True), title=title, alt=alt, caption="")

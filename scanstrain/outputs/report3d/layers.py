@@ -94,7 +94,14 @@ class Layer:
         }
 
 
-def make_layer(result: Result, name: str, rows: NDArray[np.intp], *, limits: Limits | None = None) -> Layer:
+def make_layer(
+    result: Result,
+    name: str,
+    rows: NDArray[np.intp],
+    *,
+    limits: Limits | None = None,
+    colour_map: str | None = None,
+) -> Layer:
     """Code one attribute of a result.
 
     Parameters
@@ -106,6 +113,8 @@ def make_layer(result: Result, name: str, rows: NDArray[np.intp], *, limits: Lim
         Points of the reference that the view shows, in its order.
     limits : float or (float, float), optional
         Ends of the colour scale, as for the coloured cloud.
+    colour_map : str, optional
+        Table of colours, as for the coloured cloud.
 
     Returns
     -------
@@ -117,7 +126,7 @@ def make_layer(result: Result, name: str, rows: NDArray[np.intp], *, limits: Lim
         No such attribute, or limits that do not suit it.
     """
     attribute = attribute_of(name)
-    scale = choose_scale(attribute, result.points[name], limits=limits)
+    scale = choose_scale(attribute, result.points[name], limits=limits, colour_map=colour_map)
     values = np.asarray(result.points[name])[rows]
     sd_name = STANDARD_ERROR.get(name)
     sd = np.full(len(rows), np.nan) if sd_name is None else np.asarray(result.points[sd_name], np.float64)[rows]

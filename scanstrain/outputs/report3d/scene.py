@@ -75,6 +75,7 @@ def scene_data(
     attributes: tuple[str, ...] | None = None,
     limit: int = 200_000,
     limits: Mapping[str, Limits] | None = None,
+    colour_maps: Mapping[str, str] | None = None,
     only_significant: bool = False,
     along: FloatArray | None = None,
     along_name: str = "chainage",
@@ -91,6 +92,8 @@ def scene_data(
         How many points at most; fewer where the scene would pass 3 MB.
     limits : mapping of str to limits, optional
         Ends of the colour scales, as for the coloured clouds.
+    colour_maps : mapping of str to str, optional
+        Tables of colours, see `outputs.colour_maps`.
     only_significant : bool
         Whether places without a change beyond the false-discovery control are grey at first.
     along : ndarray of shape (n,), optional
@@ -118,8 +121,8 @@ def scene_data(
         got, required = f"shape {np.shape(along)}", f"shape ({len(points)},)"
         raise OptionError(explain("along", required, got, "give one value a point of the reference"))
     make = partial(
-        _scene, result, names=names, limits=limits or {}, only_significant=only_significant,
-        along=along, along_name=along_name, view=choose_view(result),
+        _scene, result, names=names, limits=limits or {}, colour_maps=colour_maps or {},
+        only_significant=only_significant, along=along, along_name=along_name, view=choose_view(result),
     )  # fmt: skip
     while True:
         scene = make(even_rows(points, limit))
@@ -135,7 +138,7 @@ def _offered(result: Result) -> tuple[str, ...]:
 
 def _scene(
     result: Result, rows: NDArray[np.intp], *, names: tuple[str, ...], limits: Mapping[str, Limits],
-    only_significant: bool, along: FloatArray | None, along_name: str, view: View,
+    colour_maps: Mapping[str, str], only_significant: bool, along: FloatArray | None, along_name: str, view: View,
 ) -> SceneData:  # fmt: skip
     chosen = result.reference.points[rows]
     low = chosen.min(axis=0)
@@ -143,7 +146,9 @@ def _scene(
     codes = np.round((chosen - low) / step).astype(np.uint16)
     order = z_order(codes)
     rows, codes = rows[order], codes[order]
-    layers = tuple(make_layer(result, name, rows, limits=limits.get(name)) for name in names)
+    layers = tuple(
+        make_layer(result, name, rows, limits=limits.get(name), colour_map=colour_maps.get(name)) for name in names
+    )
     corner = low + result.reference.origin
     status = np.asarray(result.points["status"])[rows].astype(np.uint8)
     changed = np.asarray(result.points["discovery"])[rows] == 1

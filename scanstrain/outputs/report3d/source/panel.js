@@ -30,7 +30,13 @@ export function filledPanel(cloud, state, { centre, clear }) {
 
 function said(cloud, layer, i) {
     const found = cloud.value(layer, i);
-    return found === null ? "not observable here" : reading(found, layer);
+    if (found === null) return "not observable here";
+    return reading(found, layer) + (unbounded(found, layer) ? " (no interval given)" : "");
+}
+
+// Whether a change is shown whose standard error is not known, so that nobody takes the bare number for a sure one.
+function unbounded(found, layer) {
+    return layer.masked && found.error === null;
 }
 
 function about(cloud, layer, i) {
@@ -38,6 +44,7 @@ function about(cloud, layer, i) {
     if (found === null) return sentence(reason(cloud, layer, i));
     const parts = [];
     if (found.error) parts.push("value with 95 % interval");
+    if (unbounded(found, layer)) parts.push("no standard error of this value is stored");
     if (layer.masked) parts.push(cloud.changed[i] ? "significant change at this place" : "no significant change at this place");
     if (layer.limit !== null) parts.push(`median detection limit ${amount(layer.limit, layer)}`);
     return parts.length ? sentence(parts.join("; ")) : "";
