@@ -217,7 +217,6 @@ def _write_overview(outcomes: Sequence[Outcome], config: BatchConfig) -> None:
 
 def _share_limits(config: BatchConfig) -> None:
     """Colour all comparisons that the batch file names by one scale, those of earlier runs included."""
-    from scanstrain.outputs.manifest import renew_manifest
     from scanstrain.outputs.options import OutputOptions
     from scanstrain.outputs.shared_limits import harmonise
 
@@ -230,8 +229,7 @@ def _share_limits(config: BatchConfig) -> None:
         ply=out.ply,
         colour_map=out.colour_map,
     )
-    for cloud in harmonise([job.folder for job in plan_jobs(config, ())], chosen):
-        renew_manifest(cloud.parent)
+    harmonise([job.folder for job in plan_jobs(config, ())], chosen)
 
 
 def outcomes_data(outcomes: Sequence[Outcome]) -> dict[str, Any]:

@@ -60,25 +60,43 @@ def write_manifest(result: Result, folder: Path, options: OutputOptions) -> Path
     )  # fmt: skip
 
 
-def renew_manifest(folder: Path) -> None:
+def renew_manifest(folder: Path, *, painted: tuple[float, float] | None = None) -> None:
     """Bring the hashes in `manifest.json` up to files that were made anew from the same result, such as colours.
 
-    A folder without a manifest that can be read is left alone: the next run makes its result anew.
+    A folder without a manifest that can be read is left alone: the next run makes its result anew. `painted` are the
+    ends of a colour scale that the coloured cloud now has from outside.
 
     Raises
     ------
     OutputError
         The folder cannot be written to.
     """
-    path = folder / NAME
-    try:
-        known = json.loads(path.read_text(encoding="utf-8"))
-        named = set(known["outputs"])
-    except (OSError, ValueError, KeyError, TypeError):
+    known = _read(folder)
+    if known is None:
         return
-    known["outputs"] = {name: facts for name, facts in _facts(folder).items() if name in named}
-    with replacing(path) as beside:
+    known["outputs"] = {name: facts for name, facts in _facts(folder).items() if name in known["outputs"]}
+    if painted is not None:
+        known["painted"] = list(painted)
+    with replacing(folder / NAME) as beside:
         write_json(known, beside)
+
+
+def painted_limits(folder: Path) -> tuple[float, float] | None:
+    """Ends of the colour scale that the coloured cloud of a folder has from outside; None where it has its own."""
+    known = _read(folder)
+    if known is None or not isinstance(known.get("painted"), list):
+        return None
+    low, high = known["painted"]
+    return float(low), float(high)
+
+
+def _read(folder: Path) -> dict[str, Any] | None:
+    """Read the manifest of a folder; None where there is none that can be read."""
+    try:
+        known = json.loads((folder / NAME).read_text(encoding="utf-8"))
+    except (OSError, ValueError):
+        return None
+    return known if isinstance(known, dict) and isinstance(known.get("outputs"), dict) else None
 
 
 def _facts(folder: Path) -> dict[str, dict[str, Any]]:

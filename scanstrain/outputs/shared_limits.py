@@ -15,6 +15,7 @@ from scanstrain.errors import ScanstrainError
 from scanstrain.outputs.colour import Scale, choose_scale, colours
 from scanstrain.outputs.folder import finished_only
 from scanstrain.outputs.key import write_key
+from scanstrain.outputs.manifest import painted_limits, renew_manifest
 from scanstrain.outputs.notes import notes_beside, significant_or_all
 from scanstrain.outputs.options import OutputOptions
 from scanstrain.outputs.ply import write_coloured_ply
@@ -65,11 +66,13 @@ def harmonise(folders: Sequence[Path], options: OutputOptions) -> list[Path]:
         return []
     shared = choose_scale(attribute, np.concatenate(values), colour_map=options.colour_map)
     shared = replace(shared, shared=len(own))
-    return [
-        cloud
-        for cloud, before in own.items()
-        if _repaint(cloud, shared, options, anew=(before.low, before.high) != (shared.low, shared.high))
-    ]
+    ends, anew = (shared.low, shared.high), []
+    for cloud, scale in own.items():
+        differs = (painted_limits(cloud.parent) or (scale.low, scale.high)) != ends
+        anew += [cloud] if differs else []
+        _repaint(cloud, shared, options, anew=differs)
+        renew_manifest(cloud.parent, painted=ends)
+    return anew
 
 
 def _cloud_of(folder: Path, name: str) -> Path | None:
@@ -89,8 +92,8 @@ def _values(cloud: Path, options: OutputOptions) -> NDArray[Any] | None:
         return None
 
 
-def _repaint(cloud: Path, scale: Scale, options: OutputOptions, *, anew: bool) -> bool:
-    """Write the key, which names the rule, and the clouds if their colours change; says whether they did."""
+def _repaint(cloud: Path, scale: Scale, options: OutputOptions, *, anew: bool) -> None:
+    """Write the key, which names the rule, and the clouds if their colours change."""
     from scanstrain import io
     from scanstrain.outputs.cloud import spread
 
@@ -108,4 +111,3 @@ def _repaint(cloud: Path, scale: Scale, options: OutputOptions, *, anew: bool) -
                     work / f"strain_{name}.ply", epoch, shown, scale,
                     only_significant=options.only_significant, no_data=options.no_data,
                 )  # fmt: skip
-    return anew
