@@ -137,3 +137,10 @@ def test_what_leads_nowhere_or_to_too_much_is_one_sentence_and_exit_2(batch, cap
     assert "Traceback" not in said
     for word in words:
         assert word in said
+
+
+def test_hidden_files_are_no_scans(batch):
+    """A copy that is being made often has a name with a dot before it."""
+    epochs = [EPOCHS[0], ("b", "scans/{place}/*06_*.laz")]
+    path = batch([*scans("chainage_1"), "scans/chainage_1/.2031-06_scan.laz"], epochs=epochs)
+    assert [job.current.name for job in plan_jobs(load_config(path))] == ["2031-06_scan.laz"]
