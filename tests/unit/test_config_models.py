@@ -199,3 +199,10 @@ def test_models_are_importable_by_name_and_pickle():
     config = config_from_options({"gauge_length": 0.8})
     assert isinstance(config, BaseModel)
     assert pickle.loads(pickle.dumps(config)) == config
+
+
+def test_a_ladder_rises_above_the_gauge_length():
+    found = texts(CompareConfig, {"neighbourhood": {"gauge_length": 0.6, "gauge_ladder": 0.5}})
+    assert "above the gauge_length, 0.6 m" in found["neighbourhood.gauge_ladder"]
+    assert CompareConfig(neighbourhood={"gauge_length": 0.6, "gauge_ladder": 1.2}).neighbourhood.gauge_ladder == 1.2
+    assert CompareConfig().neighbourhood.gauge_ladder is None

@@ -229,3 +229,34 @@ def test_notes_without_a_usable_summary_are_empty(tmp_path, content):
     if content is not None:
         (tmp_path / "summary.json").write_text(content)
     assert notes_beside(tmp_path / "strain.laz", "disp_n") == KeyNotes()
+
+
+def with_tests(result, *, confirmed):
+    """The result with the tests of the strain stage: gauges 0..2 are one cluster, two of eleven are no rigid motion."""
+    p = np.where(np.arange(12) < 3, 1e-4, np.nan)
+    rigid = np.where(np.arange(12) < 2, 1e-3, np.where(np.arange(12) < 11, 0.5, np.nan))
+    strain = replace(
+        result.strain, cluster_p=p, cluster_found=(np.arange(12) < 3) & confirmed, rigid_p=rigid,
+        detectable_80={"disp_n": np.where(np.arange(12) < 11, 4.2e-4, np.nan)},
+        bias={"disp_n": np.where(np.arange(12) < 3, 1e-4, 0.0)},
+    )  # fmt: skip
+    return replace(result, strain=strain)
+
+
+def test_a_region_has_the_p_value_of_its_cluster_and_the_sentence_says_whether_it_counts(result):
+    found = summary(with_tests(result, confirmed=True))
+    (region,) = found["regions"]["found"]
+    assert (region["p"], region["confirmed"]) == (1e-4, True)
+    assert "control, in 1 region too large or too clear for chance." in " ".join(verdict(found))
+    doubtful = summary(with_tests(result, confirmed=False))
+    assert "in 1 region, of which none too large or too clear for chance." in " ".join(verdict(doubtful))
+
+
+def test_power_bias_and_rigid_motion_are_in_the_summary(result):
+    found = summary(with_tests(result, confirmed=True))
+    assert found["results"]["disp_n"]["detectable_80"] == 4.2e-4
+    assert found["results"]["disp_n"]["gauge_bias"] == {"median": 0.0, "p95": 1e-4, "maximum": 1e-4}
+    assert found["results"]["tilt"]["gauge_bias"] is None
+    assert "0.42 mm is found with 80 % probability" in " ".join(verdict(found))
+    assert found["gauges"]["rigid"]["share_sufficient"] == pytest.approx(9 / 11)
+    assert found["gauges"]["rigid"]["sentence"].startswith("At 82 % of the gauges a rigid motion describes")
