@@ -95,6 +95,8 @@ def test_simple_shear(row):
     np.testing.assert_allclose(np.degrees(skew(F)[1, 0]), row["small_rotation"], rtol=0, atol=tolerance)
     major = np.degrees(np.arctan2(vectors[1, 1], vectors[0, 1])) % 180
     np.testing.assert_allclose(major, row["axis"], rtol=0, atol=tolerance)
+    after = eigh(sandwich(R, U))[1][:, 1]
+    np.testing.assert_allclose(np.degrees(np.arctan2(after[1], after[0])) % 180, row["axis_current"], atol=tolerance)
     np.testing.assert_allclose(U, np.array([[2, g], [g, 2 + g * g]]) / np.sqrt(4 + g * g), rtol=1e-14)
     np.testing.assert_allclose(green_lagrange(F), [[0, g / 2], [g / 2, g * g / 2]], rtol=0, atol=1e-15)
     np.testing.assert_allclose(almansi(F), [[0, g / 2], [g / 2, -g * g / 2]], rtol=0, atol=1e-15)
