@@ -206,7 +206,7 @@ def reweight(
     for r in range(m):
         e[r] = e[r] * e[r] / spread[r]
     if start:
-        scale = 1.4826**2 * np.median(e)
+        scale = (1.4826 * np.median(np.sqrt(e))) ** 2
     cut = 1.0 / (TUKEY * TUKEY * max(scale, 1e-12))
     total = weighted = 0.0
     for r in range(m):
