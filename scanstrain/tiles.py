@@ -18,8 +18,8 @@ IntArray = NDArray[np.int64]
 
 THINNED = 2_000_000
 """Points of an epoch that registration, structure and set-ups look at; of more, about so many are drawn."""
-TILED_FROM = 6_000_000
-"""Points of an epoch from which it is worked on in tiles: one piece would take some 9 GB."""
+TILED_FROM = 3_000_000
+"""Points of an epoch from which it is worked on in tiles: one piece would take some 5 GB."""
 TILE_POINTS = 1_800_000
 """Points of one epoch in a tile with its halo: some 2.5 GB in one process."""
 LEAVES = 8

@@ -145,7 +145,7 @@ class NeighbourhoodOptions(Options):
     tiles: bool | Auto = Field(
         default="auto",
         description="Work on the scans in tiles, from disk, so that memory does not grow with them; LAS and LAZ only."
-        " Default auto: from six million points a scan, because below that one piece is quicker.",
+        " Default auto: from three million points a scan, because below that one piece is quicker.",
     )
     tile_points: int | Auto = Field(
         default="auto",

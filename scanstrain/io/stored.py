@@ -6,6 +6,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
+from tempfile import TemporaryFile
 from typing import Any
 
 import numpy as np
@@ -15,7 +16,7 @@ from scanstrain.attributes import ATTRIBUTES, BY_NAME
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
 from scanstrain.io.las_extra import ExtraField, describe
-from scanstrain.mapped import release
+from scanstrain.mapped import is_mapped, release, slices
 from scanstrain.registry import unknown_name
 
 
@@ -39,11 +40,12 @@ class StoredValues:
 
     def descriptors(self) -> tuple[ExtraField, ...]:
         """Return one descriptor per attribute, in table order."""
-        return tuple(
-            describe(attribute, self.values[attribute.name], self.no_data)
-            for attribute in ATTRIBUTES
-            if attribute.name in self.values
-        )
+        found = []
+        for attribute in ATTRIBUTES:
+            if attribute.name in self.values:
+                found.append(describe(attribute, self.values[attribute.name], self.no_data))
+                release(self.values[attribute.name])
+        return tuple(found)
 
 
 def check_values(
@@ -136,6 +138,20 @@ def expand_to_file(epoch: Epoch, values: Mapping[str, NDArray[Any]], *, dropped_
     spread = {}
     for name, array in values.items():
         fill = np.nan if array.dtype.kind == "f" else (dropped_status if name == "status" else 0)
-        spread[name] = np.full((len(kept), *array.shape[1:]), fill, array.dtype)
-        spread[name][kept] = array
+        spread[name] = _room((len(kept), *array.shape[1:]), array)
+        done = 0
+        for rows in slices(len(kept)):
+            chosen = kept[rows]
+            part = np.full((len(chosen), *array.shape[1:]), fill, array.dtype)
+            count = int(np.count_nonzero(chosen))
+            part[chosen] = array[done : done + count]
+            spread[name][rows], done = part, done + count
+        release(array, spread[name])
     return spread
+
+
+def _room(shape: tuple[int, ...], like: NDArray[Any]) -> NDArray[Any]:
+    """Make an array where another of its kind lives: in memory, or in a file without a name."""
+    if not is_mapped(like):
+        return np.empty(shape, like.dtype)
+    return np.memmap(TemporaryFile(), like.dtype, "w+", shape=shape)

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from scanstrain.attributes import Attribute
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, OutputError, explain
+from scanstrain.mapped import release, slices
 from scanstrain.neighbourhood.result import Status
 from scanstrain.outputs.colour import Limits, choose_scale, colours
 from scanstrain.outputs.folder import check_folder, finished_only, is_ours
@@ -45,7 +46,11 @@ def write_coloured_cloud(result: Result, folder: Path, options: OutputOptions) -
     scale = choose_scale(
         attribute_of(name), result.points[name], limits=options.colour_limits, colour_map=options.colour_map
     )
-    rgb = colours(values[name], scale, significant=significant_or_all(values, options.only_significant))
+    rgb = np.empty((len(values[name]), 3), np.uint16)
+    for rows in slices(len(rgb)):
+        part = {each: row[rows] for each, row in values.items()}
+        rgb[rows] = colours(part[name], scale, significant=significant_or_all(part, options.only_significant))
+    release(*values.values())
     source, target = Path(result.reference.provenance.path), folder / f"strain_{name}.laz"
     return io.write_result_cloud(source, target, values, colour=rgb, no_data=options.no_data)
 

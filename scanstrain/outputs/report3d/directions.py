@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from scanstrain.outputs.report3d.thin import MOST_LOOKED_AT
 from scanstrain.result import Result
 
 FloatArray = NDArray[np.float64]
@@ -46,7 +47,8 @@ class View:
 
 def choose_view(result: Result) -> View:
     """Stand before the free side of a wall, and beside a tunnel."""
-    plan = result.reference.points[:, :2]
+    points = result.reference.points
+    plan = points[:: max(1, len(points) // MOST_LOOKED_AT), :2]
     _, vectors = np.linalg.eigh(np.cov(plan.T))
     direction = vectors[:, 1] * (1.0 if vectors[np.argmax(np.abs(vectors[:, 1])), 1] > 0 else -1.0)
     normal = result.strain.normal[np.isfinite(result.strain.normal).all(axis=1)]
