@@ -82,9 +82,8 @@ class Epoch:
 
 
 def moved_points(points: FloatArray, T: FloatArray) -> FloatArray:
-    """Transform points (n, 3) by a 4x4 matrix, each the same to the last bit in whatever company it comes."""
-    x, y, z = points.T
-    return np.stack([T[i, 0] * x + T[i, 1] * y + T[i, 2] * z + T[i, 3] for i in range(3)], axis=1)
+    """Transform points (n, 3) by a 4x4 matrix."""
+    return np.asarray(points @ T[:3, :3].T + T[:3, 3])
 
 
 def make_epoch(
