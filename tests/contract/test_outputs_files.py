@@ -53,7 +53,7 @@ def test_folder_holds_the_published_files_and_nothing_else(folder):
         "gauges.csv", "manifest.json", "registered.json", "report.html",
         "strain.laz", "strain_disp_n.laz", "strain_disp_n.ply", "strain_disp_n.png", "summary.json",
     ]  # fmt: skip
-    assert len(OUTPUTS) == 12
+    assert len(OUTPUTS) == 13
     assert not list(folder.parent.glob(".*"))
 
 

@@ -82,7 +82,7 @@ def test_every_file_of_a_result_is_named():
     assert {"strain_<attribute>.laz", "strain_<attribute>.ply", "strain_<attribute>.png"} <= set(rows)
     # strain.las belongs to folders of other versions, which are tidied all the same
     assert FIXED_NAMES - {"strain.las"} <= set(rows)
-    assert len(OUTPUTS) == 12
+    assert len(OUTPUTS) == 13
 
 
 @pytest.mark.parametrize(("words", "found"), [pytest.param(*each, id=" ".join(each[0])) for each in commands()])
