@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 from scanstrain.cells import KEY_BITS, find_key, pack
 from scanstrain.neighbourhood.joint_cuts import keep_own_side
-from scanstrain.neighbourhood.solve import LANES, accumulate, inverse, solve_in_place
+from scanstrain.neighbourhood.solve import accumulate, inverse, solve_in_place
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -188,7 +188,7 @@ def observation_rows(
             data[3, r], data[5, r] = table[c, VARIANCE + 1], table[c, VARIANCE + 3]
 
 
-@numba.njit(cache=True, nogil=True, fastmath=LANES)
+@numba.njit(cache=True, nogil=True)
 def reweight(
     rows: FloatArray, rhs: FloatArray, spread: FloatArray, variance: FloatArray, x: FloatArray, scale: float,
     start: bool, spent: int, w: FloatArray,

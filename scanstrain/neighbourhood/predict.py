@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 from scanstrain.cells import BLOCK_WIDTH, KEY_BITS, Cells, find_key, pack
 from scanstrain.neighbourhood.covariance import Covariance
 from scanstrain.neighbourhood.smooth import SmoothSurface
-from scanstrain.neighbourhood.solve import LANES, back_rows, reduce_rows
+from scanstrain.neighbourhood.solve import back_rows, reduce_rows
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -134,7 +134,7 @@ def _neighbours(
     return m
 
 
-@numba.njit(cache=True, nogil=True, fastmath=LANES)
+@numba.njit(cache=True, nogil=True)
 def _covariances(
     s: FloatArray, t: FloatArray, a: float, c: float, table: FloatArray, step: float, sill: float, constant: float,
     out: FloatArray,
@@ -145,7 +145,7 @@ def _covariances(
         out[i] = sill * lookup(table, 0, dx * dx + dy * dy, step) + constant
 
 
-@numba.njit(cache=True, nogil=True, fastmath=LANES)
+@numba.njit(cache=True, nogil=True)
 def krige(
     s: FloatArray, t: FloatArray, values: FloatArray, share: FloatArray, m: int, table: FloatArray, step: float,
     noise: float, sill: float, probe: float, weights: FloatArray, W: FloatArray,
@@ -179,7 +179,7 @@ def krige(
     return (constant * offset, *_prediction_error(share, m, table, step, noise, sill, constant, probe, W, solved))
 
 
-@numba.njit(cache=True, nogil=True, fastmath=LANES)
+@numba.njit(cache=True, nogil=True)
 def _prediction_error(
     share: FloatArray, m: int, table: FloatArray, step: float, noise: float, sill: float, constant: float,
     probe: float, W: FloatArray, solved: FloatArray,
@@ -321,7 +321,7 @@ def choose_block(x: float, y: float, z: float, key: IntArray, first: IntArray, s
     return best
 
 
-@numba.njit(cache=True, nogil=True, fastmath=LANES)
+@numba.njit(cache=True, nogil=True)
 def _weighted(
     places: FloatArray, weights: FloatArray, s: float, t: float, table: FloatArray, step: float
 ) -> tuple[float, float, float, float]:

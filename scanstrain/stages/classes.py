@@ -6,14 +6,14 @@ from __future__ import annotations
 from scanstrain.neighbourhood.joint_jumps import JointJumps, Side
 from scanstrain.neighbourhood.joint_lines import Joint
 from scanstrain.neighbourhood.result import AffineField, Correlation, SharedNoise
-from scanstrain.registration.result import Registration, StableGround, WeakDirection
+from scanstrain.registration.result import Registration, StableBlocks, StableGround, WeakDirection
 from scanstrain.registration.seams import Seam
 from scanstrain.registration.targets import TargetFit
 from scanstrain.shape import Shape
 from scanstrain.strain.bodies import BodyMotion
 from scanstrain.strain.calibration import Calibration
 from scanstrain.strain.congruence import Congruence
-from scanstrain.strain.result import Certainty, StrainField
+from scanstrain.strain.result import Certainty, MeasureDifference, StrainField
 from scanstrain.structures import Axis, Section, Wall, WallResult
 from scanstrain.structures.bulge import Bulge
 from scanstrain.structures.ellipse import Ellipse
@@ -36,6 +36,7 @@ ALLOWED: dict[str, type] = {
         Harmonics,
         Joint,
         JointJumps,
+        MeasureDifference,
         Outline,
         Part,
         Registration,
@@ -44,6 +45,7 @@ ALLOWED: dict[str, type] = {
         Shape,
         SharedNoise,
         Side,
+        StableBlocks,
         StableGround,
         StrainField,
         TargetFit,

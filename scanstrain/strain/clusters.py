@@ -43,6 +43,9 @@ CERTAIN = 4.0
 would cut off what chance does."""
 FEWEST_PAIRS = 200
 """Pairs of gauges without change that a correlation is believed from."""
+MOST_BESIDE = 300
+"""Gauges within the longest of those distances, on average, beyond which they are a crowd and no map: on an even grid
+there are 57, and links between all of a crowd would fill the memory."""
 SEED = 20_310_913
 """Of the simulated maps: the same scans give the same p-values."""
 
@@ -99,7 +102,7 @@ def find_clusters(
     label = np.full(len(p), -1, np.intp)
     score = _scores(p[tested])
     low = score > _forming()
-    if not low.any():
+    if not low.any() or _crowded(position[tested], LAGS[-1] * spacing):
         return Clusters(label, np.zeros(0), np.zeros(0, np.bool_))
     beside = _links(position[tested], BESIDE * spacing)
     groups, mass = _masses(score, low, beside)
@@ -108,6 +111,13 @@ def find_clusters(
     chance = _chance(position[tested], beside, length, np.random.default_rng(seed))
     cluster_p = _shares(chance, mass)
     return Clusters(label, cluster_p, benjamini_hochberg(cluster_p, rate))
+
+
+def _crowded(position: FloatArray, reach: float) -> bool:
+    from scipy.spatial import cKDTree
+
+    tree = cKDTree(position)
+    return bool(tree.count_neighbors(tree, reach) > MOST_BESIDE * len(position))
 
 
 def _shares(chance: FloatArray, mass: FloatArray) -> FloatArray:
