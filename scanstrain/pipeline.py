@@ -169,7 +169,7 @@ def _compare(
     ours, theirs = (at(each, points) for each, points in zip(few, moved_setups, strict=True))
     reference, current = aligned(reference, few[0], ours), aligned(current, few[1], theirs)
     material = Material(reference, current, ours, registration.T_ref_cur, config, folder)
-    affine, joints = keep("field", lambda: fitted(material, shape, config, clock))
+    affine, joints = keep("field", lambda: fitted(material, registration, shape, config, clock))
     affine, calibration, more_doubts, strain, zones, bodies, sections, wall = keep(
         "strain", lambda: strained(material, affine, registration, shape, config, clock)
     )

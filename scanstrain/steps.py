@@ -107,10 +107,12 @@ def aligned(epoch: Epoch, few: Epoch, moved: Epoch) -> Epoch:
     raise OptionError(explain("align_setups", required, got, "align the set-ups before the comparison"))
 
 
-def fitted(material: Material, shape: Shape, config: CompareConfig, clock: Clock) -> tuple[Any, ...]:
+def fitted(
+    material: Material, registration: Registration, shape: Shape, config: CompareConfig, clock: Clock
+) -> tuple[Any, ...]:
     """Run the neighbourhood stage, joints included."""
     with clock.stage("neighbourhood", 0.3):
-        affine = _fit(material, shape, config, clock)
+        affine = _fit(material, registration, shape, config, clock)
         return affine, _joints(material, affine, config)
 
 
@@ -138,11 +140,14 @@ def strained(
     return affine, calibration, doubts, strain, zones, bodies, sections, wall
 
 
-def _fit(material: Material, shape: Shape, config: CompareConfig, clock: Clock) -> AffineField:
+def _fit(
+    material: Material, registration: Registration, shape: Shape, config: CompareConfig, clock: Clock
+) -> AffineField:
     """Run the neighbourhood stage with its options."""
     from scanstrain.neighbourhood.affine import fit_pieces, setting_for
     from scanstrain.neighbourhood.gauge_length import GaugeLength, choose_gauge_length
     from scanstrain.neighbourhood.ladder import fit_on_ladder, rungs
+    from scanstrain.registration.report import steady_places
 
     options, free_side = config.neighbourhood, config.strain.free_side
     source, spacing, origin = material.source, material.spacing, material.reference.origin
@@ -169,6 +174,7 @@ def _fit(material: Material, shape: Shape, config: CompareConfig, clock: Clock) 
         free_side=None if free_side is None else np.array(free_side) - origin,
         axis=shape.guide(),
         joints=_joint_lines(origin, config),
+        steady=steady_places(registration),
         progress=lambda phrase, share: clock.say(f"neighbourhood, {phrase}", 0.3 + 0.5 * share),
     )
     if options.gauge_ladder is None:

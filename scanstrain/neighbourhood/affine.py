@@ -22,7 +22,7 @@ from scanstrain.neighbourhood.joint_lines import Joint
 from scanstrain.neighbourhood.layout import Lines, lay_lines, lay_out
 from scanstrain.neighbourhood.piece import InMemory, Source, corners_of
 from scanstrain.neighbourhood.pieces import BLOCKS, find_candidates, fit_piece
-from scanstrain.neighbourhood.plan import measure_plan
+from scanstrain.neighbourhood.plan import Steady, measure_plan
 from scanstrain.neighbourhood.result import AffineField
 from scanstrain.neighbourhood.setting import (
     REQUIRED_DISPLACEMENT_SD,
@@ -149,6 +149,7 @@ def fit_pieces(
     free_side: FloatArray | None = None,
     axis: FloatArray | Guide | None = None,
     joints: Sequence[Joint] = (),
+    steady: Steady | None = None,
     run: Run = map,
     progress: Progress | None = None,
 ) -> AffineField:
@@ -161,6 +162,8 @@ def fit_pieces(
     setting : Setting
     free_side, axis, joints : optional
         As of `fit_affine`.
+    steady : callable, optional
+        Says of places (n, 3) [m] whether they are known not to have moved: shared noise is measured there.
     run : callable
         Applies a function to the boxes of the pieces, as `map` does; the results must come in their order.
     progress : callable, optional
@@ -178,7 +181,7 @@ def fit_pieces(
     say = progress or _silent
     boxes = source.boxes()
     lines = _lines(source, setting, joints)
-    plan, trial = measure_plan(source, setting, lines, free_side, axis, say)
+    plan, trial = measure_plan(source, setting, lines, free_side, axis, steady, say)
     if trial.whole and len(boxes) == 1:
         field = finish(trial.fittings[0].close(plan.shared), setting, plan.shared, trial.warnings)
         return _with_bias(field, source, setting, lines)

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from scanstrain.epoch import Epoch
 from scanstrain.errors import FitError, explain
 from scanstrain.neighbourhood.correlation import Shared, measure_shared
+from scanstrain.neighbourhood.differences import PATCH
 from scanstrain.neighbourhood.finish import status_of
 from scanstrain.neighbourhood.fitting import Fitting, Greys, Material, joined, material_of
 from scanstrain.neighbourhood.gauges import Guide, candidates_in, choose_gauges
@@ -29,6 +30,8 @@ from scanstrain.neighbourhood.textures import FINE_CELLS, Texture, measure_textu
 
 FloatArray = NDArray[np.float64]
 Say = Callable[[str, float], None]
+Steady = Callable[[FloatArray], NDArray[np.bool_]]
+"""Says of places (n, 3) [m] whether they are known not to have moved."""
 
 TURNS = 3
 """Most comparisons at the finest level."""
@@ -43,6 +46,8 @@ CUBE = 5.0
 """Width of a sample in gauge lengths: most of its gauges have whole patches."""
 LEAST_POINTS = 1000
 """A sample with fewer points of an epoch is left out."""
+FEWEST_STEADY = 40
+"""Gauges amid steady ground from which shared noise is measured on it alone: their patches make some ten apart."""
 MARGIN = 0.25
 """So much more is taken of both epochs, in gauge lengths: for what moved across the border."""
 
@@ -110,9 +115,12 @@ def measure_plan(
     lines: Lines,
     free_side: FloatArray | None,
     axis: FloatArray | Guide | None,
+    steady: Steady | None,
     say: Say,
 ) -> tuple[Plan, Trial]:
     """Fit the sample from coarse to fine and judge on it what all pieces have in common.
+
+    `steady` says which places are known not to have moved; noise that neighbours share is measured there.
 
     Raises
     ------
@@ -133,7 +141,7 @@ def measure_plan(
     fittings, warnings = _begin(finest, setting, lines, free_side, axis)
     models, textured, turns = _descend(materials, finest, fittings, setting, say)
     say("shared noise", 1.0)
-    shared = _shared(fittings, setting)
+    shared = _shared(fittings, setting, steady)
     return Plan(textures, tuple(models), tuple(textured), turns, shared), Trial(fittings, whole, warnings)
 
 
@@ -197,13 +205,33 @@ def _descend(
     return models, textured, turns
 
 
-def _shared(fittings: Sequence[Fitting], setting: Setting) -> Shared | None:
-    """Measure shared noise about the sound gauges of the sample."""
+def _shared(fittings: Sequence[Fitting], setting: Setting, steady: Steady | None) -> Shared | None:
+    """Measure shared noise about the sound gauges of the sample: on steady ground, as far as there is enough of it.
+
+    What a structure does within a patch looks like noise that neighbours share; where nothing moved, it is.
+    """
     status = status_of(joined([fitting.close(None) for fitting in fittings]), setting)
     ends = np.cumsum([len(fitting.change) for fitting in fittings])[:-1]
+    sound = [np.flatnonzero(part == Status.FINE) for part in np.split(status, ends)]
+    if steady is not None:
+        still = [
+            gauges[_amid(fitting.gauges.origin, steady, PATCH * setting.radius)[gauges]]
+            for fitting, gauges in zip(fittings, sound, strict=True)
+        ]
+        sound = still if sum(map(len, still)) >= FEWEST_STEADY else sound
     return measure_shared(
         [fitting.level for fitting in fittings],
         [fitting.state for fitting in fittings],
         [fitting.table for fitting in fittings],
-        [np.flatnonzero(part == Status.FINE) for part in np.split(status, ends)],
+        sound,
     )
+
+
+def _amid(places: FloatArray, steady: Steady, reach: float) -> NDArray[np.bool_]:
+    """Which gauges are steady, and so are all others within `reach` [m]."""
+    from scipy.spatial import cKDTree
+
+    moving = places[~steady(places)]
+    if not len(moving):
+        return np.ones(len(places), np.bool_)
+    return np.asarray(cKDTree(moving).query(places)[0] > reach)

@@ -3,6 +3,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numba
 import numpy as np
 from numpy.typing import NDArray
@@ -137,6 +139,19 @@ def on_stable_ground(blocks: StableBlocks, points: FloatArray) -> BoolArray:
     """Say which points (n, 3) lie in stable blocks."""
     block = _block_of_points(points, blocks.key, blocks.width)
     return np.asarray((block >= 0) & blocks.good[block])
+
+
+def steady_places(registration: Registration) -> Callable[[FloatArray], BoolArray] | None:
+    """Return what says of places (n, 3) [m] whether they do not lie in a block that moved; None if nothing is known."""
+    blocks = registration.blocks
+    if blocks is None:
+        return None
+
+    def steady(places: FloatArray) -> BoolArray:
+        block = _block_of_points(places, blocks.key, blocks.width)
+        return np.asarray((block < 0) | blocks.good[block])
+
+    return steady
 
 
 def _stable_ground(ground: Ground | None, options: Options) -> StableGround | None:
