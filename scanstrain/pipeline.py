@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from scanstrain.clock import Clock, Progress
+from scanstrain.colours import with_colour
 from scanstrain.config import CompareConfig, config_from_options
 from scanstrain.epoch import Epoch
 from scanstrain.errors import OptionError, explain
@@ -162,6 +163,9 @@ def _compare(
     keep: Keep,
     folder: Path | None = None,
 ) -> Result:
+    if folder is None and config.neighbourhood.use_intensity and config.neighbourhood.use_colour:
+        reference, current, said = with_colour(reference, current)
+        notices = (*notices, *said)
     # What concerns the object as a whole is judged on points drawn from a large scan, in tiles or not.
     few = thinned(reference), thinned(current)
     found = keep("registration", lambda: registered(*few, config, clock))

@@ -119,6 +119,12 @@ class NeighbourhoodOptions(Options):
         "shows nothing in its own plane. Set false where the scanner or its settings changed "
         "between the epochs.",
     )
+    use_colour: bool = Field(
+        default=True,
+        description="Use colour beside the intensity where both scans have it and it shows clearly more. Default true, "
+        "because texture is what in-plane strain is seen by. Set false where light or camera changed between the "
+        "epochs. Not used in tiles.",
+    )
     resolution: Positive | Auto = Field(
         default="auto",
         description="Edge of the cells that carry the surface model [m], at most the gauge length. Default "

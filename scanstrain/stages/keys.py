@@ -24,6 +24,7 @@ def _registration(config: CompareConfig) -> Options:
     options.pop("start_file")  # its content counts, and stands among the inputs
     return {
         "registration": options,
+        "colour": config.neighbourhood.use_colour and config.neighbourhood.use_intensity,
         "zones": [zone.model_dump(mode="json") for zone in config.zone if zone.name in named],
         "structure": config.strain.structure,
         "free_side": config.strain.free_side,

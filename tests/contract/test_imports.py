@@ -20,7 +20,7 @@ LAYERS = (
     ("errors", "attributes", "workers", "program", "capacity", "clock"),
     ("registry", "progress", "lock", "cluster"),
     ("linalg", "epoch", "mapped", "columns"),
-    ("zones", "cells", "series", "limits", "damage", "budget", "forecast"),
+    ("zones", "cells", "series", "limits", "damage", "budget", "forecast", "colours"),
     ("structures",),
     ("registration",),
     ("neighbourhood",),

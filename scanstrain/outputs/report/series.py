@@ -25,6 +25,8 @@ _OF_UNIT = {"m": BY_NAME["disp_n"], "rad": BY_NAME["spin"], "1": _RATIO, "1/m": 
 """How a stored unit is written for a person."""
 _TITLES = {
     "mean_disp_n": "Mean normal displacement",
+    "mean_strain_u": "Mean strain along u",
+    "mean_strain_v": "Mean strain along v",
     "shift": "Shift to the free side",
     "lean": "Change of lean",
     "yaw": "Change of yaw",
@@ -71,7 +73,7 @@ def series_pictures(rows: Sequence[Row], first: tuple[str, str]) -> Iterator[tup
         title = title_of(quantity)
         yield (
             f"series_{quantity}",
-            draw_series(dates, values, sd, places, attribute=_attribute(unit), title=title, facts=facts),
+            draw_series(dates, values, sd, places, attribute=_attribute(quantity, unit), title=title, facts=facts),
         )
 
 
@@ -105,7 +107,9 @@ def title_of(quantity: str) -> str:
     return _TITLES.get(quantity, quantity.replace("_", " "))
 
 
-def _attribute(unit: str) -> Attribute:
+def _attribute(quantity: str, unit: str) -> Attribute:
+    if "strain" in quantity:
+        return BY_NAME["strain_u"]
     return _OF_UNIT.get(unit, replace(_RATIO, person=unit, factor=1.0))
 
 
@@ -121,7 +125,7 @@ def _clearest(rows: Sequence[ChangeRow]) -> list[str]:
 
 def _rate(row: RateRow) -> Cell:
     """Write a rate with its interval; it is wider than 1.96 standard errors where epochs are few."""
-    attribute = _attribute(row.unit)
+    attribute = _attribute(row.quantity, row.unit)
     value, half = row.fit.rate * attribute.factor, (row.fit.rate_high - row.fit.rate_low) / 2 * attribute.factor
     if not math.isfinite(half):
         return Cell(MISSING)
