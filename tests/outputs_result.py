@@ -99,7 +99,7 @@ def make_result(path="north_wall_0.laz", current="north_wall_1.laz"):
     )  # fmt: skip
     return Result(
         reference=reference, current=moved, registration=registration, field=field,
-        calibration=CALIBRATION, strain=strain, points=points,
+        calibration=CALIBRATION, strain=strain, points=points | {"stable": registration.stable.astype(np.uint8)},
         config=Config(), timing={"read": 0.5, "registration": 1.0, "neighbourhood": 1.5}, warnings=("Twice said.",),
     )  # fmt: skip
 

@@ -25,6 +25,13 @@ structure = "wall"
 """
 
 
+class Made(str):
+    """Stands in for a result."""
+
+    def close(self):
+        """Let nothing go."""
+
+
 @pytest.fixture
 def batch(tmp_path):
     """Load a batch of epochs a, b, c, whose files exist."""
@@ -52,7 +59,7 @@ def calls(monkeypatch):
             progress("registration", 1.0)
         if current.stem in made.broken:
             raise made.broken[current.stem]
-        return current.stem
+        return Made(current.stem)
 
     def write_result(result, folder, **options):
         made.written.append((result, options))
@@ -83,7 +90,15 @@ def test_every_comparison_runs_with_the_options_of_the_file(batch, calls, tmp_pa
     request = options.pop("request")
     assert (result, options) == (
         "b",
-        {"colour_by": "disp_n", "colour_limits": None, "no_data": -9999.0, "only_significant": False, "report": True},
+        {
+            "colour_by": "disp_n",
+            "colour_limits": None,
+            "no_data": -9999.0,
+            "only_significant": False,
+            "report": True,
+            "ply": True,
+            "colour_map": None,
+        },
     )
     assert request["inputs"]["current"] == hashlib.sha256(b"scan b").hexdigest()
     assert request["labels"] == [["a", None], ["b", None]]

@@ -196,8 +196,8 @@ def test_a_stopped_run_goes_on_where_it_was_and_gives_the_same_bytes(
 
 def test_what_a_killed_run_left_is_tidied(undisturbed, done, scans):
     """A half-written result beside or inside, and an exchange of results that was cut in the middle."""
-    (done.parent / ".result.12ab.partial").mkdir()
-    (done.parent / ".result.12ab.partial" / "strain.laz").write_bytes(b"half")
+    (done.parent / ".result.12ab34cd.partial").mkdir()
+    (done.parent / ".result.12ab34cd.partial" / "strain.laz").write_bytes(b"half")
     work = done / ".34cd.partial"
     (work / "before").mkdir(parents=True)
     (done / "gauges.csv").rename(work / "before" / "gauges.csv")

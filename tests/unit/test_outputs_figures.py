@@ -64,6 +64,7 @@ def placed(small, position, normal, up, **values):
     )  # fmt: skip
     registration = replace(small.registration, covariance=np.eye(6) * 1e-12)
     points = {name: np.asarray(value)[:1].repeat(300) for name, value in table.items()}
+    points["stable"] = registration.stable.astype(np.uint8)
     return replace(small, strain=strain, field=field, registration=registration, points=points)
 
 
@@ -386,7 +387,7 @@ def test_the_histogram_counts_what_lies_beyond_the_interval(small):
     score = np.zeros(144)
     score[:36] = 2.5
     result = wall(small, disp_n=score * 1e-3)
-    result = replace(result, registration=replace(result.registration, stable=np.zeros(300, bool)))
+    result = replace(result, points={**result.points, "stable": np.zeros(300, np.uint8)})
     assert "25 % of the 144 gauges of the whole map" in FIGURES["standardised"](result).alt
 
 

@@ -62,8 +62,8 @@ def test_the_same_value_has_the_same_colour_on_every_date(batch):
         assert any("from -20 to 20 mm" in line for line in ply.comments)
         assert not list(folder.glob("*.partial"))
     changed = {path.name for path, content in before.items() if path.read_bytes() != content}
-    # the key of the other one says from now on whose limits it shows
-    assert changed == {"strain_disp_n.png"}
+    # the key of the other one says from now on whose limits it shows, and the manifest goes with it
+    assert changed == {"strain_disp_n.png", "manifest.json"}
 
 
 def test_what_the_files_hold_besides_colours_stays(batch):
