@@ -4,6 +4,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from scanstrain.errors import OptionError, explain
@@ -34,7 +35,8 @@ def prove_batch(
     config : BatchConfig
         With absolute paths, as `load_config` returns it.
     only : sequence of str
-        Labels of the epochs that are split into halves; the first epoch by default, none where `still` is given.
+        Labels of the epochs that are split into halves, PLACE/LABEL where the batch has places; the first epoch by
+        default, none where `still` is given.
     still : pair of str, optional
         Labels of two epochs that show no change.
     strain, height : float, optional
@@ -58,12 +60,12 @@ def prove_batch(
     """
     from scanstrain.io import check_same_frame, read_scan
 
-    files = {entry.label: entry.file for entry in config.epoch}
+    files = scans_of(config)
     pair = None if still is None else still_pair(still, list(files))
     for label in only:
         if label not in files:
             raise OptionError(unknown_name("only", label, list(files)))
-    labels = list(dict.fromkeys(only)) or ([] if pair else [config.epoch[0].label])
+    labels = list(dict.fromkeys(only)) or ([] if pair else [next(iter(files))])
     options = config.compare_config()
     steps = len(labels) + (pair is not None)
     proofs: list[Proof] = []
@@ -85,6 +87,23 @@ def prove_batch(
         name = f"{pair[0]} and {pair[1]}"
         proofs.append(prove_pair(first, second, options, name=name, strain=strain, height=height, progress=tell))
     return proofs
+
+
+def scans_of(config: BatchConfig) -> dict[str, Path]:
+    """Return the scans of a batch by the labels of their epochs, with places by PLACE/LABEL.
+
+    Raises
+    ------
+    OptionError
+        A pattern leads to no file, or to several.
+    """
+    from scanstrain.config import sites_of
+
+    return {
+        f"{site.name}/{entry.label}" if site.name else entry.label: entry.file
+        for site in sites_of(config)
+        for entry in site.batch.epoch
+    }
 
 
 def _of_one_scan(options: CompareConfig, epoch: Epoch) -> CompareConfig:

@@ -7,6 +7,7 @@ from scanstrain.cli import main
 from scanstrain.config import check_batch, load_config, sites_of
 from scanstrain.errors import OptionError
 from scanstrain.jobs import plan_jobs
+from scanstrain.proof.batch import scans_of
 
 EPOCHS = (("january", "scans/{place}/2031-01_*.laz"), ("june", "scans/{place}/2031-06_*.laz"))
 
@@ -40,6 +41,13 @@ def test_places_are_found_in_the_order_of_their_numbers_each_with_its_own_folder
     assert jobs[0].folder == tmp_path / "results" / "chainage_20" / "january_to_june"
     assert jobs[0].reference == tmp_path / "scans" / "chainage_20" / "2031-01_scan.laz"
     assert jobs[0].current.name == "2031-06_scan.laz"
+
+
+def test_a_proof_finds_the_scans_of_every_place(batch):
+    path = batch(scans("chainage_100", "chainage_20"))
+    assert list(scans_of(load_config(path))) == [
+        "chainage_20/january", "chainage_20/june", "chainage_100/january", "chainage_100/june",
+    ]  # fmt: skip
 
 
 @pytest.mark.parametrize(
