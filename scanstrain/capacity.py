@@ -20,9 +20,11 @@ USABLE = 0.8
 
 BASE_SPACE = 20e6
 """Report, tables, pictures and kept stages of a small comparison [byte]."""
-SPACE_A_POINT = 250.0
-"""Room that a result takes for each point of the reference scan [byte], measured and rounded up: both clouds, kept
+SPACE_A_POINT = 300.0
+"""Room that a result takes for each point of the reference scan [byte], measured and rounded up: all three clouds, kept
 stages and the older result that stands until the new one is whole."""
+STORE_A_POINT = 300.0
+"""Room that work in tiles takes for each point of the larger scan [byte], measured and rounded up."""
 
 
 def needed_memory(points: int) -> float:
@@ -33,6 +35,11 @@ def needed_memory(points: int) -> float:
 def needed_space(points: int) -> float:
     """Estimate the room that a result takes [byte] from the points of the reference scan."""
     return BASE_SPACE + SPACE_A_POINT * points
+
+
+def stored_space(points: int) -> float:
+    """Estimate the room that work in tiles takes [byte] from the points of the larger scan."""
+    return STORE_A_POINT * points
 
 
 def usable_workers(points: Sequence[int]) -> int:

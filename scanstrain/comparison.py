@@ -6,10 +6,12 @@ from __future__ import annotations
 import json
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import TYPE_CHECKING, Any
 
-from scanstrain.capacity import free_space, needed_space
+from scanstrain.capacity import free_space, needed_space, stored_space
 from scanstrain.clock import Progress
 from scanstrain.errors import InputFileError, OptionError, OutputError, explain
 from scanstrain.lock import locked
@@ -133,7 +135,8 @@ def compare_to_folder(
     notes = [f"{folder}: the result there was {found.value} ({detail}); it is made anew."] if detail else []
     if fresh:
         forget(folder)
-    check_space(folder, [expected_points(reference)])
+    counts = [expected_points(scan) for scan in (reference, current)]
+    check_space(folder, counts[:1], tiled=_in_tiles(max(counts), config))
     try:
         store = _compute(reference, current, config, folder, request, labels, progress)
     except InputFileError:
@@ -168,7 +171,14 @@ def _compute(
     assume, options = request["assume_same_crs"], config.output
     with unchanged([reference, current]):
         result = compare_files(
-            reference, current, config, assume_same_crs=assume, labels=labels, progress=_part(progress), keep=store
+            reference,
+            current,
+            config,
+            assume_same_crs=assume,
+            labels=labels,
+            progress=_part(progress),
+            keep=store,
+            stores=partial(_stores_beside, folder),
         )
         if progress:
             progress("write", COMPUTING)
@@ -188,6 +198,22 @@ def _compute(
         finally:
             result.close()
     return store
+
+
+def _in_tiles(points: int, config: CompareConfig) -> int:
+    """Points of the larger scan if it will be worked on in tiles, otherwise 0."""
+    from scanstrain.tiles import TILED_FROM
+
+    asked = config.neighbourhood.tiles
+    return points if asked is True or (asked == "auto" and points >= TILED_FROM) else 0
+
+
+def _stores_beside(folder: Path) -> TemporaryDirectory[str]:
+    """Make a folder for work in tiles on the disk of the result; the next run removes what a killed one leaves."""
+    from scanstrain.outputs.folder import PARTIAL
+
+    folder.parent.mkdir(parents=True, exist_ok=True)
+    return TemporaryDirectory(prefix=f".{folder.name}.", suffix=PARTIAL, dir=folder.parent)
 
 
 def _part(progress: Progress | None) -> Progress | None:
@@ -244,7 +270,7 @@ def _summary(folder: Path) -> dict[str, Any]:
     return summary
 
 
-def check_space(folder: Path, points: Sequence[int]) -> None:
+def check_space(folder: Path, points: Sequence[int], *, tiled: int = 0) -> None:
     """Refuse a disk without room for some results.
 
     Parameters
@@ -253,13 +279,15 @@ def check_space(folder: Path, points: Sequence[int]) -> None:
         Where they go.
     points : sequence of int
         Of each reference scan.
+    tiled : int
+        Points of the larger scan if one comparison is worked on in tiles.
 
     Raises
     ------
     OutputError
         With what is needed and what is free.
     """
-    needed, free = sum(map(needed_space, points)), free_space(folder)
+    needed, free = sum(map(needed_space, points)) + stored_space(tiled), free_space(folder)
     if needed > free:
         required, got = f"about {needed / 1e9:.2g} GB of free space", f"{free / 1e9:.2g} GB"
         raise OutputError(explain(str(folder), required, got, "free some space or choose another disk"))

@@ -6,6 +6,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import Any
 
 from scanstrain.clock import Clock, Progress
@@ -21,6 +22,15 @@ from scanstrain.tiles import thinned
 EpochLabel = tuple[str, str | None]
 Keep = Callable[[str, Callable[[], Any]], Any]
 """Given the name of a stage and what computes it, returns its result: computed, or kept from an earlier run."""
+
+
+Stores = Callable[[], "TemporaryDirectory[str]"]
+"""Makes a folder that goes with the result, for points and values that do not fit into memory."""
+
+
+def temporary_stores() -> TemporaryDirectory[str]:
+    """Make a folder where the system keeps temporary files."""
+    return TemporaryDirectory(prefix="scanstrain-tiles-")
 
 
 def compute_always(_stage: str, compute: Callable[[], Any]) -> Any:
@@ -60,17 +70,21 @@ def compare_files(
     labels: tuple[EpochLabel, EpochLabel] | None = None,
     progress: Progress | None = None,
     keep: Keep = compute_always,
+    stores: Stores = temporary_stores,
 ) -> Result:
     """Read two scan files and compare them; arguments as of `compare` and `compare_epochs`.
 
     `labels` are what the user calls the two epochs, each with its date; by default the files name them. `keep` may
-    hand back the result of a stage that an earlier run left; by default nothing is kept.
+    hand back the result of a stage that an earlier run left; by default nothing is kept. `stores` makes the folder for
+    work in tiles; by default it lies where the system keeps temporary files.
     """
     from scanstrain.io import check_same_frame, read_scan
 
     clock = Clock(progress)
     if in_tiles(reference, current, config):
-        return _compare_tiled(reference, current, config, clock, keep, assume_same_crs=assume_same_crs, labels=labels)
+        return _compare_tiled(
+            reference, current, config, clock, keep, stores, assume_same_crs=assume_same_crs, labels=labels
+        )
     with clock.stage("read", 0.0):
         first = read_scan(reference)
         second = read_scan(current, origin=first.origin)
@@ -108,17 +122,16 @@ def _compare_tiled(
     config: CompareConfig,
     clock: Clock,
     keep: Keep,
+    stores: Stores,
     *,
     assume_same_crs: bool,
     labels: tuple[EpochLabel, EpochLabel] | None,
 ) -> Result:
     """Compare with points, tiles and values on disk, in a folder that goes with the result."""
-    from tempfile import TemporaryDirectory
-
     from scanstrain.io import check_same_frame
     from scanstrain.io.las_mapped import read_mapped
 
-    scratch = TemporaryDirectory(prefix="scanstrain-tiles-")
+    scratch = stores()
     try:
         folder = Path(scratch.name)
         with clock.stage("read", 0.0):

@@ -137,7 +137,7 @@ def recover(folder: Path) -> None:
     """
     folder = folder.absolute()
     # Other comparisons may be at work in the same parent, under names that begin alike: x_to_y and x_to_y.2.
-    mine = re.compile(rf"\.{re.escape(folder.name)}\.[0-9a-f]{{8}}{re.escape(PARTIAL)}")
+    mine = re.compile(rf"\.{re.escape(folder.name)}\.[0-9a-z_]{{8}}{re.escape(PARTIAL)}")
     beside = [path for path in folder.parent.glob(f".*{PARTIAL}") if mine.fullmatch(path.name)]
     for work in [*beside, *folder.glob(f".*{PARTIAL}")]:
         for path in [*work.glob("before/*")]:

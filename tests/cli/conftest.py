@@ -44,7 +44,7 @@ def fake(monkeypatch):
     """Replace the comparison and the cloud writer; scans whose name holds a key of `broken` fail with its value."""
     made = types.SimpleNamespace(configs=[], broken={})
 
-    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, keep=None):
+    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, **_):
         made.configs.append((config, assume_same_crs))
         for step in ("registration", "neighbourhood", "strain") if progress else ():
             progress(step, 0.0)

@@ -52,7 +52,7 @@ def calls(monkeypatch):
     """Replace the pipeline and the writer; return what they were called with. Scans named in `broken` fail."""
     made = types.SimpleNamespace(compared=[], written=[], broken={}, indexed=[])
 
-    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, keep=None):
+    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, **_):
         made.compared.append((reference.stem, current.stem, config, assume_same_crs))
         if progress:
             progress("registration", 0.0)

@@ -209,6 +209,25 @@ def test_what_a_killed_run_left_is_tidied(undisturbed, done, scans):
     assert {path.name for path in (done / ".stages").iterdir()} == {f"{name}.stage" for name in STAGES}
 
 
+def test_tiles_keep_their_stores_beside_the_result_and_leave_nothing(scans, tmp_path, monkeypatch):
+    from scanstrain.neighbourhood import affine
+
+    seen, fit_piece = [], affine.fit_piece
+
+    def watched(*arguments):
+        seen.extend(path.parent.name for path in tmp_path.glob(".result.*.partial/*.store"))
+        return fit_piece(*arguments)
+
+    monkeypatch.setattr(affine, "fit_piece", watched)
+    asked = options().model_copy(
+        update={"neighbourhood": options().neighbourhood.model_copy(update={"tiles": True, "tile_points": 3000})}
+    )
+    compare_to_folder(*scans, asked, tmp_path / "result")
+    assert seen
+    assert all(name.startswith(".result.") for name in seen)
+    assert [path.name for path in tmp_path.iterdir()] == ["result"]
+
+
 @pytest.mark.parametrize("text", ["{", "[]", '{"format": 1}', None, "older"])
 def test_a_result_of_another_version_is_named_and_made_anew(done, scans, text):
     manifest = done / "manifest.json"

@@ -234,7 +234,7 @@ def test_expansion_takes_a_temperature_for_every_epoch_and_all_its_numbers(tmp_p
 def test_a_batch_from_its_file_to_the_table(tmp_path, monkeypatch):
     """Through `run_batch` with comparisons made by hand, one of which fails."""
 
-    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, keep=None):
+    def compare_files(reference, current, config, *, progress=None, assume_same_crs=False, labels=None, **_):
         if current.stem == "2":
             raise InputFileError("2.laz: required points; got none; export it again.")
         return Made(compared(YEARS[int(current.stem)]))
