@@ -111,7 +111,7 @@ def test_strain_is_unbiased_and_its_intervals_cover_where_it_is_given(sample_run
     for name in ("g11", "g12", "g21", "g22"):
         error, sd = sample_run.errors.of(name, sample_run.clear)
         # Errors that count what both epochs miss let fewer gauges of the rough adit pass the usual 1e-3.
-        assert len(error) > 0.3 * sample_run.clear.sum(), name
+        assert len(error) > 0.2 * sample_run.clear.sum(), name
         assert coverage(error, sd) >= 0.85, name
         seen = sample_run.clear & np.isfinite(sample_run.result.field.gradient[:, int(name[1]) - 1, int(name[2]) - 1])
         mean, its_error = mean_and_error(error, sample_run.errors.material[seen], PATCH)
