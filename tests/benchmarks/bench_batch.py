@@ -13,6 +13,7 @@ import importlib
 import json
 import os
 import random
+import re
 import runpy
 import shutil
 import signal
@@ -97,6 +98,10 @@ def cluster(workers):
             process.wait()
 
 
+SECONDS = re.compile(r'<tr><th scope=row>[\w -]+</th><td class="n" data-sort="[\d.e-]+">[\d.]+ s</td>|Together [^<]*')
+"""Rows of the times in a report, and their sum."""
+
+
 def bench_speed(folder, comparisons, points, *, report):
     job = write_batch(folder, comparisons, points, report=report)
     timed(job, "--only", "e1")  # compiles
@@ -125,13 +130,15 @@ def bench_speed(folder, comparisons, points, *, report):
 
 
 def results(folder):
-    """Bytes of all results; of the summary all but times and memory."""
+    """Bytes of all results; of the summary and the report all but times and memory."""
     found = {}
     for path in sorted(folder.glob("*/*")):
         if path.name == "summary.json":
             content = json.loads(path.read_text(encoding="utf-8"))
             del content["timing"]
             found[path.relative_to(folder)] = content
+        elif path.name == "report.html":
+            found[path.relative_to(folder)] = SECONDS.sub("", path.read_text(encoding="utf-8"))
         elif path.is_file() and path.name != "manifest.json":
             found[path.relative_to(folder)] = path.read_bytes()
     return found

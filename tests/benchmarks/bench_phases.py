@@ -12,16 +12,20 @@ import importlib
 import time
 
 NEIGHBOURHOOD = (
-    ("spacing and texture", "neighbourhood.affine", ("_resolution", "pair_of_textures")),
+    ("spacing", "neighbourhood.piece", ("median_spacing",)),
+    ("texture", "neighbourhood.plan", ("measure_texture",)),
     ("cells", "neighbourhood.level", ("make_cells", "block_density")),
-    ("smooth surface", "neighbourhood.level", ("smooth_surface", "support_cells", "typical_height")),
-    ("covariance", "neighbourhood.level", ("measure_covariance",)),
-    ("gauges", "neighbourhood.affine", ("place_gauges", "frames_at")),
+    ("smooth surface", "neighbourhood.level", ("smooth_surface", "support_cells", "heights")),
+    ("covariance", "neighbourhood.level", ("count_pairs", "measure_structure", "local_covariance")),
+    ("gauges", "neighbourhood.plan", ("candidates_in", "choose_gauges", "lay_out")),
+    ("frames", "neighbourhood.fitting", ("frames_at", "support_cells")),
     ("kriging solve", "neighbourhood.level", ("build_predictor",)),
     ("rows", "neighbourhood.rows", ("_against",)),
     ("present motion", "neighbourhood.level", ("nearest_gauges", "blend")),
     ("fit", "neighbourhood.fit", ("fit_gauges",)),
-    ("shared noise", "neighbourhood.affine", ("count_correlation",)),
+    ("shared noise, measured", "neighbourhood.plan", ("measure_shared",)),
+    ("shared noise, counted", "neighbourhood.fitting", ("count_shared",)),
+    ("bias of gauges", "neighbourhood.affine", ("gauge_bias",)),
 )
 """Phases of the neighbourhood stage: name, module, functions as that module names them."""
 

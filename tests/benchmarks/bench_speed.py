@@ -65,7 +65,7 @@ print(json.dumps({
     "cpu, no report": cpu_bare - cpu, "cpu": cpu_compared - cpu + time.process_time() - cpu_bare,
     "phases": {name: [phases.wall[name], phases.cpu[name]] for name in phases.wall},
     "fits": gauges, "fit seconds": seconds, "rows": rows / gauges,
-    "points": len(result.reference) + len(result.current),
+    "all_points": len(result.reference) + len(result.current),
     "clouds": sum(e.points.nbytes + (0 if e.intensity is None else e.intensity.nbytes)
                   for e in (result.reference, result.current)) / 2**20,
     "gauges": len(result.strain), "fine": int((result.strain.status == 0).sum()),
@@ -170,7 +170,7 @@ def show(ours, alone):
     phases = [(name, f"{wall:.2f}", f"{cpu:.2f}") for name, (wall, cpu) in ours["phases"].items()]
     MACHINE["table"](("phase", "seconds", "processor seconds"), phases)
     print()
-    above = (ours["compared"] - ours["clouds"]) * 2**20 / ours["points"]
+    above = (ours["compared"] - ours["clouds"]) * 2**20 / ours["all_points"]
     print(f"fit kernel: {ours['fits'] / ours['fit seconds']:.0f} gauges/s at {ours['rows']:.0f} cells each")
     print(f"peak of compare above the clouds: {above:.0f} bytes a point, interpreter and libraries included")
     each = ours["gauges"] / ours["neighbourhood"]
