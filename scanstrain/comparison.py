@@ -122,6 +122,7 @@ def compare_to_folder(
     from scanstrain.outputs.folder import recover
     from scanstrain.outputs.manifest import Standing, standing
     from scanstrain.stages.places import forget, gather
+    from scanstrain.tiles import takes_tiles
 
     if progress:
         progress("check", 0.0)
@@ -136,7 +137,7 @@ def compare_to_folder(
     if fresh:
         forget(folder)
     counts = [expected_points(scan) for scan in (reference, current)]
-    check_space(folder, counts[:1], tiled=_in_tiles(max(counts), config))
+    check_space(folder, counts[:1], tiled=max(counts) if takes_tiles(config.neighbourhood.tiles, max(counts)) else 0)
     try:
         store = _compute(reference, current, config, folder, request, labels, progress)
     except InputFileError:
@@ -198,14 +199,6 @@ def _compute(
         finally:
             result.close()
     return store
-
-
-def _in_tiles(points: int, config: CompareConfig) -> int:
-    """Points of the larger scan if it will be worked on in tiles, otherwise 0."""
-    from scanstrain.tiles import TILED_FROM
-
-    asked = config.neighbourhood.tiles
-    return points if asked is True or (asked == "auto" and points >= TILED_FROM) else 0
 
 
 def _stores_beside(folder: Path) -> TemporaryDirectory[str]:

@@ -104,7 +104,7 @@ def in_tiles(reference: Path, current: Path, config: CompareConfig) -> bool:
     """
     from scanstrain.io.las import SUFFIXES
     from scanstrain.io.las_mapped import count_points
-    from scanstrain.tiles import TILED_FROM
+    from scanstrain.tiles import takes_tiles
 
     asked = config.neighbourhood.tiles
     other = [path for path in (reference, current) if path.suffix.lower() not in SUFFIXES]
@@ -113,7 +113,7 @@ def in_tiles(reference: Path, current: Path, config: CompareConfig) -> bool:
         raise OptionError(explain("tiles", "LAS or LAZ files", got, "export the scans as LAZ, or leave tiles out"))
     if asked is False or other:
         return False
-    return asked is True or max(count_points(path) for path in (reference, current)) >= TILED_FROM
+    return takes_tiles(asked, max(count_points(path) for path in (reference, current)))
 
 
 def _compare_tiled(

@@ -28,6 +28,11 @@ LEAST_SHARE = 1 / 12
 """A tile whose own points are fewer than this share of the limit is not cut further: it would be all halo."""
 
 
+def takes_tiles(asked: bool | str, points: int) -> bool:
+    """Whether scans of which the larger has so many points are worked on in tiles; `asked` may be the word auto."""
+    return asked is True or (asked is not False and points >= TILED_FROM)
+
+
 def thinning_of(count: int) -> int:
     """One in how many of so many points is drawn."""
     return max(1, -(-count // THINNED))
